@@ -1,0 +1,46 @@
+"""Reconciles measured flows with conservation laws and says which instrument to distrust."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+from ._version import __version__
+from .errors import InputError, MissingExtra, Notice, PluginError, ReconcileError, SolveError
+from .hookspecs import Domain, Section, hookimpl
+
+if TYPE_CHECKING:
+    from .network import OUTSIDE, Network
+    from .system import System, stack
+
+# The numeric rooms are loaded when they are first asked for, so that `reconcile --help` starts at once.
+_LAZY = {
+    "Network": "network",
+    "OUTSIDE": "network",
+    "System": "system",
+    "stack": "system",
+}
+
+__all__ = [
+    "OUTSIDE",
+    "Domain",
+    "InputError",
+    "MissingExtra",
+    "Network",
+    "Notice",
+    "PluginError",
+    "ReconcileError",
+    "Section",
+    "SolveError",
+    "System",
+    "__version__",
+    "hookimpl",
+    "stack",
+]
+
+
+def __getattr__(name: str) -> Any:
+    if name in _LAZY:
+        from importlib import import_module
+
+        return getattr(import_module(f".{_LAZY[name]}", __name__), name)
+    raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
