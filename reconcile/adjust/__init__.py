@@ -1,0 +1,1 @@
+"""Adjustment of readings: arrays in, arrays out."""

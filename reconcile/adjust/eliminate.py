@@ -1,0 +1,181 @@
+"""Unmeasured variables out of the balances, by a rank-revealing orthogonal factorisation.
+
+With ``A_u`` (m x n_u) the columns of the unmeasured variables, ``keep`` spans the left null space of ``A_u``:
+``keep @ A_u = 0``, so ``keep @ A_m`` is what the balances say of measured variables alone (projection matrix:
+Crowe, Garcia Campos & Hrymak 1983). The same factorisation tells which unmeasured variables are observable.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+from scipy.linalg import lu, qr, solve_triangular
+
+__all__ = ["Elimination", "dependent_rows", "eliminate", "independent_form"]
+
+Array = npt.NDArray[np.float64]
+
+RANK_TOLERANCE = 1e-11
+"""Relative size of a pivot below which a direction counts as absent."""
+
+
+@dataclass(frozen=True)
+class Elimination:
+    """What the elimination of the unmeasured variables leaves.
+
+    Attributes
+    ----------
+    keep : ndarray, shape (m - rank, m)
+        Orthonormal rows with ``keep @ A_u = 0``.
+    recover : ndarray, shape (n_u, m)
+        ``u = recover @ (b - A_m x)``; undetermined directions are set to zero.
+    null : ndarray, shape (n_u, n_u - rank)
+        Basis of the null space of ``A_u``: directions that no balance determines.
+    observable : ndarray of bool, shape (n_u,)
+        Whether the balances and readings determine the variable.
+    rank : int
+    """
+
+    keep: Array
+    recover: Array
+    null: Array
+    observable: npt.NDArray[np.bool_]
+    rank: int
+
+
+def eliminate(unmeasured: Array) -> Elimination:
+    """Project the unmeasured variables out of the rows.
+
+    Parameters
+    ----------
+    unmeasured : ndarray, shape (m, n_u)
+        Their columns in the (linearised) balances, rows scaled to comparable size.
+
+    Returns
+    -------
+    Elimination
+    """
+    m, n = unmeasured.shape
+    scale = np.linalg.norm(unmeasured, axis=0)
+    scale[scale == 0] = 1.0
+    if n == 0 or not np.any(unmeasured):
+        return Elimination(np.eye(m), np.zeros((n, m)), np.eye(n), np.zeros(n, dtype=bool), 0)
+    q, r, order = qr(unmeasured / scale, pivoting=True)
+    rank = _rank(np.abs(np.diag(r)))
+    top, rest = order[:rank], order[rank:]
+    recover = np.zeros((n, m))
+    recover[top] = solve_triangular(r[:rank, :rank], q[:, :rank].T)
+    null = np.zeros((n, n - rank))
+    if rest.size:
+        tied = -solve_triangular(r[:rank, :rank], r[:rank, rank:])
+        tied[np.abs(tied) < 1e-10 * max(1.0, np.abs(tied).max(initial=0.0))] = 0.0
+        null[top] = tied
+        null[rest, np.arange(rest.size)] = 1.0
+    recover /= scale[:, None]
+    null /= scale[:, None]
+    keep = q[:, rank:].T
+    keep[np.abs(keep) < 1e-15] = 0.0
+    return Elimination(keep, recover, null, ~np.any(null != 0, axis=1), rank)
+
+
+def _rank(diagonal: Array) -> int:
+    if diagonal.size == 0 or diagonal[0] == 0:
+        return 0
+    return int(np.sum(diagonal > RANK_TOLERANCE * diagonal[0]))
+
+
+def independent_form(rows: Array, sigma: Array) -> tuple[Array, Array, npt.NDArray[np.int64]]:
+    """Turn rows into an equivalent set of independent rows with an identity block.
+
+    Column pivots are chosen for the rows weighted with sigma, so that measured variables that are known worst
+    are expressed by the others; row pivoting keeps nearly dependent rows exact.
+
+    Parameters
+    ----------
+    rows : ndarray, shape (m, n)
+        Rows over measured variables, possibly dependent.
+    sigma : ndarray, shape (n,)
+        Standard uncertainties.
+
+    Returns
+    -------
+    form : ndarray, shape (r, n)
+        Independent rows; the columns of the pivots hold an identity matrix.
+    transform : ndarray, shape (r, m)
+        ``form = transform @ rows`` up to rounding.
+    pivots : ndarray of int, shape (r,)
+        Columns of the identity block.
+    """
+    m, n = rows.shape
+    weighted = rows * sigma
+    size = np.linalg.norm(weighted, axis=1)
+    live = size > 0
+    if m == 0 or n == 0 or not live.any():
+        return np.zeros((0, n)), np.zeros((0, m)), np.zeros(0, dtype=np.int64)
+    weighted = weighted[live] / size[live, None]
+    upper, order = qr(weighted, mode="r", pivoting=True)
+    rank = _rank(np.abs(np.diag(upper)))
+    scaled = rows[live] / size[live, None]
+    p, lower, u = lu(scaled[:, order])
+    lead, rest = u[:rank, :rank], u[:rank, rank:]
+    # Row pivoting of the pivot columns may still find a smaller rank than the weighted columns promised.
+    step = solve_triangular(lower[:rank, :rank], p.T[:rank], lower=True, unit_diagonal=True)
+    form = np.zeros((rank, n))
+    form[:, order[:rank]] = np.eye(rank)
+    tail = solve_triangular(lead, rest) if rest.size else rest
+    tail[np.abs(tail) < 1e-14 * np.abs(tail).max(initial=0.0)] = 0.0
+    form[:, order[rank:]] = tail
+    transform = np.zeros((rank, m))
+    transform[:, live] = solve_triangular(lead, step) / size[live]
+    return form, transform, order[:rank].astype(np.int64)
+
+
+def dependent_rows(rows: Array) -> Array:
+    """Find rows that other rows imply, the later one of each set named.
+
+    Parameters
+    ----------
+    rows : ndarray, shape (m, n)
+
+    Returns
+    -------
+    ndarray, shape (d, m)
+        Each row holds the coefficients of one vanishing combination ``out @ rows = 0``, sparse where possible;
+        its last non-zero entry is 1 and belongs to the row that the earlier ones imply.
+    """
+    m = rows.shape[0]
+    if m == 0:
+        return np.zeros((0, 0))
+    size = np.linalg.norm(rows, axis=1)
+    size[size == 0] = 1.0
+    q, r, _ = qr(rows / size[:, None], pivoting=True)
+    rank = _rank(np.abs(np.diag(r))) if r.size else 0
+    null = q[:, rank:].T
+    if null.size == 0:
+        return np.zeros((0, m))
+    reduced = _echelon_from_the_right(null)
+    out = reduced / size
+    last = np.array([np.flatnonzero(row)[-1] for row in out])
+    out = out / out[np.arange(len(out)), last][:, None]
+    return out[np.argsort(last)]
+
+
+def _echelon_from_the_right(null: Array) -> Array:
+    """Reduced echelon form with pivots as far to the right as possible."""
+    work = null[:, ::-1].copy()
+    row = 0
+    for column in range(work.shape[1]):
+        if row == len(work):
+            break
+        best = row + int(np.argmax(np.abs(work[row:, column])))
+        if abs(work[best, column]) < 1e-9:
+            continue
+        work[[row, best]] = work[[best, row]]
+        work[row] /= work[row, column]
+        others = np.arange(len(work)) != row
+        work[others] -= np.outer(work[others, column], work[row])
+        row += 1
+    work[np.abs(work) < 1e-9] = 0.0
+    return work[:, ::-1]
