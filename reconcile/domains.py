@@ -123,7 +123,7 @@ class Plugins:
                     _ = system.equations
 
 
-class named:  # noqa: N801 - reads as a word where it is used
+class named:
     """Turn whatever a plugin raises into an error that names the plugin."""
 
     def __init__(self, plugin: str, doing: str, *, user_errors: bool = False) -> None:

@@ -230,7 +230,12 @@ class Problems:
             raise InputError(
                 sorted(
                     self.found,
-                    key=lambda p: (p.where.file or "", p.where.line or 0, p.where.row or 0, p.where.column or 0),
+                    key=lambda p: (
+                        p.where.file or "",
+                        p.where.line or 0,
+                        p.where.row or 0,
+                        p.where.column or 0,
+                    ),
                 )
             )
 

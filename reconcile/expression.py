@@ -182,7 +182,11 @@ class Expression:
         return self._scaled(1.0 / np.atleast_1d(np.asarray(other, dtype=float)))
 
     def __rmatmul__(self, matrix: Any) -> Expression:
-        m = sp.csr_array(matrix) if sp.issparse(matrix) else sp.csr_array(np.atleast_2d(np.asarray(matrix, float)))
+        m = (
+            sp.csr_array(matrix)
+            if sp.issparse(matrix)
+            else sp.csr_array(np.atleast_2d(np.asarray(matrix, float)))
+        )
         if m.shape[1] != self.size:
             raise ValueError(f"matrix has {m.shape[1]} columns, but the expression has {self.size} entries")
         return Expression(
@@ -268,7 +272,9 @@ def _multiply(left: Expression, right: Expression) -> Expression:
     from_a = a.indptr[row] + within // np.maximum(count_b[row], 1)
     from_b = b.indptr[row] + within % np.maximum(count_b[row], 1)
     i, j = a.indices[from_a], b.indices[from_b]
-    pairs, where = np.unique(np.column_stack([np.minimum(i, j), np.maximum(i, j)]), axis=0, return_inverse=True)
+    pairs, where = np.unique(
+        np.column_stack([np.minimum(i, j), np.maximum(i, j)]), axis=0, return_inverse=True
+    )
     coefficient = a.data[from_a] * b.data[from_b]
     products = sp.csr_array((coefficient, (row, where.ravel())), shape=(left.size, len(pairs)))
     linear = sp.diags_array(right.constant) @ a + sp.diags_array(left.constant) @ b

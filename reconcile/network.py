@@ -49,7 +49,9 @@ class Network:
         for name in ("source", "target"):
             array = np.array(getattr(self, name), dtype=np.int64)
             if array.shape != (len(self.streams),):
-                raise ValueError(f"{name} must hold one node index for each of the {len(self.streams)} streams")
+                raise ValueError(
+                    f"{name} must hold one node index for each of the {len(self.streams)} streams"
+                )
             if array.size and (array.min() < -1 or array.max() >= len(self.nodes)):
                 raise ValueError(f"{name} holds an index that is no node")
             array.setflags(write=False)

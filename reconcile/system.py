@@ -303,7 +303,9 @@ class System:
             )
         taken.update(new)
         self.blocks.append(Block(quantity, names, unit, self._count, self._writer, fault))
-        self._bounds.append((np.broadcast_to(lower, k).astype(float), np.broadcast_to(upper, k).astype(float)))
+        self._bounds.append(
+            (np.broadcast_to(lower, k).astype(float), np.broadcast_to(upper, k).astype(float))
+        )
         self._starts.append(np.broadcast_to(start, k).astype(float))
         first, self._count = self._count, self._count + k
         return self._select(np.arange(first, first + k), names)
@@ -465,7 +467,9 @@ class System:
             empty = sp.csr_array((0, n))
             return Equations(empty, np.zeros(0), sp.csr_array((0, 0)), np.zeros((0, 2), dtype=np.int64))
         total = stack(self._balances) if len(self._balances) > 1 else self._balances[0]
-        linear = sp.csr_array((total.linear.data, total.linear.indices, total.linear.indptr), shape=(total.size, n))
+        linear = sp.csr_array(
+            (total.linear.data, total.linear.indices, total.linear.indptr), shape=(total.size, n)
+        )
         linear.sum_duplicates()
         linear.eliminate_zeros()
         pairs, where = np.unique(total.pairs, axis=0, return_inverse=True)
