@@ -1,0 +1,210 @@
+"""Many snapshots at once: grouped by which readings are absent, each group one adjuster and one matrix product."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from functools import cached_property
+
+import numpy as np
+import numpy.typing as npt
+
+from ..errors import SolveError
+from ..system import Equations
+from .dense import Adjuster
+from .solve import Problem, Solution, solve
+
+__all__ = ["Group", "Table", "adjust_table"]
+
+Array = npt.NDArray[np.float64]
+Ints = npt.NDArray[np.int64]
+Bools = npt.NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class Group:
+    """Snapshots that share one linearisation: the same readings absent, the same sigmas.
+
+    Attributes
+    ----------
+    rows : ndarray of int
+        Which snapshots.
+    x : ndarray, shape (len(rows), n)
+        All columns; undetermined ones at an arbitrary value that satisfies the balances.
+    parity : ndarray, shape (len(rows), r)
+    adjuster : Adjuster
+    present : ndarray of int
+        Readings in the order of the adjuster's measured columns; absent ones may be among them (see `absent`).
+    absent : ndarray of int
+        Readings that were not there.
+    columns : ndarray of int
+        Column of every reading.
+    free : ndarray of int
+        Columns of the adjuster's unmeasured variables.
+    equations : Equations
+    jacobian : ndarray, shape (m, n)
+    sigma : ndarray, shape (k,)
+        Sigma of every reading as used.
+    steps, rounds : int
+        Linearisations and rounds of sigma that were needed.
+    """
+
+    rows: Ints
+    x: Array
+    parity: Array
+    adjuster: Adjuster
+    present: Ints
+    absent: Ints
+    columns: Ints
+    free: Ints
+    equations: Equations
+    jacobian: Array
+    sigma: Array
+    steps: int
+    rounds: int
+
+    @property
+    def checks(self) -> int:
+        """Independent checks in these snapshots."""
+        return self.adjuster.checks
+
+    @cached_property
+    def cover(self) -> Array:
+        """Factor F of the covariance of all columns, shape (n, q): cov = F F'; nan rows cannot be calculated."""
+        a = self.adjuster
+        out = np.zeros((self.x.shape[1], a.cover.shape[1]))
+        out[self.columns[self.present]] = a.cover
+        out[self.free] = a.cover_unmeasured
+        out[~self.determined] = np.nan
+        return out
+
+    @cached_property
+    def determined(self) -> Bools:
+        """Whether each column is determined by readings and balances, shape (n,)."""
+        out = np.ones(self.x.shape[1], dtype=bool)
+        out[self.columns[self.present]] = ~self.adjuster.undetermined
+        out[self.free] = self.adjuster.observable
+        return out
+
+    @cached_property
+    def checked(self) -> Bools:
+        """Whether each reading is checked by others, shape (k,); False for absent readings."""
+        out = np.zeros(self.columns.size, dtype=bool)
+        out[self.present] = self.adjuster.redundant
+        out[self.absent] = False
+        return out
+
+    @cached_property
+    def signatures(self) -> Array:
+        """Parity shift per unit bias of each reading, shape (r, k); zero for absent readings."""
+        out = np.zeros((self.checks, self.columns.size))
+        out[:, self.present] = self.adjuster.signatures
+        out[:, self.absent] = 0.0
+        return out
+
+    def signatures_of(self, columns: Ints) -> Array:
+        """Parity shift per unit of fault variables, shape (r, number of columns)."""
+        return self.adjuster.signature_of_columns(self.jacobian[:, columns])
+
+
+@dataclass(frozen=True)
+class Table:
+    """Adjusted snapshots.
+
+    Attributes
+    ----------
+    groups : tuple of Group
+    failed : dict of int to SolveError
+        Snapshots for which no consistent answer was found, and why.
+    size : int
+        Number of snapshots.
+    """
+
+    groups: tuple[Group, ...]
+    failed: dict[int, SolveError]
+    size: int
+
+    @cached_property
+    def group_of(self) -> Ints:
+        """Group of each snapshot, -1 where it failed."""
+        out = np.full(self.size, -1, dtype=np.int64)
+        for g, group in enumerate(self.groups):
+            out[group.rows] = g
+        return out
+
+
+def adjust_table(
+    problem: Problem,
+    readings: Array,
+    *,
+    names: Callable[[int], str],
+    row_names: Callable[[int], str],
+) -> Table:
+    """Adjust every row of a table of readings.
+
+    Parameters
+    ----------
+    problem : Problem
+        What all snapshots share; its own readings are ignored.
+    readings : ndarray, shape (N, k)
+        nan where a reading is absent.
+    names, row_names : callable
+        For messages.
+
+    Returns
+    -------
+    Table
+    """
+    present = np.isfinite(readings)
+    everything = problem.equations(np.nan_to_num(readings[0])) if len(readings) else None
+    if everything is not None and everything.is_linear and not problem.settle:
+        return _linear(problem, readings, present, names, row_names)
+    groups, failed = [], {}
+    for i in range(len(readings)):
+        try:
+            solution = solve(replace(problem, readings=readings[i]), names=names, row_names=row_names)
+        except SolveError as error:
+            failed[i] = error
+            continue
+        groups.append(_single(i, solution, problem.columns, np.flatnonzero(~present[i])))
+    return Table(tuple(groups), failed, len(readings))
+
+
+def _single(row: int, s: Solution, columns: Ints, absent: Ints) -> Group:
+    return Group(
+        np.array([row]), s.x[None], s.parity[None], s.adjuster, s.present, absent, columns, s.free,
+        s.equations, s.jacobian, s.sigma, s.steps, s.rounds,
+    )  # fmt: skip
+
+
+def _linear(
+    problem: Problem,
+    readings: Array,
+    present: Bools,
+    names: Callable[[int], str],
+    row_names: Callable[[int], str],
+) -> Table:
+    """One factorisation for all; absent readings are projected out pattern by pattern."""
+    ever = present.any(axis=0)
+    template = np.where(ever, 0.0, np.nan)
+    whole = solve(replace(problem, readings=template), names=names, row_names=row_names)
+    known = whole.equations.rhs - whole.jacobian[:, problem.fixed] @ problem.start[problem.fixed]
+    used = present[:, ever]
+    patterns, which = np.unique(used, axis=0, return_inverse=True)
+    which = which.ravel()
+    groups = []
+    for p, pattern in enumerate(patterns):
+        rows = np.flatnonzero(which == p)
+        adjuster = whole.adjuster if pattern.all() else whole.adjuster.without(~pattern)
+        xm, parity = adjuster.adjust(readings[rows][:, ever], known)
+        x = np.tile(np.nan_to_num(problem.start), (rows.size, 1))
+        x[:, problem.columns[ever]] = xm
+        x[:, whole.free] = adjuster.unmeasured(xm, known)
+        absent = np.flatnonzero(~(ever & present[rows[0]]))
+        groups.append(
+            Group(
+                rows, x, parity, adjuster, whole.present, absent, problem.columns, whole.free,
+                whole.equations, whole.jacobian, whole.sigma, 1, 1,
+            )  # fmt: skip
+        )
+    return Table(tuple(groups), {}, len(readings))
