@@ -1,0 +1,3 @@
+"""Domain `elements`: atoms and charge are conserved, whatever reacts."""
+
+from __future__ import annotations
