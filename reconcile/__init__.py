@@ -9,7 +9,10 @@ from .errors import InputError, MissingExtra, Notice, PluginError, ReconcileErro
 from .hookspecs import Domain, Section, hookimpl
 
 if TYPE_CHECKING:
+    from .export import load_corrected
     from .network import OUTSIDE, Network
+    from .results import Result
+    from .run import Case, load_case
     from .system import System, stack
 
 # The numeric rooms are loaded when they are first asked for, so that `reconcile --help` starts at once.
@@ -18,10 +21,15 @@ _LAZY = {
     "OUTSIDE": "network",
     "System": "system",
     "stack": "system",
+    "Case": "run",
+    "Result": "results",
+    "load_case": "run",
+    "load_corrected": "export",
 }
 
 __all__ = [
     "OUTSIDE",
+    "Case",
     "Domain",
     "InputError",
     "MissingExtra",
@@ -29,11 +37,14 @@ __all__ = [
     "Notice",
     "PluginError",
     "ReconcileError",
+    "Result",
     "Section",
     "SolveError",
     "System",
     "__version__",
     "hookimpl",
+    "load_case",
+    "load_corrected",
     "stack",
 ]
 

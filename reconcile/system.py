@@ -155,6 +155,20 @@ class Equations:
         parts.extend(_row_max(f, c.value(x)) for f, c in self.calls)
         return np.max(parts, axis=0)
 
+    def split_terms(self, x: Array) -> tuple[Array, Array]:
+        """Sums of the positive and of the negative terms of each balance at x, each of shape (m,)."""
+        positive, negative = np.maximum(-self.rhs, 0.0), np.minimum(-self.rhs, 0.0)
+        parts = [(self.linear, x)]
+        if self.products.nnz:
+            parts.append((self.products, x[self.pairs[:, 0]] * x[self.pairs[:, 1]]))
+        parts.extend((f, c.value(x)) for f, c in self.calls)
+        for matrix, values in parts:
+            terms = matrix.data * values[matrix.indices]
+            rows = np.repeat(np.arange(matrix.shape[0]), np.diff(matrix.indptr))
+            np.add.at(positive, rows, np.maximum(terms, 0.0))
+            np.add.at(negative, rows, np.minimum(terms, 0.0))
+        return positive, negative
+
 
 def _row_max(matrix: sp.csr_array, x: Array) -> Array:
     terms = np.abs(matrix.data * x[matrix.indices])

@@ -45,8 +45,10 @@ class Problem:
         Columns that are exactly known.
     start : ndarray, shape (n,)
         Exact values of the fixed columns; typical values or nan elsewhere.
+    value_dependent : bool
+        Whether any sigma depends on the value of its reading.
     settle : bool
-        Whether sigmas depend on the values and are to follow the adjusted ones.
+        Whether such sigmas follow the adjusted value until they settle; else they are taken at the reading.
     lower, upper : ndarray, shape (n,)
         Bounds; used to choose a start.
     """
@@ -57,6 +59,7 @@ class Problem:
     readings: Array
     fixed: Ints
     start: Array
+    value_dependent: bool
     settle: bool
     lower: Array
     upper: Array
@@ -132,7 +135,7 @@ def solve(problem: Problem, *, names: Callable[[int], str], row_names: Callable[
         equations = problem.equations(values)
         solution = _linearise(problem, equations, sigma, present, free, x, round_, names, row_names)
         x = solution.x
-        if not problem.settle:
+        if not (problem.settle and problem.value_dependent):
             return solution
         new = x[problem.columns]
         change = np.abs(problem.sigma(new)[present] - sigma[present]) / sigma[present]

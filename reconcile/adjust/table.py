@@ -157,7 +157,7 @@ def adjust_table(
     """
     present = np.isfinite(readings)
     everything = problem.equations(np.nan_to_num(readings[0])) if len(readings) else None
-    if everything is not None and everything.is_linear and not problem.settle:
+    if everything is not None and everything.is_linear and not problem.value_dependent:
         return _linear(problem, readings, present, names, row_names)
     groups, failed = [], {}
     for i in range(len(readings)):

@@ -1,0 +1,451 @@
+"""The corrected data set: values with uncertainties, evidence, provenance; and the loader that reads it back.
+
+The files have fixed names, so that other programs can rely on them. They appear whole or not at all, carry no
+time of writing, and are the same bytes on every run with the same input.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+import shutil
+import tempfile
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from .errors import InputError, Problem, SolveError
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from .results import Result
+
+__all__ = ["Corrected", "load_corrected", "summary_of", "write"]
+
+Array = npt.NDArray[np.float64]
+
+MISSING = ""
+_KINDS = {"b": "boolean", "i": "integer", "u": "integer", "f": "number"}
+
+
+# ------------------------------------------------------------------ tables
+
+
+def tables(result: Result) -> dict[str, pd.DataFrame]:
+    """Every table of the data set by its file stem, in the order of the description."""
+    return {
+        "adjusted": _values(result, result.adjusted),
+        "sigmas": _values(result, result.sigmas),
+        "variables": _variables(result),
+        "evidence": _evidence(result),
+        "suspects": _suspects(result),
+        "balances": _balances(result),
+        "figures": _figures(result),
+    }
+
+
+def _values(result: Result, values: Array) -> pd.DataFrame:
+    import pandas as pd
+
+    frame = pd.DataFrame(values, columns=list(result.variables))
+    frame.insert(0, "snapshot", list(result.labels))
+    return frame
+
+
+def _adjusted_snapshots(result: Result) -> list[int]:
+    return [i for i in range(result.size) if i not in result.table.failed]
+
+
+def _variables(result: Result) -> pd.DataFrame:
+    """One row per reading or unread variable; of many snapshots, the first that could be adjusted."""
+    import pandas as pd
+
+    from .snapshot import FRAME_COLUMNS
+
+    chosen = _adjusted_snapshots(result)[:1]
+    rows = [r for i in chosen for r in result.snapshot(i).frame_rows()]
+    return pd.DataFrame(rows, columns=list(FRAME_COLUMNS))
+
+
+def _evidence(result: Result) -> pd.DataFrame:
+    import pandas as pd
+
+    rows = []
+    for i in range(result.size):
+        if i in result.table.failed:
+            rows.append((result.labels[i], np.nan, 0, np.nan, np.nan, "not solved", "", np.nan, str(result.table.failed[i])))
+            continue
+        named, probability = most_likely(result, i)
+        rows.append(
+            (
+                result.labels[i], result.objective[i], int(result.checks[i]), result.limit[i], result.p_value[i],
+                result.words[i], named, probability, "" if result.checks[i] else "no check possible",
+            )  # fmt: skip
+        )
+    columns = ["snapshot", "objective", "checks", "limit", "p_value", "word", "explanation", "probability", "reason"]
+    return pd.DataFrame(rows, columns=columns)
+
+
+def most_likely(result: Result, index: int) -> tuple[str, float]:
+    """Most likely explanation of one snapshot in short form, and its probability; empty where nothing is wrong."""
+    if not result.suspicious[index]:
+        return "", float("nan")
+    from .report.words import short_name
+
+    return short_name(result.snapshot(index))
+
+
+def _suspects(result: Result) -> pd.DataFrame:
+    import pandas as pd
+
+    from .report.words import suspects_of
+
+    columns = ["fault", "kind", "item", "unit", "size", "sigma", "probability", "tied_with", "first", "last", "snapshots"]
+    found: dict[str, list[Any]] = {}
+    for i in _adjusted_snapshots(result):
+        if not result.suspicious[i]:
+            continue
+        for s in suspects_of(result.snapshot(i)):
+            if s.name in found:
+                entry = found[s.name]
+                entry[9] = result.labels[i]
+                entry[10] += 1
+            else:
+                tied = " | ".join(s.tied_with)
+                found[s.name] = [
+                    s.name, s.kind, s.item, s.unit, s.size, s.sigma, s.probability, tied,
+                    result.labels[i], result.labels[i], 1,
+                ]  # fmt: skip
+    return pd.DataFrame(list(found.values()), columns=columns)
+
+
+def _balances(result: Result) -> pd.DataFrame:
+    import pandas as pd
+
+    rows = [
+        (result.labels[i], b.name, b.kind, b.unit, b.domain, b.before, b.spread, b.ratio, b.after, b.scale)
+        for i in _adjusted_snapshots(result)
+        for b in result.snapshot(i).balances
+    ]
+    columns = ["snapshot", "balance", "kind", "unit", "domain", "before", "spread", "ratio", "after", "largest_term"]
+    return pd.DataFrame(rows, columns=columns)
+
+
+def _figures(result: Result) -> pd.DataFrame:
+    import pandas as pd
+
+    rows = [
+        (
+            result.labels[i], f.name, f.text, f.value, f.sigma, f.raw, f.raw_sigma, f.diagonal_sigma,
+            "; ".join(f"{k} {v:.4f}" for k, v in f.shares.items()), f.reason,
+        )  # fmt: skip
+        for i in _adjusted_snapshots(result)
+        for f in result.figure_values(i)
+    ]
+    columns = [
+        "snapshot", "figure", "formula", "value", "sigma", "raw", "raw_sigma", "sigma_without_covariance", "shares", "reason",
+    ]  # fmt: skip
+    return pd.DataFrame(rows, columns=columns)
+
+
+# ------------------------------------------------------------------ summary
+
+
+def summary_of(result: Result) -> dict[str, Any]:
+    """Machine-readable summary of a result; safe for JSON.
+
+    Parameters
+    ----------
+    result : Result
+
+    Returns
+    -------
+    dict
+        verdict, snapshots, suspects, not_checked, versions and hashes.
+    """
+    from .report.words import suspects_of, verdict_line
+
+    per_snapshot = []
+    for i in range(result.size):
+        if i in result.table.failed:
+            per_snapshot.append({"snapshot": result.labels[i], "status": "not solved", "reason": str(result.table.failed[i])})
+            continue
+        named, probability = most_likely(result, i)
+        per_snapshot.append(
+            {
+                "snapshot": result.labels[i],
+                "status": "adjusted" if result.checks[i] else "no check possible",
+                "word": result.words[i],
+                "objective": _number(result.objective[i]),
+                "checks": int(result.checks[i]),
+                "limit": _number(result.limit[i]),
+                "p_value": _number(result.p_value[i]),
+                "explanation": named,
+                "probability": _number(probability),
+                "suspects": [s.as_dict() for s in suspects_of(result.snapshot(i))] if result.suspicious[i] else [],
+            }
+        )
+    first = _adjusted_snapshots(result)[:1]
+    lines = result.snapshot(first[0]) if first else None
+    return {
+        "title": result.title,
+        "verdict": verdict_line(result),
+        "snapshots": per_snapshot,
+        "not_checked": [r.tag for r in lines.readings if r.kind == "meter" and r.word == "not checked"] if lines else [],
+        "cannot_be_calculated": [v.name for v in lines.variables if v.klass == "cannot be calculated"] if lines else [],
+        "left_out": dict(result.excluded),
+        "cautions": list(result.cautions),
+        "notices": [{"code": n.code, "message": n.message} for n in result.notices],
+        "settings": _settings(result),
+        "provenance": dict(result.provenance),
+    }
+
+
+def _settings(result: Result) -> dict[str, Any]:
+    s = result.settings
+    return {k: getattr(s, k) for k in ("level", "power", "max_faults", "percent_at") if hasattr(s, k)}
+
+
+def _number(value: float) -> float | None:
+    return float(value) if np.isfinite(value) else None
+
+
+# ------------------------------------------------------------------ files
+
+
+def write(result: Result, folder: str | Path, *, formats: tuple[str, ...] = ("csv",)) -> list[Path]:
+    """Write the corrected data set.
+
+    Parameters
+    ----------
+    result : Result
+    folder : path
+        Made if it is not there; files of the same names are replaced, others are left alone.
+    formats : tuple of str
+        ``csv`` and, where asked, ``parquet``.
+
+    Returns
+    -------
+    list of Path
+        The files, in the order of their description.
+
+    Raises
+    ------
+    InputError
+        If the folder cannot be written; nothing half-written is left.
+    """
+    target = Path(folder)
+    try:
+        target.mkdir(parents=True, exist_ok=True)
+        part = Path(tempfile.mkdtemp(prefix=".unfinished-", dir=target))
+    except OSError as error:
+        raise InputError(_cannot_write(target, error)) from None
+    try:
+        names = _write_all(result, part, formats)
+        for name in names:
+            os.replace(part / name, target / name)
+        return [target / name for name in names]
+    except OSError as error:
+        raise InputError(_cannot_write(target, error)) from None
+    finally:
+        shutil.rmtree(part, ignore_errors=True)
+
+
+def _cannot_write(target: Path, error: OSError) -> Problem:
+    return Problem(
+        "cannot-write",
+        f"the folder {str(target)!r} cannot be written: {error.strerror or error}",
+        "nothing was written; choose another folder with --out, or make room",
+    )
+
+
+def _write_all(result: Result, part: Path, formats: tuple[str, ...]) -> list[str]:
+    made: list[str] = []
+    resources = []
+    for stem, frame in tables(result).items():
+        for kind in formats:
+            name = f"{stem}.{kind}"
+            _WRITERS[kind](frame, part / name)
+            made.append(name)
+            resources.append(_resource(stem, name, frame, part / name, result))
+    _write_covariance(result, part / "covariance.npz")
+    (part / "summary.json").write_text(json.dumps(summary_of(result), indent=2, ensure_ascii=False) + "\n", "utf-8")
+    for name in ("covariance.npz", "summary.json"):
+        made.append(name)
+        resources.append({"name": Path(name).stem, "path": name, **_fingerprint(part / name)})
+    package = {
+        "$schema": "https://datapackage.org/profiles/2.0/datapackage.json",
+        "name": "reconciled-readings",
+        "title": result.title,
+        "resources": resources,
+        "provenance": dict(result.provenance),
+    }
+    (part / "datapackage.json").write_text(json.dumps(package, indent=2, ensure_ascii=False) + "\n", "utf-8")
+    made.append("datapackage.json")
+    return made
+
+
+def _write_csv(frame: pd.DataFrame, path: Path) -> None:
+    frame.to_csv(path, index=False, na_rep=MISSING, lineterminator="\n")
+
+
+def _write_parquet(frame: pd.DataFrame, path: Path) -> None:
+    from .errors import MissingExtra
+
+    try:
+        frame.to_parquet(path, index=False)
+    except ImportError:
+        raise MissingExtra("pyarrow", "parquet", "writing Parquet") from None
+
+
+_WRITERS: Mapping[str, Callable[[Any, Path], None]] = {"csv": _write_csv, "parquet": _write_parquet}
+
+
+def _fingerprint(path: Path) -> dict[str, Any]:
+    data = path.read_bytes()
+    return {"bytes": len(data), "hash": f"sha256:{hashlib.sha256(data).hexdigest()}"}
+
+
+def _resource(stem: str, name: str, frame: pd.DataFrame, path: Path, result: Result) -> dict[str, Any]:
+    units = dict(zip(result.variables, result.units, strict=True)) if stem in ("adjusted", "sigmas") else {}
+    fields = []
+    for column in frame.columns:
+        entry: dict[str, Any] = {"name": column, "type": _KINDS.get(frame[column].dtype.kind, "string")}
+        if column in units:
+            entry["unit"] = units[column]
+        fields.append(entry)
+    csv = name.endswith(".csv")
+    return {
+        "name": stem if csv else f"{stem}-{Path(name).suffix[1:]}",
+        "path": name,
+        "format": Path(name).suffix[1:],
+        **({"mediatype": "text/csv", "encoding": "utf-8"} if csv else {}),
+        **_fingerprint(path),
+        "schema": {"fields": fields, "missingValues": [MISSING]},
+    }
+
+
+def _write_covariance(result: Result, path: Path) -> None:
+    """Covariance of the adjusted variables, one for each group of snapshots that share it."""
+    shown = result.model.shown
+    arrays: dict[str, Any] = {
+        "variables": np.array(result.variables, dtype=np.str_),
+        "group_of_snapshot": result.table.group_of,
+    }
+    for g, group in enumerate(result.table.groups):
+        arrays[f"factor_{g}"] = group.cover[shown]
+    with path.open("wb") as file:
+        np.savez(file, **arrays)
+
+
+# ------------------------------------------------------------------ reading it back
+
+
+@dataclass(frozen=True)
+class Corrected:
+    """A corrected data set that was read back.
+
+    Attributes
+    ----------
+    adjusted, sigmas, variables, evidence, suspects, balances, figures : DataFrame
+    summary : dict
+    """
+
+    adjusted: pd.DataFrame
+    sigmas: pd.DataFrame
+    variables: pd.DataFrame
+    evidence: pd.DataFrame
+    suspects: pd.DataFrame
+    balances: pd.DataFrame
+    figures: pd.DataFrame
+    summary: dict[str, Any]
+    _names: tuple[str, ...]
+    _factors: tuple[Array, ...]
+    _group_of: npt.NDArray[np.int64]
+
+    def covariance(self, snapshot: int = 0) -> pd.DataFrame:
+        """Full covariance of the variables of one snapshot, with names."""
+        import pandas as pd
+
+        group = int(self._group_of[snapshot])
+        if group < 0:
+            raise SolveError(f"snapshot {snapshot} was not adjusted", code="not-adjusted")
+        factor = self._factors[group]
+        return pd.DataFrame(factor @ factor.T, index=list(self._names), columns=list(self._names))
+
+    def propagate(self, formula: str, snapshot: int = 0) -> tuple[float, float]:
+        """Value and standard uncertainty of arithmetic over the variables, with the full covariance.
+
+        Parameters
+        ----------
+        formula : str
+            E.g. ``permeate.flow / feed.flow``.
+        snapshot : int
+            Counted from 0.
+
+        Returns
+        -------
+        value, sigma : float
+        """
+        from .figures import parse_figure
+
+        figure = parse_figure(formula)
+        row = self.adjusted.iloc[snapshot]
+        value, slopes = figure.value({n: float(row[n]) for n in figure.names})
+        cov = self.covariance(snapshot).loc[list(slopes), list(slopes)].to_numpy()
+        g = np.array(list(slopes.values()))
+        return value, float(np.sqrt(g @ cov @ g))
+
+
+def load_corrected(folder: str | Path) -> Corrected:
+    """Read a corrected data set back, covariance included.
+
+    Parameters
+    ----------
+    folder : path
+        What ``run --out`` wrote.
+
+    Returns
+    -------
+    Corrected
+
+    Raises
+    ------
+    InputError
+        If a file is missing or does not fit the description beside it.
+    """
+    import pandas as pd
+
+    base = Path(folder)
+    description = base / "datapackage.json"
+    if not description.is_file():
+        raise InputError(
+            Problem("no-data-set", f"{str(base)!r} holds no datapackage.json", "name the folder that run --out wrote")
+        )
+    package = json.loads(description.read_text("utf-8"))
+    for resource in package["resources"]:
+        path = base / resource["path"]
+        if not path.is_file() or _fingerprint(path)["hash"] != resource["hash"]:
+            raise InputError(
+                Problem(
+                    "data-set-changed",
+                    f"{str(path)!r} is missing or was changed after it was written",
+                    "run the case again, or restore the file",
+                )
+            )
+    read = {
+        stem: pd.read_csv(base / f"{stem}.csv", float_precision="round_trip", dtype={"snapshot": str})
+        for stem in ("adjusted", "sigmas", "variables", "evidence", "suspects", "balances", "figures")
+    }
+    with np.load(base / "covariance.npz") as arrays:
+        names = tuple(str(n) for n in arrays["variables"])
+        group_of = arrays["group_of_snapshot"]
+        factors = tuple(arrays[f"factor_{g}"] for g in range(int(group_of.max(initial=-1)) + 1))
+    summary = json.loads((base / "summary.json").read_text("utf-8"))
+    return Corrected(**read, summary=summary, _names=names, _factors=factors, _group_of=group_of)

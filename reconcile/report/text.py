@@ -1,0 +1,158 @@
+"""The verdict and its tables for a terminal."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+from .layout import table, to_ascii, wrap
+from .numbers import plain, signed
+from .words import MARKS, explanation_sentences, percent, verdict_line, verdict_sentences
+
+if TYPE_CHECKING:
+    from ..results import Result
+    from ..snapshot import Snapshot
+
+__all__ = ["render"]
+
+MANY = 12
+
+
+def render(result: Result, *, snapshot: int | None = None, ascii_only: bool = False) -> str:
+    """Render a result as text of at most 100 columns.
+
+    Parameters
+    ----------
+    result : Result
+    snapshot : int, optional
+        Show this one in detail, counted from 0.
+    ascii_only : bool
+        For terminals that cannot show more.
+
+    Returns
+    -------
+    str
+    """
+    parts = [result.title, ""]
+    if result.size > 1 and snapshot is None:
+        parts += [wrap(verdict_line(result), ""), "", _many(result)]
+        shown = next((i for i in range(result.size) if i not in result.table.failed and result.suspicious[i]), None)
+        if shown is not None:
+            parts += ["", f"The first that does not agree, {result.labels[shown]}:", "", *_detail(result, shown)]
+    else:
+        index = snapshot or 0
+        if index in result.table.failed:
+            parts.append(wrap(f"Not solved: {result.table.failed[index]}", ""))
+        else:
+            parts += _detail(result, index)
+    parts += _closing(result)
+    text = "\n".join(parts).rstrip() + "\n"
+    return to_ascii(text) if ascii_only else text
+
+
+def _many(result: Result) -> str:
+    rows = []
+    for i in range(result.size):
+        if i in result.table.failed:
+            rows.append((result.labels[i], "", "", "", "", "not solved"))
+            continue
+        word = result.words[i]
+        rows.append(
+            (
+                result.labels[i], f"{result.objective[i]:.2f}", str(result.checks[i]), plain(result.limit[i], 0.01),
+                f"{result.p_value[i]:.3f}" if math.isfinite(result.p_value[i]) else "-", f"{MARKS[word]} {word}",
+            )  # fmt: skip
+        )
+    if len(rows) > 2 * MANY:
+        skipped = len(rows) - 2 * MANY
+        rows = [*rows[:MANY], (f"... {skipped} more", "", "", "", "", ""), *rows[-MANY:]]
+    return table(("SNAPSHOT", "χ²", "checks", "limit", "p", ""), rows, left=(0, 5))
+
+
+def _detail(result: Result, index: int) -> list[str]:
+    s = result.snapshot(index)
+    word = result.words[index]
+    out = [wrap(f"{MARKS[word]} " + " ".join(verdict_sentences(s)), ""), "", _balances(s), "", _readings(s)]
+    out.append(
+        wrap(
+            f"z is compared with {s.meter_tests.limit:.2f}, exact for the {s.meter_tests.distinct} different tests of "
+            "this network. A large adjustment alone is no evidence against a meter: what moves most has the largest sigma."
+        )
+        if s.meter_tests.worst >= 0
+        else ""
+    )
+    unread = [v for v in s.variables if not v.meters]
+    if unread:
+        out += ["", _unread(unread)]
+    told = explanation_sentences(s)
+    if told:
+        out += ["", "EXPLANATIONS", *(wrap(f"{i}. {t}" if i <= _standing(s) else t) for i, t in enumerate(told, 1))]
+    figures = result.figure_values(index)
+    if figures:
+        out += ["", _figures(figures)]
+    return out
+
+
+def _standing(s: Snapshot) -> int:
+    return min(6, len(s.accounts.standing)) if s.accounts else 0
+
+
+def _balances(s: Snapshot) -> str:
+    rows = []
+    for b in s.balances:
+        if math.isfinite(b.before):
+            ratio = signed(b.ratio, 0.1) if math.isfinite(b.ratio) else "-"
+            rows.append(
+                (
+                    b.name, b.unit, plain(b.inflow, b.spread), plain(b.outflow, b.spread), signed(b.before, b.spread),
+                    plain(b.spread, b.spread), ratio, "closed" if abs(b.after) <= 1e-9 * max(b.scale, 1e-300) else f"{b.after:.1e}",
+                )  # fmt: skip
+            )
+        else:
+            rows.append((b.name, b.unit, "", "", "not all read", "", "", "closed" if abs(b.after) <= 1e-9 * max(b.scale, 1e-300) else f"{b.after:.1e}"))
+    return table(("BALANCE", "unit", "in", "out", "closure", "spread", "ratio", "after"), rows, left=(0, 1))
+
+
+def _readings(s: Snapshot) -> str:
+    rows = []
+    for r in s.readings:
+        sigma = min(x for x in (r.sigma_before, r.sigma, math.inf) if math.isfinite(x) or x == math.inf)
+        rows.append(
+            (
+                r.tag.removeprefix("known:"), r.unit, plain(r.reading, sigma), plain(r.adjusted, sigma),
+                plain(r.sigma_before, r.sigma_before), plain(r.sigma, r.sigma), signed(r.adjustment, sigma),
+                signed(r.in_sigmas, 0.1), f"{r.share:.2f}", signed(r.z, 0.1), r.word,
+            )  # fmt: skip
+        )
+    header = ("READING", "unit", "read", "adjusted", "±before", "±after", "moved", "in ±", "checked", "z", "")
+    return table(header, rows, left=(0, 1, 10))
+
+
+def _unread(unread: list) -> str:  # type: ignore[type-arg]
+    rows = [
+        (v.name, v.unit, plain(v.adjusted, v.sigma), plain(v.sigma, v.sigma), v.klass + (f": {v.reason}" if v.reason else ""))
+        for v in unread
+    ]
+    return table(("NOT READ", "unit", "value", "±", ""), rows, left=(0, 1, 4))
+
+
+def _figures(figures: tuple) -> str:  # type: ignore[type-arg]
+    rows = [
+        (
+            f.name, plain(f.value, f.sigma), plain(f.sigma, f.sigma), plain(f.raw, f.raw_sigma), plain(f.raw_sigma, f.raw_sigma),
+            f.reason or ", ".join(f"{k} {percent(v)}" for k, v in list(f.shares.items())[:3]),
+        )  # fmt: skip
+        for f in figures
+    ]
+    return table(("FIGURE", "value", "±", "raw", "±raw", "uncertainty from"), rows, left=(0, 5))
+
+
+def _closing(result: Result) -> list[str]:
+    out: list[str] = []
+    if result.excluded:
+        out += ["", "LEFT OUT", *(wrap(f"{tag}: {why}") for tag, why in result.excluded.items())]
+    if result.notices:
+        out += ["", "NOTICES", *(wrap(str(n)) for n in result.notices)]
+    for caution in result.cautions:
+        out += ["", wrap(f"Caution: {caution}", "")]
+    return out

@@ -1,0 +1,279 @@
+"""Sentences: what was found, in words that an engineer can act on."""
+
+from __future__ import annotations
+
+import math
+from collections import Counter
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+from ..accounts import Account, Accounts, Alternative, SizedFault
+from ..diagnose.verdict import Conclusion, Reason
+from .numbers import plain, signed
+
+if TYPE_CHECKING:
+    from ..results import Result
+    from ..snapshot import Snapshot
+
+__all__ = [
+    "MARKS",
+    "Suspect",
+    "explanation_sentences",
+    "fault_phrase",
+    "percent",
+    "short_name",
+    "suspects_of",
+    "test_phrase",
+    "verdict_line",
+    "verdict_sentences",
+]
+
+MARKS = {"agrees": "✓", "watch": "!", "does not agree": "✗", "cannot tell": "?"}
+"""Each word of evidence has a mark, so that colour is never needed."""
+
+INTERVAL = 1.959963984540054
+
+
+@dataclass(frozen=True)
+class Suspect:
+    """A fault that an explanation of a snapshot names, with what it cannot be told apart from."""
+
+    name: str
+    kind: str
+    item: str
+    unit: str
+    size: float
+    sigma: float
+    probability: float
+    tied_with: tuple[str, ...]
+
+    def as_dict(self) -> dict[str, Any]:
+        """Plain data, safe for JSON."""
+        return {
+            "fault": self.name,
+            "kind": self.kind,
+            "item": self.item,
+            "unit": self.unit,
+            "size": self.size,
+            "sigma": self.sigma,
+            "probability": self.probability,
+            "tied_with": list(self.tied_with),
+        }
+
+
+def percent(probability: float) -> str:
+    """Probability in whole percent, never 0 or 100."""
+    if not math.isfinite(probability):
+        return "unknown"
+    if probability > 0.99:
+        return "over 99 %"
+    return "under 1 %" if probability < 0.01 else f"{100 * probability:.0f} %"
+
+
+def fault_phrase(fault: SizedFault) -> str:
+    """What a fault says, with its size, e.g. ``R reads high by 7.6 kg/h``."""
+    c = fault.candidate
+    shown = abs(fault.size) if "{direction}" in c.says or c.side != 0 else fault.size
+    direction = "high" if fault.size > 0 else "low"
+    text = c.says.format(item=c.item, size=plain(shown, fault.sigma), unit=c.unit, direction=direction)
+    return " ".join(text.split())
+
+
+def alternative_phrase(alternative: Alternative) -> str:
+    """All faults of one set, joined by `and`."""
+    return " and ".join(fault_phrase(f) for f in alternative.faults)
+
+
+def short_name(snapshot: Snapshot) -> tuple[str, float]:
+    """Name of the most likely explanation, alternatives joined by `or`, and its probability."""
+    a = snapshot.accounts
+    if a is None or not a.standing:
+        return "no explanation found" if a is not None else "", math.nan
+    best = a.standing[0]
+    return " or ".join(" and ".join(f.candidate.name for f in s.faults) for s in best.alternatives), best.probability
+
+
+def suspects_of(snapshot: Snapshot) -> tuple[Suspect, ...]:
+    """Every fault that a standing explanation names, once, in the explanation where it is most probable."""
+    a = snapshot.accounts
+    if a is None or snapshot.test.status != "disagrees":
+        return ()
+    rivals = {f.candidate.name for account in a.standing for s in account.alternatives for f in s.faults}
+    out: dict[str, Suspect] = {}
+    for account in a.standing:
+        for s in account.alternatives:
+            for f in s.faults:
+                c = f.candidate
+                others = () if a.conclusion is Conclusion.ONE else tuple(
+                    sorted(rivals - {g.candidate.name for g in s.faults})
+                )
+                found = Suspect(c.name, c.kind, c.item, c.unit, f.size, f.sigma, s.probability, others)
+                if c.name not in out or out[c.name].probability < s.probability:
+                    out[c.name] = found
+    return tuple(out.values())
+
+
+# ------------------------------------------------------------------ verdict
+
+
+def test_phrase(snapshot: Snapshot) -> str:
+    """Test value with its limit, never alone."""
+    t = snapshot.test
+    if t.checks == 0:
+        return "no check possible"
+    return f"χ² {t.objective:.2f}, limit {t.limit:.2f} at {100 * t.level:g} %, p {_p(t.p)}"
+
+
+def _p(p: float) -> str:
+    return f"{p:.1g}" if p < 0.001 else f"{p:.4f}" if p < 0.01 else f"{p:.3f}"
+
+
+def verdict_line(result: Result) -> str:
+    """One line: how many readings and checks, whether they agree, who is suspected, what cannot be checked."""
+    if result.size == 1:
+        if result.table.failed:
+            return f"Not solved: {result.table.failed[0].message}"
+        return " ".join(verdict_sentences(result.snapshot(0)))
+    words = Counter(result.words[i] for i in range(result.size) if i not in result.table.failed)
+    parts = [f"{n} {_plural(word, n)}" for word, n in words.items()]
+    if result.table.failed:
+        parts.append(f"{len(result.table.failed)} could not be solved")
+    text = f"{result.size} snapshots: {', '.join(parts)}."
+    named: Counter[str] = Counter()
+    for i in range(result.size):
+        if i not in result.table.failed and result.suspicious[i]:
+            named[short_name(result.snapshot(i))[0]] += 1
+    if named:
+        most, count = named.most_common(1)[0]
+        text += f" Most often named: {most} ({count} of {sum(named.values())})."
+    return text
+
+
+def _plural(word: str, count: int) -> str:
+    if word == "does not agree":
+        return "does not agree" if count == 1 else "do not agree"
+    return {"agrees": "agrees" if count == 1 else "agree", "watch": "to watch"}.get(word, word)
+
+
+def verdict_sentences(snapshot: Snapshot) -> list[str]:
+    """Verdict of one snapshot in a few sentences."""
+    t = snapshot.test
+    meters = [r for r in snapshot.readings if r.kind == "meter" and math.isfinite(r.reading)]
+    unchecked = [r for r in meters if r.word == "not checked"]
+    head = f"{_count(len(meters), 'reading')}, {_count(t.checks, 'check')}: "
+    if t.checks == 0:
+        return [
+            head + "no check possible, since the balances leave nothing to compare.",
+            "The adjusted values are the readings, and what follows from them.",
+        ]
+    out = []
+    if t.status == "disagrees":
+        out.append(head + f"do not agree ({test_phrase(snapshot)}).")
+        out.extend(_named(snapshot.accounts))
+    elif t.status == "suspiciously good":
+        out.append(
+            head + f"agree suspiciously well ({test_phrase(snapshot)}): the sigmas are probably too large, "
+            "or readings are computed from one another."
+        )
+    else:
+        out.append(head + f"agree within their sigmas ({test_phrase(snapshot)}).")
+    if unchecked:
+        tags = ", ".join(r.tag for r in unchecked)
+        out.append(f"Not checked by anything: {tags}.")
+    return out
+
+
+def _count(n: int, noun: str) -> str:
+    return f"{n} {noun}" if n == 1 else f"{n} {noun}s"
+
+
+def _named(a: Accounts | None) -> list[str]:
+    if a is None:
+        return []
+    if not a.standing:
+        if a.max_faults == 0:
+            return ["Which reading is wrong cannot be told."]
+        return [
+            f"No set of up to {a.max_faults} possible faults accounts for it: several readings, a balance that is "
+            "not drawn right, or sigmas that are too small."
+        ]
+    best = a.standing[0]
+    first = best.alternatives[0]
+    if a.conclusion is Conclusion.ONE:
+        return [f"Most likely {alternative_phrase(first)} (probability {percent(first.probability)})."]
+    least = f"At least {a.at_least} faults. " if a.at_least and a.at_least > 1 else ""
+    if Reason.TIED in a.reasons:
+        options = ", or ".join(alternative_phrase(s) for s in best.alternatives)
+        return [f"{least}Cannot tell: {options}."]
+    if Reason.SATURATED in a.reasons and best.checks == 0:
+        return [f"{least}Cannot tell: with {best.count} assumed no check is left that could contradict it."]
+    rivals = ", ".join(
+        " or ".join("+".join(f.candidate.name for f in s.faults) for s in e.alternatives) for e in a.standing[1:4]
+    )
+    text = f"{least}{alternative_phrase(first)} fits best"
+    text += f" (probability {percent(first.probability)})"
+    if rivals:
+        text += f"; not excluded: {rivals}" + (", ..." if len(a.standing) > 4 else "")
+    return [f"Cannot tell for sure. {text}."]
+
+
+# ------------------------------------------------------------------ explanations
+
+
+def explanation_sentences(snapshot: Snapshot, limit: int = 6) -> list[str]:
+    """For every standing explanation one sentence with its numbers, its rival and what would separate them."""
+    a = snapshot.accounts
+    if a is None or snapshot.test.status != "disagrees":
+        return []
+    out = [_sentence(account, a) for account in a.standing[:limit]]
+    if len(a.standing) > limit:
+        out.append(f"{len(a.standing) - limit} further explanations are not excluded, each less probable.")
+    rejected = [x for x in a.ranked if not x.survives and x.count == 1][:3]
+    if rejected and a.standing:
+        out.append(
+            "Rejected: "
+            + "; ".join(f"{_names(x)} alone leaves χ² {x.left:.2f}, limit {x.limit:.2f}" for x in rejected)
+            + "."
+        )
+    by_sign = [x for x in a.ranked if x.excluded_by_sign and not x.alternatives and x.left <= x.limit]
+    if by_sign:
+        out.append(f"Excluded because their sign is impossible: {', '.join(_names(x) for x in by_sign[:4])}.")
+    tests = separating_tests(a)
+    if tests:
+        out.append("To separate: " + "; ".join(tests) + ".")
+    return out
+
+
+def _names(account: Account) -> str:
+    sets = account.alternatives or account.excluded_by_sign
+    return " or ".join("+".join(f.candidate.name for f in s.faults) for s in sets)
+
+
+def _sentence(account: Account, a: Accounts) -> str:
+    parts = []
+    for s in account.alternatives:
+        sizes = "; ".join(
+            f"{f.candidate.name} {signed(f.size, f.sigma)} ± {plain(f.sigma, f.sigma)} {f.candidate.unit} "
+            f"(95 %: {signed(f.size - INTERVAL * f.sigma, f.sigma)} to {signed(f.size + INTERVAL * f.sigma, f.sigma)})"
+            for f in s.faults
+        )
+        parts.append(f"{alternative_phrase(s)} [{sizes}]")
+    text = ", or equally well ".join(parts)
+    if account.checks == 0:
+        return f"{text}. Granting this, no check is left, so nothing could contradict it."
+    left = f"Granting this, the other {_count(account.checks, 'check')} agree (χ² {account.left:.2f}, limit {account.limit:.2f})"
+    return f"{text}. {left}; probability {percent(account.probability)}."
+
+
+def separating_tests(a: Accounts, limit: int = 3) -> list[str]:
+    """What a person could do to tell the standing explanations apart."""
+    if a.conclusion is Conclusion.ONE or not a.standing:
+        return []
+    counts: Counter[str] = Counter()
+    for account in a.standing:
+        for s in account.alternatives:
+            for f in s.faults:
+                c = f.candidate
+                if c.separate:
+                    counts[c.separate.format(item=c.item)] += 1
+    return [text for text, _ in counts.most_common(limit)]

@@ -1,0 +1,381 @@
+"""The whole way: case and readings to a result. The command line and the notebook both call this."""
+
+from __future__ import annotations
+
+import hashlib
+import platform
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from functools import cached_property
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from . import units
+from ._version import __version__
+from .adjust.eliminate import dependent_rows
+from .adjust.solve import Problem as Snapshot
+from .adjust.table import Table, adjust_table
+from .assemble import Assembled, assemble
+from .domains import Plugins, load_plugins
+from .errors import InputError, Location, Notice, Problem, Problems, did_you_mean
+from .readings.table import ReadingsTable
+from .results import Result
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from .coverage import Coverage
+    from .model import Model
+
+__all__ = ["Case", "load_case"]
+
+Array = npt.NDArray[np.float64]
+
+
+def load_case(
+    path: str | Path, *, plugins: Sequence[str | Path] = (), modules: Sequence[object] = ()
+) -> Case:
+    """Read and check a case: network, balances, meters; every mistake of the file is reported at once.
+
+    Parameters
+    ----------
+    path : path
+        The case file, or a folder that holds ``case.yaml``.
+    plugins : sequence of path
+        Plugin files to load beside the installed ones.
+    modules : sequence of module or object
+        Plugins that are imported already.
+
+    Returns
+    -------
+    Case
+
+    Raises
+    ------
+    InputError
+        With all problems of the file.
+    PluginError
+        If a domain failed.
+    """
+    loaded = load_plugins(plugins, modules=modules)
+    file = Path(path)
+    if file.is_dir():
+        file = file / "case.yaml"
+    return Case(assemble(file, loaded), loaded)
+
+
+def same_unit(a: str, b: str) -> bool:
+    """Whether two spellings mean the same unit."""
+    if a.strip() == b.strip():
+        return True
+    try:
+        factor, offset = units.factor_offset(a, b)
+    except ValueError:
+        return False
+    return abs(factor - 1.0) < 1e-12 and offset == 0.0
+
+
+@dataclass(frozen=True)
+class Case:
+    """A checked case, ready to run.
+
+    Attributes
+    ----------
+    parts : Assembled
+    plugins : Plugins
+    """
+
+    parts: Assembled
+    plugins: Plugins
+
+    @property
+    def title(self) -> str:
+        """Title of the case."""
+        return self.parts.spec.title
+
+    @property
+    def model(self) -> Model:
+        """The model: columns, rows, readings."""
+        return self.parts.model
+
+    @property
+    def tags(self) -> tuple[str, ...]:
+        """Tags of the meters."""
+        return tuple(self.parts.spec.meters)
+
+    def readings_path(self) -> Path | None:
+        """File of readings that the case names, or None."""
+        named = self.parts.spec.readings
+        if named is None:
+            return None
+        text = named if isinstance(named, str) else str(named.get("file"))
+        return (self.parts.spec.path.parent / text).resolve()
+
+    # ------------------------------------------------------------------ run
+
+    def run(
+        self,
+        readings: str | Path | pd.DataFrame | Mapping[str, Any] | ReadingsTable | None = None,
+        *,
+        exclude: Mapping[str, str] | None = None,
+        **settings: Any,
+    ) -> Result:
+        """Adjust readings, test them, and look for explanations.
+
+        Parameters
+        ----------
+        readings : path, DataFrame, mapping of tag to value(s), or ReadingsTable, optional
+            A column a meter, a row a snapshot; what the case names when left out.
+        exclude : mapping of tag to reason, optional
+            Meters to leave out; each needs a reason, which stands in the result.
+        **settings
+            Settings of the case to replace: level, power, max_faults, ...
+
+        Returns
+        -------
+        Result
+
+        Raises
+        ------
+        InputError
+            If the readings do not fit the case.
+        """
+        table = self.read(readings)
+        left_out = self._excluded(exclude or {})
+        values = np.where(table.usable, table.values, np.nan)
+        column = {t: i for i, t in enumerate(table.columns)}
+        picked = values[:, [column[t] for t in self.tags]]
+        picked[:, [self.tags.index(t) for t in left_out]] = np.nan
+        base = self.model.to_base(picked)
+        spec = self.parts.spec
+        chosen = replace(spec.settings, **settings) if settings else spec.settings
+        adjusted = adjust_table(self.problem(chosen), base, names=self.name_of_column, row_names=self.name_of_row)
+        self._refuse_contradictions(adjusted)
+        return Result(
+            title=self.title,
+            model=self.model,
+            table=adjusted,
+            readings=values[:, [column[t] for t in self.tags]],
+            labels=tuple(table.label(i) for i in range(len(table))),
+            settings=chosen,
+            spec=spec,
+            excluded=left_out,
+            statuses={
+                (i, table.columns[j]): table.reason(i, j) for i, j in zip(*np.nonzero(~table.usable), strict=True)
+            },
+            figures=spec.figures,
+            cautions=self.parts.cautions,
+            notices=(*self.parts.notices, *table.notices, *self._bound_notices(adjusted)),
+            provenance=self._provenance(table, chosen),
+        )
+
+    def read(self, readings: Any = None) -> ReadingsTable:
+        """Read readings and check that their columns fit the meters; see `run`."""
+        from .readings.values import from_values
+
+        if isinstance(readings, ReadingsTable):
+            table = readings
+        elif readings is None or isinstance(readings, (str, Path)):
+            path = self.readings_path() if readings is None else Path(readings)
+            if path is None:
+                raise InputError(
+                    Problem(
+                        "no-readings",
+                        "the case names no readings, and none were given",
+                        "add a line 'readings: readings.csv' to the case, or name the file with --readings",
+                        Location(file=str(self.parts.spec.path)),
+                    )
+                )
+            from .readings.csv_source import read_csv as read_readings
+
+            options = self.parts.spec.readings if isinstance(self.parts.spec.readings, dict) else {}
+            given = {k: v for k, v in options.items() if k != "file"}
+            table = read_readings(path, expected=self.tags, **given)
+        else:
+            table = from_values(readings)
+        self._check_columns(table)
+        return table
+
+    def _check_columns(self, table: ReadingsTable) -> None:
+        problems = Problems(None)
+        for tag in self.tags:
+            if tag not in table.columns:
+                problems.add(
+                    "no-column",
+                    f"meter {tag!r} has no column in the readings",
+                    did_you_mean(tag, [c for c in table.columns if c not in self.tags])
+                    or "add the column, empty where there is no reading",
+                )
+        for tag in table.columns:
+            if tag not in self.tags:
+                problems.add(
+                    "unknown-column",
+                    f"column {tag!r} matches no meter of the case",
+                    did_you_mean(tag, self.tags) or "declare the meter, or remove the column",
+                )
+        for tag, stated in table.units.items():
+            meter = self.parts.spec.meters.get(tag)
+            if meter is not None and not same_unit(stated, meter.unit):
+                problems.add(
+                    "unit-differs",
+                    f"the readings give {tag} in {stated}, the case in {meter.unit}",
+                    "state the unit of the file in the case; the program converts from there",
+                    Location(file=table.sources[0] if table.sources else None, tag=tag),
+                )
+        problems.raise_if_any()
+
+    def _excluded(self, exclude: Mapping[str, str]) -> dict[str, str]:
+        problems = Problems(str(self.parts.spec.path))
+        for tag, because in exclude.items():
+            if tag not in self.tags:
+                problems.add("unknown-meter", f"{tag!r} cannot be left out: no such meter", did_you_mean(tag, self.tags))
+            elif not str(because or "").strip():
+                problems.add(
+                    "no-reason",
+                    f"{tag} left out without a reason",
+                    'give one with --because "..."; it will stand in the result',
+                )
+        problems.raise_if_any()
+        return dict(exclude)
+
+    def problem(self, settings: Any = None) -> Snapshot:
+        """Return what all snapshots share, as arrays."""
+        settings = settings or self.parts.spec.settings
+        model = self.model
+        start = np.full(model.size, np.nan)
+        typical = model.system.starts
+        start[: typical.size] = typical
+        for source in (model.design, model.fixed):
+            start[list(source)] = list(source.values())
+        return Snapshot(
+            equations=model.with_shared,
+            sigma=model.sigma,
+            columns=model.columns,
+            readings=np.full(model.columns.size, np.nan),
+            fixed=np.array(sorted(model.fixed), dtype=np.int64),
+            start=start,
+            value_dependent=model.has_relative,
+            settle=settings.percent_at == "adjusted",
+            lower=model.lower,
+            upper=model.upper,
+        )
+
+    def name_of_column(self, column: int) -> str:
+        """Return the name of a column."""
+        return self.model.names[column]
+
+    def name_of_row(self, row: int) -> str:
+        """Return the name of a row."""
+        return self.model.row_names[row]
+
+    # ------------------------------------------------------------------ what must be said
+
+    def _refuse_contradictions(self, table: Table) -> None:
+        """Constants that contradict each other through the balances cannot be adjusted away."""
+        model = self.model
+        fixed = np.array(sorted(model.fixed), dtype=np.int64)
+        faults = set(model.fault_columns.tolist())
+        live = np.array([c for c in range(model.size) if c not in model.fixed], dtype=np.int64)
+        for group in table.groups[:1]:
+            implied = dependent_rows(group.jacobian[:, live])
+            x = group.x[0]
+            rhs = group.jacobian @ x - group.equations.closure(x)
+            known = rhs - group.jacobian[:, fixed] @ x[fixed]
+            size = np.abs(implied) @ np.maximum(np.abs(known), np.abs(group.jacobian) @ np.abs(np.nan_to_num(x)))
+            off = np.abs(implied @ known) > 1e-9 * np.maximum(size, 1e-300)
+            problems = Problems(str(self.parts.spec.path))
+            for combination, wrong in zip(implied, off, strict=True):
+                if not wrong:
+                    continue
+                rows = [self.name_of_row(int(r)) for r in np.flatnonzero(combination)]
+                touched = np.flatnonzero(np.abs(group.jacobian[np.flatnonzero(combination)][:, fixed]).sum(axis=0))
+                names = [model.names[fixed[t]] for t in touched if int(fixed[t]) not in faults]
+                problems.add(
+                    "contradictory-constants",
+                    f"balances {', '.join(rows)} cannot hold together"
+                    + (f" with the exact values of {', '.join(names)}" if names else ""),
+                    "give one of the constants a sigma, or correct it",
+                )
+            problems.raise_if_any()
+
+    def _bound_notices(self, table: Table) -> list[Notice]:
+        """Report violated bounds, stated or physical; a value outside is never exported without saying so."""
+        model = self.model
+        limits = self._bounds()
+        counts: dict[tuple[int, str], list[float]] = {}
+        for group in table.groups:
+            spread = np.linalg.norm(np.nan_to_num(group.cover), axis=1)
+            for column, (low, high) in limits.items():
+                if not group.determined[column]:
+                    continue
+                x, slack = group.x[:, column], 1e-9 * (1.0 + spread[column])
+                for word, beyond in (("below", x[x < low - slack]), ("above", x[x > high + slack])):
+                    if beyond.size:
+                        counts.setdefault((column, word), []).extend(beyond.tolist())
+        out = []
+        for (column, word), values in counts.items():
+            bound = limits[column][0 if word == "below" else 1]
+            worst = min(values) if word == "below" else max(values)
+            many = f" in {len(values)} snapshots" if table.size > 1 else ""
+            out.append(
+                Notice(
+                    "bound-violated",
+                    f"{model.names[column]} comes out {word} its bound of {bound:g} {model.units[column]}{many} "
+                    f"(worst {worst:.6g}). Reverse flow, zero offset, or a fault? The value is exported as it came out.",
+                )
+            )
+        return out
+
+    def _bounds(self) -> dict[int, tuple[float, float]]:
+        from .units import factor_offset
+
+        model = self.model
+        out = {
+            int(c): (float(model.lower[c]), float(model.upper[c]))
+            for c in model.shown
+            if np.isfinite(model.lower[c]) or np.isfinite(model.upper[c])
+        }
+        for name, bound in self.parts.spec.bounds.items():
+            column = model.system.column(name)
+            low, high = out.get(column, (-np.inf, np.inf))
+            ends = []
+            for stated, default in ((bound.lower, low), (bound.upper, high)):
+                if stated is None:
+                    ends.append(default)
+                else:
+                    factor, offset = factor_offset(stated[1], model.units[column])
+                    ends.append(factor * stated[0] + offset)
+            out[column] = (ends[0], ends[1])
+        return out
+
+    def _provenance(self, table: ReadingsTable, settings: Any) -> dict[str, Any]:
+        spec = self.parts.spec
+        used = {name: self.plugins.domains[name].domain.version for name in spec.domains}
+        libraries = {}
+        for name in ("numpy", "scipy", "pandas"):
+            try:
+                libraries[name] = version(name)
+            except PackageNotFoundError:  # pragma: no cover - installed by the package itself
+                continue
+        return {
+            "program": f"reconcile-flows {__version__}",
+            "python": platform.python_version(),
+            "libraries": libraries,
+            "domains": used,
+            "case": spec.path.name,
+            "case_sha256": hashlib.sha256(spec.path.read_bytes()).hexdigest(),
+            "readings_sha256": table.source_hash,
+        }
+
+    # ------------------------------------------------------------------ before any reading
+
+    @cached_property
+    def coverage(self) -> Coverage:
+        """What can be known with these meters, before any reading."""
+        from .coverage import coverage_of
+
+        return coverage_of(self)

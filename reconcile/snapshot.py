@@ -1,0 +1,553 @@
+"""One snapshot in detail: what each reading, balance and possible fault looks like in the light of all others."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from .accounts import Accounts, explain
+from .adjust.eliminate import dependent_rows
+from .adjust.structure import checks, ties
+from .adjust.table import Group
+from .diagnose.critical import smallest_detectable
+from .diagnose.verdict import Conclusion
+from .diagnose.tests_of_readings import (
+    GlobalTest,
+    SignatureTests,
+    global_test,
+    share_checked,
+    signature_tests,
+)
+from .model import Candidate, Model
+
+if TYPE_CHECKING:
+    from .results import Result
+
+__all__ = ["FRAME_COLUMNS", "BalanceLine", "FaultLine", "ReadingLine", "Snapshot", "VariableLine", "look"]
+
+Array = npt.NDArray[np.float64]
+
+FRAME_COLUMNS = (
+    "snapshot",
+    "variable",
+    "unit",
+    "meter",
+    "class",
+    "reading",
+    "sigma_before",
+    "adjusted",
+    "sigma",
+    "adjustment",
+    "adjustment_in_sigmas",
+    "share_checked",
+    "smallest_detectable",
+)
+
+
+@dataclass(frozen=True)
+class ReadingLine:
+    """A reading before and after; all values in the unit of the meter.
+
+    Attributes
+    ----------
+    tag, reads, unit, kind : str
+    reading : float
+        nan where the meter gave nothing.
+    sigma_before : float
+        Total standard uncertainty of the reading, shared errors included.
+    adjusted, sigma : float
+        What it should have read, and its standard uncertainty.
+    adjustment, in_sigmas : float
+        adjusted - reading, and the same over `sigma_before`.
+    share : float
+        Share of an error of this reading that would show, 0 to 1.
+    z : float
+        Test value; nan where the reading is not checked.
+    smallest : float
+        Smallest bias that would be noticed at the level and power of the case; inf where none would.
+    klass : str
+        ``checked``, ``not checked``, ``calculated`` (absent, but determined by the others) or
+        ``cannot be calculated``.
+    word : str
+        ``sound so far``, ``suspect``, ``tied``, ``not checked``, ``left out``, ``no reading``.
+    origin : str
+        Where its sigma comes from.
+    """
+
+    tag: str
+    reads: str
+    unit: str
+    kind: str
+    reading: float
+    sigma_before: float
+    adjusted: float
+    sigma: float
+    adjustment: float
+    in_sigmas: float
+    share: float
+    z: float
+    smallest: float
+    klass: str
+    word: str
+    origin: str
+
+
+@dataclass(frozen=True)
+class VariableLine:
+    """A variable of the balances, in its own unit."""
+
+    name: str
+    unit: str
+    klass: str
+    adjusted: float
+    sigma: float
+    meters: tuple[str, ...]
+    reason: str
+
+
+@dataclass(frozen=True)
+class BalanceLine:
+    """A balance before and after.
+
+    Attributes
+    ----------
+    name, kind, unit, node, domain : str
+    before : float
+        Closure of the raw readings; nan where the balance holds a variable that is not read.
+    spread : float
+        Standard deviation that the sigmas let expect.
+    ratio : float
+        before / spread.
+    after : float
+        Closure of the adjusted values.
+    scale : float
+        Largest term of the balance.
+    inflow, outflow : float
+        Sum of the positive and of the negative terms of the raw readings.
+    """
+
+    name: str
+    kind: str
+    unit: str
+    node: str
+    domain: str
+    before: float
+    spread: float
+    ratio: float
+    after: float
+    scale: float
+    inflow: float
+    outflow: float
+
+
+@dataclass(frozen=True)
+class FaultLine:
+    """A possible fault taken alone, in the unit of its size.
+
+    Attributes
+    ----------
+    candidate : Candidate
+    size, sigma : float
+        Least-squares size if this were the only fault, and its standard uncertainty.
+    low, high : float
+        95 % interval.
+    z : float
+        Test value.
+    left : float
+        Objective that remains if it is granted.
+    smallest : float
+        Smallest size that would be noticed at the level and power of the case.
+    """
+
+    candidate: Candidate
+    size: float
+    sigma: float
+    low: float
+    high: float
+    z: float
+    left: float
+    smallest: float
+
+
+@dataclass(frozen=True)
+class Snapshot:
+    """Everything that is known of one snapshot.
+
+    Attributes
+    ----------
+    label : str
+    readings, variables, balances, faults : tuples of lines
+    test : GlobalTest
+    tests : SignatureTests
+        Over all candidates of `faults`, in order.
+    meter_tests : SignatureTests
+        Over the meters alone, with the limit for their number.
+    accounts : Accounts or None
+        Explanations; None where there is no check.
+    checks_in_words : tuple of str
+        The independent checks, each as a combination of variables.
+    reductions : str
+        What was done to get here: linearisations, rounds of sigma.
+    """
+
+    label: str
+    readings: tuple[ReadingLine, ...]
+    variables: tuple[VariableLine, ...]
+    balances: tuple[BalanceLine, ...]
+    faults: tuple[FaultLine, ...]
+    test: GlobalTest
+    tests: SignatureTests
+    meter_tests: SignatureTests
+    accounts: Accounts | None
+    candidates: tuple[Candidate, ...]
+    checks_in_words: tuple[str, ...]
+    dependent: tuple[str, ...]
+    steps: int
+    rounds: int
+
+    def reading(self, tag: str) -> ReadingLine:
+        """Line of a meter by its tag."""
+        return next(r for r in self.readings if r.tag == tag)
+
+    def variable(self, name: str) -> VariableLine:
+        """Line of a variable by its name."""
+        return next(v for v in self.variables if v.name == name)
+
+    def fault(self, name: str) -> FaultLine:
+        """Line of a candidate fault by its name."""
+        return next(f for f in self.faults if f.candidate.name == name)
+
+    def frame_rows(self) -> Iterator[tuple[Any, ...]]:
+        """Rows for `Result.to_frame`."""
+        named = set()
+        for r in self.readings:
+            if r.kind != "meter":
+                continue
+            named.add(r.reads)
+            yield (
+                self.label, r.reads, r.unit, r.tag, r.klass, r.reading, r.sigma_before, r.adjusted, r.sigma,
+                r.adjustment, r.in_sigmas, r.share, r.smallest,
+            )  # fmt: skip
+        for v in self.variables:
+            if v.name not in named:
+                nothing = (np.nan,) * 2
+                yield (
+                    self.label, v.name, v.unit, "", v.klass, *nothing, v.adjusted, v.sigma, *nothing, np.nan, np.nan
+                )  # fmt: skip
+
+
+def evidence(result: Result, index: int) -> tuple[Array, Array, tuple[Candidate, ...]]:
+    """Parity vector of a snapshot and the signature of every candidate.
+
+    Returns
+    -------
+    parity : ndarray, shape (r,)
+    signatures : ndarray, shape (r, k)
+        Per unit of each candidate's own unit.
+    candidates : tuple of Candidate
+    """
+    group = result.group(index)
+    row = int(np.flatnonzero(group.rows == index)[0])
+    candidates = result.model.candidates
+    return group.parity[row], signatures(result.model, group), candidates
+
+
+def signatures(model: Model, group: Group) -> Array:
+    """Signature of every candidate of a model in one linearisation, shape (r, k), per unit of the candidate."""
+    scale = np.array([c.scale for c in model.candidates])
+    of_faults = group.signatures_of(model.fault_columns)
+    return np.hstack([group.signatures, of_faults]) * scale
+
+
+def look(result: Result, index: int) -> Snapshot:
+    """Work out one snapshot of a result in detail.
+
+    Parameters
+    ----------
+    result : Result
+    index : int
+        Counted from 0.
+
+    Returns
+    -------
+    Snapshot
+
+    Raises
+    ------
+    SolveError
+        If no consistent answer was found for this snapshot.
+    """
+    model, group, settings = result.model, result.group(index), result.settings
+    parity, shifts, candidates = evidence(result, index)
+    x = group.x[int(np.flatnonzero(group.rows == index)[0])]
+    test = global_test(parity, settings.level)
+    tests = signature_tests(parity, shifts, settings.level)
+    meters = model.meters
+    meter_tests = signature_tests(parity, shifts[:, meters], settings.level)
+    explainer = result.explainer(index)
+    accounts = None if explainer is None else explain(explainer, parity, model, settings.level)
+    faults = _faults(candidates, tests, shifts, settings)
+    readings = _readings(result, index, group, x, meter_tests, shifts, accounts)
+    return Snapshot(
+        label=result.labels[index],
+        readings=readings,
+        variables=_variables(result, index, group, x),
+        balances=_balances(result, index, group, x),
+        faults=faults,
+        test=test,
+        tests=tests,
+        meter_tests=meter_tests,
+        accounts=accounts,
+        candidates=candidates,
+        checks_in_words=checks_in_words(model, group),
+        dependent=dependent_in_words(model, group),
+        steps=group.steps,
+        rounds=group.rounds,
+    )
+
+
+# ------------------------------------------------------------------ lines
+
+
+def _readings(
+    result: Result,
+    index: int,
+    group: Group,
+    x: Array,
+    tests: SignatureTests,
+    shifts: Array,
+    accounts: Accounts | None,
+) -> tuple[ReadingLine, ...]:
+    model, settings = result.model, result.settings
+    base = model.to_base(result.readings[index : index + 1])[0]
+    absent = set(group.absent.tolist())
+    value_at = x[model.columns]
+    reference = np.where(np.isfinite(base), base, value_at) if settings.percent_at == "reading" else value_at
+    before = model.total_sigma(reference) / np.abs(model.factor)
+    words = _words(model, accounts)
+    place = {int(i): j for j, i in enumerate(model.meters)}
+    lines = []
+    for i, r in enumerate(model.readings):
+        if r.kind == "cause":
+            continue
+        combination = [(model.system.column(n), c) for n, c in r.reads]
+        value = (sum(c * x[k] for k, c in combination) - r.offset) / r.factor
+        spread = float(np.linalg.norm(sum(c * group.cover[k] for k, c in combination)) / abs(r.factor))
+        gone = i in absent
+        reading = (base[i] - r.offset) / r.factor
+        if not np.isfinite(spread):
+            value = np.nan
+        move = np.nan if gone else value - reading
+        length = float(np.linalg.norm(shifts[:, i]))
+        checked = bool(group.checked[i])
+        if gone:
+            klass = "calculated" if np.isfinite(spread) else "cannot be calculated"
+            given = np.isfinite(result.readings[index][place[i]]) if i in place else False
+            word = "left out" if r.tag in result.excluded and given else "no reading"
+        else:
+            klass = "checked" if checked else "not checked"
+            word = words.get(r.tag, "sound so far") if checked else "not checked"
+        lines.append(
+            ReadingLine(
+                tag=r.tag,
+                reads=_combination(r.reads),
+                unit=r.unit,
+                kind=r.kind,
+                reading=np.nan if gone else float(reading),
+                sigma_before=float(before[i]),
+                adjusted=float(value),
+                sigma=spread,
+                adjustment=float(move),
+                in_sigmas=float(move / before[i]),
+                share=0.0 if gone else float(np.clip(1.0 - (spread / before[i]) ** 2, 0.0, 1.0)) if checked else 0.0,
+                z=float(tests.z[place[i]]) if i in place and checked else np.nan,
+                smallest=smallest_detectable(length, settings.level, settings.power) if checked else np.inf,
+                klass=klass,
+                word=word,
+                origin=r.origin,
+            )
+        )
+    return tuple(lines)
+
+
+def _combination(reads: Sequence[tuple[str, float]]) -> str:
+    text = ""
+    for name, c in reads:
+        sign = " - " if c < 0 else " + " if text else ""
+        text += f"{sign}{name}" if abs(c) == 1 else f"{sign}{abs(c):g} * {name}"
+    return text.removeprefix(" ")
+
+
+def _words(model: Model, accounts: Accounts | None) -> dict[str, str]:
+    """Word for each reading that an explanation names: suspect, or tied where several fit."""
+    if accounts is None or not accounts.standing:
+        return {}
+    best = accounts.standing[0]
+    first = {f.candidate.name for f in best.alternatives[0].faults if f.candidate.reading >= 0}
+    if accounts.conclusion is Conclusion.ONE:
+        return dict.fromkeys(first, "suspect")
+    named: dict[str, str] = {}
+    for account in accounts.standing:
+        for alternative in account.alternatives:
+            for fault in alternative.faults:
+                if fault.candidate.reading >= 0:
+                    named.setdefault(fault.candidate.name, "tied")
+    everywhere = set(named).intersection(
+        *({f.candidate.name for f in a.faults} for account in accounts.standing for a in account.alternatives)
+    )
+    named.update(dict.fromkeys(everywhere, "suspect"))
+    return named
+
+
+def _variables(result: Result, group: Group, x: Array) -> tuple[VariableLine, ...]:
+    from .results import classes_of
+
+    model = result.model
+    classes = classes_of(model, group)
+    meters: dict[str, list[str]] = {}
+    absent = set(group.absent.tolist())
+    for i, r in enumerate(model.readings):
+        if r.kind == "meter" and i not in absent:
+            for name, _ in r.reads:
+                meters.setdefault(name, []).append(r.tag)
+    out = []
+    for c, klass in zip(model.shown, classes, strict=True):
+        name = model.names[c]
+        known = group.determined[c]
+        out.append(
+            VariableLine(
+                name=name,
+                unit=model.units[c],
+                klass=klass,
+                adjusted=float(x[c]) if known else np.nan,
+                sigma=float(np.linalg.norm(group.cover[c])) if known else np.nan,
+                meters=tuple(meters.get(name, ())),
+                reason=_why_unknown(model, group, int(c)) if klass == "cannot be calculated" else "",
+            )
+        )
+    return tuple(out)
+
+
+def _why_unknown(model: Model, group: Group, column: int) -> str:
+    position = np.flatnonzero(group.free == column)
+    if not position.size:
+        return "its reading is absent, and nothing else determines it"
+    if group.adjuster.elimination.observable[position[0]]:
+        return "it depends on readings that are absent"
+    tied = ties(group.adjuster.elimination, int(position[0]))
+    if len(tied) < 2:
+        return "no balance ties it to a reading"
+    terms = {model.names[group.free[k]]: v for k, v in tied.items()}
+    return f"only {sum_in_words(terms)} is known"
+
+
+def sum_in_words(terms: dict[str, float]) -> str:
+    text = ""
+    for name, c in terms.items():
+        c = round(c, 9)
+        sign = (" - " if c < 0 else " + ") if text else ("-" if c < 0 else "")
+        text += f"{sign}{name}" if abs(c) == 1 else f"{sign}{abs(c):.4g} * {name}"
+    return text
+
+
+def _balances(result: Result, index: int, group: Group, x: Array) -> tuple[BalanceLine, ...]:
+    """Closure of every balance of the domains, before with the raw readings where they suffice, and after."""
+    model, e = result.model, group.equations
+    base = model.to_base(result.readings[index : index + 1])[0]
+    base[group.absent] = np.nan
+    raw = np.full(model.size, np.nan)
+    source = np.full(model.size, -1)
+    for i, r in reversed(list(enumerate(model.readings))):
+        if len(r.reads) == 1 and r.kind != "cause" and np.isfinite(base[i]):
+            column = model.system.column(r.reads[0][0])
+            raw[column], source[column] = base[i] / r.reads[0][1], i
+    for c, v in model.fixed.items():
+        raw[c] = v
+    m = model.system.equations.shape[0]
+    formed = np.isfinite(raw)
+    x_raw = np.where(formed, raw, np.nan_to_num(x))
+    jacobian = e.jacobian(x_raw)[:m].toarray()
+    complete = ~np.any((jacobian != 0) & ~formed, axis=1)
+    before = e.closure(x_raw)[:m]
+    covariance = model.covariance_of_readings(np.where(np.isfinite(base), base, x[model.columns]))
+    read = np.flatnonzero(source >= 0)
+    part = jacobian[:, read]
+    spread = np.sqrt(np.einsum("ij,jk,ik->i", part, covariance[np.ix_(source[read], source[read])], part))
+    inflow, outflow = (t[:m] for t in e.split_terms(x_raw))
+    after, scale = e.closure(np.nan_to_num(x))[:m], e.largest_term(np.nan_to_num(x))[:m]
+    out = []
+    for block in model.system.row_blocks:
+        for j, name in enumerate(block.names):
+            k = block.start + j
+            ok = bool(complete[k])
+            with np.errstate(divide="ignore", invalid="ignore"):
+                ratio = before[k] / spread[k] if ok and spread[k] > 0 else np.nan
+            out.append(
+                BalanceLine(
+                    name, block.kind, block.unit, block.nodes[j], block.writer,
+                    float(before[k]) if ok else np.nan, float(spread[k]) if ok else np.nan, float(ratio),
+                    float(after[k]), float(scale[k]),
+                    float(inflow[k]) if ok else np.nan, float(-outflow[k]) if ok else np.nan,
+                )  # fmt: skip
+            )
+    return tuple(out)
+
+
+def _faults(
+    candidates: Sequence[Candidate], tests: SignatureTests, shifts: Array, settings: Any
+) -> tuple[FaultLine, ...]:
+    norms = np.linalg.norm(shifts, axis=0)
+    return tuple(
+        FaultLine(
+            c,
+            float(tests.size[i]),
+            float(tests.sigma[i]),
+            float(tests.low[i]),
+            float(tests.high[i]),
+            float(tests.z[i]),
+            float(tests.leftover[i]),
+            smallest_detectable(float(norms[i]), settings.level, settings.power) if np.isfinite(tests.z[i]) else np.inf,
+        )
+        for i, c in enumerate(candidates)
+    )
+
+
+def checks_in_words(model: Model, group: Group) -> tuple[str, ...]:
+    """Every independent check as a combination of the things that are read.
+
+    For a case with products the linearised check is shown by the balances it combines.
+    """
+    present = np.setdiff1d(group.present, group.absent)
+    columns = group.columns[present]
+    taken = np.isin(np.arange(model.size), [*columns, *model.fixed])
+    free = np.flatnonzero(~taken)
+    combined = checks(group.jacobian[:, columns], group.jacobian[:, free])
+    out = []
+    for row in combined:
+        if not group.equations.is_linear:
+            out.append(" with ".join(model.row_names[int(k)] for k in np.flatnonzero(row)))
+            continue
+        weights = row @ group.jacobian[:, columns]
+        terms = {model.tags[present[j]]: weights[j] for j in np.flatnonzero(np.abs(weights) > 1e-9)}
+        lead = abs(next(iter(terms.values())))
+        constant = float(row @ group.equations.rhs - row @ group.jacobian[:, list(model.fixed)] @ list(model.fixed.values()))
+        right = 0.0 if abs(constant) < 1e-12 else constant / lead
+        out.append(f"{sum_in_words({k: v / lead for k, v in terms.items()})} = {right:g}")
+    return tuple(out)
+
+
+def dependent_in_words(model: Model, group: Group) -> tuple[str, ...]:
+    """Balances that others imply: true, but no further check."""
+    live = [c for c in range(model.size) if c not in model.fixed]
+    out = []
+    for row in dependent_rows(group.jacobian[:, live]):
+        names = [model.row_names[int(k)] for k in np.flatnonzero(row)]
+        if len(names) == 1:
+            out.append(f"{names[0]} says nothing about what is read or unknown here")
+        else:
+            out.append(f"{names[-1]} follows from {', '.join(names[:-1])}")
+    return tuple(out)
