@@ -15,7 +15,16 @@ import numpy.typing as npt
 
 from .table import Status
 
-__all__ = ["BLANKS", "SPREADSHEET_ERRORS", "CellReader", "Marks", "ParsedColumn", "clean", "detect_marks"]
+__all__ = [
+    "BLANKS",
+    "SPREADSHEET_ERRORS",
+    "CellReader",
+    "Marks",
+    "ParsedColumn",
+    "clean",
+    "detect_marks",
+    "telling_cells",
+]
 
 BLANKS = frozenset({"", "na", "n/a", "nan", "null", "none", "-", "\u2013", "\u2014"})
 SPREADSHEET_ERRORS = frozenset(
@@ -79,13 +88,15 @@ _INNER_SPACE = re.compile(r"(?<=\d)[ '\u2019](?=\d{3})")
 _THREE = re.compile(r"[+-]?[1-9]\d{0,2}[.,]\d{3}")
 
 
-def detect_marks(cells: Iterable[str], *, decimal: str | None, thousands: str | None, comma_is_usual: bool) -> Marks:
+def detect_marks(
+    cells: Mapping[str, int], *, decimal: str | None, thousands: str | None, comma_is_usual: bool
+) -> Marks:
     """Find out which mark is decimal, from cells that hold one.
 
     Parameters
     ----------
-    cells : iterable of str
-        Cleaned cells that contain a point or a comma.
+    cells : mapping of str to int
+        Cleaned cells that contain a point or a comma, and how often each comes (see `telling_cells`).
     decimal, thousands : str, optional
         Declared marks; they win.
     comma_is_usual : bool
@@ -95,25 +106,25 @@ def detect_marks(cells: Iterable[str], *, decimal: str | None, thousands: str | 
     maybe: Counter[str] = Counter()  # decimal, or thousands
     grouping: Counter[str] = Counter()  # thousands for certain
     examples: dict[str, str] = {}
-    for cell in cells:
+    for cell, times in cells.items():
         text = _INNER_SPACE.sub("", cell.lstrip("<>=\u2264\u2265 "))
         has_point, has_comma = "." in text, "," in text
         if has_point and has_comma:
             last = "." if text.rfind(".") > text.rfind(",") else ","
             other = "," if last == "." else "."
             if text.count(last) == 1 and _GROUPED[other].fullmatch(text):
-                sure[last] += 1
-                grouping[other] += 1
+                sure[last] += times
+                grouping[other] += times
         elif has_point or has_comma:
             mark = "." if has_point else ","
             if text.count(mark) > 1:
                 if _GROUPED[mark].fullmatch(text):
-                    grouping[mark] += 1
+                    grouping[mark] += times
             elif _THREE.fullmatch(text):
-                maybe[mark] += 1
+                maybe[mark] += times
                 examples.setdefault(mark, text)
             elif _counts_as_number(text):
-                sure[mark] += 1
+                sure[mark] += times
     marks = Marks(point=sure["."] + maybe["."], comma=sure[","] + maybe[","])
     if thousands is not None:
         marks.thousands = thousands
@@ -149,6 +160,31 @@ def detect_marks(cells: Iterable[str], *, decimal: str | None, thousands: str | 
     elif comma_is_usual:
         marks.decimal = ","
     return marks
+
+
+def telling_cells(columns: Iterable[Sequence[str]]) -> Counter[str]:
+    """Return the cells that tell about marks, with their numbers.
+
+    Of a column that is all numbers with a point, one cell speaks for all.
+    """
+    out: Counter[str] = Counter()
+    for column in columns:
+        cells = [c for c in column if "." in c or "," in c]
+        if not cells:
+            continue
+        if "," not in "".join(cells) and _floats(cells) is not None:
+            sure = next((c for c in cells if not _THREE.fullmatch(c.strip())), cells[0])
+            out[sure.strip()] += len(cells)
+        else:
+            out.update(clean(c) for c in cells)
+    return out
+
+
+def _floats(cells: Sequence[str]) -> npt.NDArray[np.float64] | None:
+    try:
+        return np.fromiter(map(float, cells), dtype=np.float64, count=len(cells))
+    except ValueError:
+        return None
 
 
 @dataclass
@@ -243,11 +279,8 @@ class CellReader:
             if "." in joined:
                 return None
             cells = [c.replace(",", ".") for c in cells]
-        try:
-            values = np.array([float(c) for c in cells], dtype=np.float64)
-        except ValueError:
-            return None
-        return values if np.isfinite(values).all() else None
+        values = _floats(cells)
+        return values if values is not None and np.isfinite(values).all() else None
 
     def _odd(self, out: ParsedColumn, row: int, text: str) -> None:
         folded = text.casefold()

@@ -14,7 +14,7 @@ from .cells import clean
 from .options import ReadOptions
 from .units_words import split_header_unit
 
-__all__ = ["Roles", "match_columns"]
+__all__ = ["Roles", "looks_dated", "match_columns"]
 
 _DATE = re.compile(r"\d{4}[-/.]\d{1,2}[-/.]\d{1,2}\b|\d{1,2}[-/.]\d{1,2}[-/.]\d{4}\b")
 
@@ -97,7 +97,9 @@ def match_columns(
         taken.add(i)
     rest = [i for i in range(len(names)) if i not in taken]
     if roles.time is None and options.time_column is None:
-        roles.time = next((i for i in rest if _dated(columns[i]) and _tag_of(names[i], expected or ()) is None), None)
+        roles.time = next(
+            (i for i in rest if looks_dated(columns[i]) and _tag_of(names[i], expected or ()) is None), None
+        )
         rest = [i for i in rest if i != roles.time]
     if expected is None:
         for i in rest:
@@ -107,7 +109,7 @@ def match_columns(
     return roles
 
 
-def _dated(column: Any) -> bool:
+def looks_dated(column: Any) -> bool:
     """Tell a column of stamps by its first cells, whatever its name."""
     if not isinstance(column, list):
         return not isinstance(column, np.ndarray)

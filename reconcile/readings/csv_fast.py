@@ -12,7 +12,7 @@ import numpy as np
 
 from ..errors import Problems
 from .assemble import RawTable
-from .cells import BLANKS, clean, detect_marks
+from .cells import BLANKS, clean, detect_marks, telling_cells
 from .columns import match_columns
 from .csv_text import Decoded, split_records
 from .options import ReadOptions
@@ -56,7 +56,7 @@ def read_fast(decoded: Decoded, delimiter: str, name: str, options: ReadOptions)
     if problems or top:
         return None
     numeric = {i for i in roles.tags.values() if i is not None}
-    cells = (clean(c) for i in numeric for c in columns[i] if "." in c or "," in c)
+    cells = telling_cells(columns[i] for i in numeric)
     marks = detect_marks(cells, decimal=options.decimal, thousands=options.thousands, comma_is_usual=delimiter == ";")
     if marks.conflict or marks.undecided or marks.three_digits or marks.thousands:
         return None

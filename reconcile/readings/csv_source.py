@@ -14,7 +14,7 @@ from typing import Any
 
 from ..errors import Location, Notice, Problems
 from .assemble import RawTable, assemble
-from .cells import BLANKS, clean, detect_marks
+from .cells import BLANKS, clean, detect_marks, telling_cells
 from .csv_text import DELIMITERS, Decoded, Records, choose_delimiter, decode, split_records
 from .options import CappedProblems, ReadOptions
 from .table import ReadingsTable
@@ -272,7 +272,6 @@ def _even_rows(
 ) -> list[list[str]]:
     out = []
     for i, row in enumerate(body):
-        where = Location(name, lines[i], None, i + 1)
         if len(row) > width and not any(c.strip() for c in row[width:]):
             row = row[:width]
         if len(row) > width:
@@ -281,19 +280,24 @@ def _even_rows(
             hint = "put quotation marks around cells that hold the delimiter"
             if delimiter == "," and halves >= len(row) - width:
                 hint = "decimal commas? Export with delimiter ';', or put quotation marks around the numbers"
-            problems.add("row-length", f"{len(row)} cells under a header of {width}", hint, where)
+            problems.add(
+                "row-length", f"{len(row)} cells under a header of {width}", hint, Location(name, lines[i], None, i + 1)
+            )
             row = row[:width]
         elif len(row) < width:
             problems.add(
                 "row-length",
                 f"{len(row)} cells under a header of {width}",
                 "leave a cell empty, but keep its delimiter; was the file cut off?",
-                where,
+                Location(name, lines[i], None, i + 1),
             )
             row = row + [""] * (width - len(row))
-        if i and [clean(c) for c in row] == list(header):
+        if row[0].strip() == header[0] and i and [clean(c) for c in row] == list(header):
             problems.add(
-                "header-again", "the header comes again", "two files appended? Split them, or remove the row", where
+                "header-again",
+                "the header comes again",
+                "two files appended? Split them, or remove the row",
+                Location(name, lines[i], None, i + 1),
             )
         out.append(row)
     return out
@@ -301,14 +305,13 @@ def _even_rows(
 
 def _find_marks(raw: RawTable, delimiter: str, options: ReadOptions, problems: Problems) -> None:
     skip = {options.time_column, options.label_column, *options.keep, *options.ignore}
-    from .columns import LABEL_NAMES, NOTE_NAMES, TIME_NAMES
+    from .columns import LABEL_NAMES, NOTE_NAMES, TIME_NAMES, looks_dated
 
-    cells = (
-        clean(cell)
+    names = TIME_NAMES | NOTE_NAMES | LABEL_NAMES
+    cells = telling_cells(
+        column
         for name, column in zip(raw.header, raw.columns, strict=True)
-        if name not in skip and name.casefold() not in TIME_NAMES | NOTE_NAMES | LABEL_NAMES
-        for cell in column
-        if "." in cell or "," in cell
+        if name not in skip and name.casefold() not in names and not looks_dated(column)
     )
     raw.marks = detect_marks(
         cells, decimal=options.decimal, thousands=options.thousands, comma_is_usual=delimiter == ";"
