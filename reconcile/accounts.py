@@ -23,6 +23,9 @@ __all__ = ["Account", "Accounts", "Alternative", "SizedFault", "explain", "expla
 Array = npt.NDArray[np.float64]
 
 DEFAULT_FAULTS = 2
+MOST_FAULTS = 4
+"""Where nothing of up to two faults accounts for the evidence and the case states no number: look so far."""
+
 SIGMAS_OF_A_FAULT = 10.0
 """Prior spread of a bias in sigmas of its meter, where no span is stated; a choice of this program, no source."""
 
@@ -124,7 +127,9 @@ class Accounts:
     unexplored: float
 
 
-def explainer_of(model: Model, signatures: Array, settings: Settings, spec: CaseSpec | None) -> Explainer | None:
+def explainer_of(
+    model: Model, signatures: Array, settings: Settings, spec: CaseSpec | None, most: int | None = None
+) -> Explainer | None:
     """Prepare the search for explanations in one linearisation.
 
     Parameters
@@ -136,6 +141,8 @@ def explainer_of(model: Model, signatures: Array, settings: Settings, spec: Case
         Its `max_faults` is refused where every set would fit; None means the program's choice.
     spec : CaseSpec, optional
         For fault rates of single meters.
+    most : int, optional
+        Replaces `max_faults`.
 
     Returns
     -------
@@ -150,9 +157,11 @@ def explainer_of(model: Model, signatures: Array, settings: Settings, spec: Case
     checks = signatures.shape[0]
     if checks == 0:
         return None
-    asked = settings.max_faults
-    saturated = checks == 1 and (asked is None or asked == 1)
-    most = min(DEFAULT_FAULTS, max(checks - 1, 1)) if asked is None else asked
+    if most is None:
+        most = settings.max_faults
+    saturated = checks == 1 and most in (None, 1)
+    if most is None:
+        most = min(DEFAULT_FAULTS, max(checks - 1, 1))
     rate, size = _priors(model, settings, spec)
     try:
         return Explainer(

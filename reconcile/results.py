@@ -92,7 +92,7 @@ class Result:
     cautions: tuple[str, ...] = ()
     notices: tuple[Notice, ...] = ()
     provenance: Mapping[str, Any] = field(default_factory=dict)
-    _explainers: dict[int, Explainer | None] = field(default_factory=dict, repr=False, compare=False)
+    _explainers: dict[tuple[int, int | None], Explainer | None] = field(default_factory=dict, repr=False, compare=False)
     _looked_at: dict[int, Snapshot] = field(default_factory=dict, repr=False, compare=False)
 
     # ------------------------------------------------------------------ arrays
@@ -162,8 +162,13 @@ class Result:
 
     @cached_property
     def words(self) -> tuple[str, ...]:
-        """Word of evidence of each snapshot."""
-        return tuple(word_of_evidence(int(c), p) for c, p in zip(self.checks, self.p_value, strict=True))
+        """Word of evidence of each snapshot; one that a corrected test of a reading names does not agree."""
+        words = [word_of_evidence(int(c), p) for c, p in zip(self.checks, self.p_value, strict=True)]
+        for i in [i for i, w in enumerate(words) if w == "watch"]:
+            tests = self.snapshot(i).meter_tests
+            if np.nanmax(np.abs(tests.z), initial=0.0) > tests.limit:
+                words[i] = "does not agree"
+        return tuple(words)
 
     @cached_property
     def suspicious(self) -> npt.NDArray[np.bool_]:
@@ -211,16 +216,24 @@ class Result:
             self._looked_at[index] = look(self, index)
         return self._looked_at[index]
 
-    def explainer(self, index: int) -> Explainer | None:
-        """Return the prepared search for explanations that a snapshot uses; None without checks."""
-        g = int(self.table.group_of[index])
-        if g not in self._explainers:
+    def explainer(self, index: int, most: int | None = None) -> Explainer | None:
+        """Return the prepared search for explanations that a snapshot uses; None without checks.
+
+        Parameters
+        ----------
+        index : int
+            Snapshot, counted from 0.
+        most : int, optional
+            Most faults at once; what the case says when left out.
+        """
+        key = (int(self.table.group_of[index]), most)
+        if key not in self._explainers:
             from .accounts import explainer_of
             from .snapshot import signatures
 
             shifts = signatures(self.model, self.group(index))
-            self._explainers[g] = explainer_of(self.model, shifts, self.settings, self.spec)
-        return self._explainers[g]
+            self._explainers[key] = explainer_of(self.model, shifts, self.settings, self.spec, most)
+        return self._explainers[key]
 
     def figure_values(self, index: int = 0) -> tuple[FigureValue, ...]:
         """Return the derived values of the case for one snapshot, with uncertainties and shares."""

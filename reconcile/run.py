@@ -113,7 +113,7 @@ class Case:
         if named is None:
             return None
         text = named if isinstance(named, str) else str(named.get("file"))
-        return (self.parts.spec.path.parent / text).resolve()
+        return self.parts.spec.path.parent / text
 
     # ------------------------------------------------------------------ run
 

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
-from .accounts import Accounts, explain
+from .accounts import MOST_FAULTS, Accounts, explain
 from .adjust.eliminate import dependent_rows
 from .adjust.structure import checks, ties
 from .adjust.table import Group
@@ -73,7 +73,7 @@ class ReadingLine:
         ``checked``, ``not checked``, ``calculated`` (absent, but determined by the others) or
         ``cannot be calculated``.
     word : str
-        ``sound so far``, ``suspect``, ``tied``, ``not checked``, ``left out``, ``no reading``.
+        ``sound so far``, ``suspect``, ``tied``, ``cannot tell``, ``not checked``, ``left out``, ``no reading``.
     origin : str
         Where its sigma comes from.
     """
@@ -288,14 +288,13 @@ def look(result: Result, index: int) -> Snapshot:
     tests = signature_tests(parity, shifts, settings.level)
     meters = model.meters
     meter_tests = signature_tests(parity, shifts[:, meters], settings.level)
-    explainer = result.explainer(index)
-    accounts = None if explainer is None else explain(explainer, parity, model, settings.level)
+    accounts = _accounts(result, index, parity, test)
     faults = _faults(candidates, tests, shifts, settings)
     readings = _readings(result, index, group, x, meter_tests, shifts, accounts)
     return Snapshot(
         label=result.labels[index],
         readings=readings,
-        variables=_variables(result, index, group, x),
+        variables=_variables(result, group, x),
         balances=_balances(result, index, group, x),
         faults=faults,
         test=test,
@@ -308,6 +307,21 @@ def look(result: Result, index: int) -> Snapshot:
         steps=group.steps,
         rounds=group.rounds,
     )
+
+
+def _accounts(result: Result, index: int, parity: Array, test: GlobalTest) -> Accounts | None:
+    """Explanations; with more faults step by step where the case leaves their number open and fewer do not do."""
+    most = None
+    while True:
+        explainer = result.explainer(index, most)
+        if explainer is None:
+            return None
+        found = explain(explainer, parity, result.model, result.settings.level)
+        more = explainer.max_faults + 1
+        stuck = found.conclusion is Conclusion.NOT_FOUND and result.settings.max_faults is None
+        if not stuck or more > min(MOST_FAULTS, test.checks - 1):
+            return found
+        most = more
 
 
 # ------------------------------------------------------------------ lines
@@ -328,7 +342,7 @@ def _readings(
     value_at = x[model.columns]
     reference = np.where(np.isfinite(base), base, value_at) if settings.percent_at == "reading" else value_at
     before = model.total_sigma(reference) / np.abs(model.factor)
-    words = _words(model, accounts)
+    words = _words(model, accounts, tests)
     place = {int(i): j for j, i in enumerate(model.meters)}
     lines = []
     for i, r in enumerate(model.readings):
@@ -382,10 +396,12 @@ def _combination(reads: Sequence[tuple[str, float]]) -> str:
     return text.removeprefix(" ")
 
 
-def _words(model: Model, accounts: Accounts | None) -> dict[str, str]:
+def _words(model: Model, accounts: Accounts | None, tests: SignatureTests) -> dict[str, str]:
     """Word for each reading that an explanation names: suspect, or tied where several fit."""
     if accounts is None or not accounts.standing:
-        return {}
+        open_ = accounts is not None and accounts.conclusion in (Conclusion.NOT_FOUND, Conclusion.CANNOT_TELL)
+        above = np.abs(tests.z) > tests.limit
+        return {model.tags[i]: "cannot tell" for i, a in zip(model.meters, above, strict=True) if open_ and a}
     best = accounts.standing[0]
     first = {f.candidate.name for f in best.alternatives[0].faults if f.candidate.reading >= 0}
     if accounts.conclusion is Conclusion.ONE:

@@ -145,19 +145,20 @@ def read_unit(text: str) -> Unit:
 
 
 def _read(text: str, reader_class: type[_Reader]) -> Unit:
-    gauge = _GAUGE.search(text)
-    plain = _GAUGE.sub(r"\1", text)
-    plain = re.sub(r"\s+per\s+", "/", plain.replace("−", "-"))
-    moisture = ""
-    water = _MOISTURE.search(plain)
-    if water:
-        moisture = water.group(1)
-        plain = (plain[: water.start()] + " " + plain[water.end() :]).strip(" ,")
+    plain = text.replace("−", "-")
+    # The gas reference goes first: a pressure in it has a gauge or none of its own.
     reference = _REFERENCE_GAS.search(plain)
     size = Fraction(1)
     if reference:
         size = _reference(text, reference.group(2), reference.group(1))
         plain = f"{plain[: reference.start()]}reference_m3{plain[reference.end() :]}"
+    gauge = _GAUGE.search(plain)
+    plain = re.sub(r"\s+per\s+", "/", _GAUGE.sub(r"\1", plain))
+    moisture = ""
+    water = _MOISTURE.search(plain)
+    if water:
+        moisture = water.group(1)
+        plain = (plain[: water.start()] + " " + plain[water.end() :]).strip(" ,")
     reader = reader_class(text, plain, size)
     alone = len(reader.parts) == 1 and reader.parts[0][1] == 1
     dimensions = tuple(sorted((k, v) for k, v in reader.dimensions.items() if v))
@@ -261,6 +262,8 @@ class _Reader:
                     code="unit-ambiguous",
                     hint="use parentheses, e.g. kJ/(kg K), or put the factor first",
                 )
+            if kind == "percent":
+                raise self._unknown()
             if sign in ("*", "·", "⋅", "."):
                 self.place += 1
             self._factor(power)

@@ -95,7 +95,7 @@ class SettingsModel(_Model):
     level: float = Field(0.05, gt=0, lt=1, description="Chance of a false alarm that the tests may take")
     power: float = Field(0.90, gt=0, lt=1, description="Chance of noticing a fault of the smallest detectable size")
     max_faults: int | None = Field(
-        2, ge=1, description="Most faults that an explanation may combine; null leaves it to the program"
+        None, ge=0, description="Most faults that an explanation may combine; null leaves it to the program"
     )
     percent_at: Literal["adjusted", "reading"] = Field(
         "adjusted", description="At which value a sigma in percent is evaluated"

@@ -195,7 +195,7 @@ class Settings:
 
     level: float = 0.05
     power: float = 0.90
-    max_faults: int | None = 2
+    max_faults: int | None = None
     percent_at: Literal["adjusted", "reading"] = "adjusted"
     fault_rate: float = 0.02
     leak_rate: float = 0.01
