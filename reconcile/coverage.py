@@ -262,12 +262,14 @@ def _lines(
         if c.reading >= 0:
             r = model.readings[i]
             combination = [(model.system.column(n), k) for n, k in r.reads] if r.kind != "cause" else []
-            cover = sum(k * group.cover[col] for col, k in combination) if combination else group.cover[model.columns[i]]
+            combination = combination or [(int(model.columns[i]), 1.0)]
+            cover = sum(k * group.cover[col] for col, k in combination)
             shown = (float(value[i]) - r.offset) / r.factor
             before = float(total[i] / abs(r.factor))
             after = float(np.linalg.norm(cover) / abs(r.factor))
             noticed = bool(group.checked[i])
-            share = float(np.clip(1 - (after / before) ** 2, 0, 1)) if noticed else 0.0
+            moves = sum(k * group.response[col, i] for col, k in combination)
+            share = float(np.clip(1.0 - moves, 0.0, 1.0)) if noticed else 0.0
             if not noticed:
                 needs = _needs_check(model, group, i)
         single = smallest_detectable(float(norms[i]), settings.level, settings.power) if noticed else np.inf

@@ -275,18 +275,12 @@ def _shares(gradient: Array, result: Result, group: object) -> dict[str, float]:
     from .adjust.table import Group
 
     assert isinstance(group, Group)
-    a = group.adjuster
-    # Adjusted values are linear in the readings: x = diag(s) Q2 (Q2' - gain Q1') y / s.
-    weights = gradient[group.columns[group.present]] + gradient[group.free] @ (-a.elimination.recover @ a.measured)
-    into_q2 = (weights * a.sigma) @ a.q2
-    per_reading = a.q2 @ into_q2
-    if a.gain.size:
-        per_reading = per_reading - a.q1 @ (a.gain.T @ into_q2)
+    per_reading = (gradient @ group.response) * group.sigma
     variance = per_reading**2
     total = variance.sum()
     if total <= 0:
         return {}
-    out = {result.model.tags[i]: float(v / total) for i, v in zip(group.present, variance, strict=True)}
+    out = {result.model.tags[i]: float(v / total) for i, v in enumerate(variance)}
     return {k: v for k, v in sorted(out.items(), key=lambda kv: -kv[1]) if v > 1e-6}
 
 

@@ -377,7 +377,7 @@ def _readings(
                 sigma=spread,
                 adjustment=float(move),
                 in_sigmas=float(move / before[i]),
-                share=0.0 if gone else float(np.clip(1.0 - (spread / before[i]) ** 2, 0.0, 1.0)) if checked else 0.0,
+                share=float(np.clip(1.0 - sum(c * group.response[k, i] for k, c in combination), 0.0, 1.0)) if checked else 0.0,
                 z=float(tests.z[place[i]]) if i in place and checked else np.nan,
                 smallest=smallest_detectable(length, settings.level, settings.power) if checked else np.inf,
                 klass=klass,

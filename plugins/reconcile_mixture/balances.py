@@ -193,8 +193,8 @@ def _write_component(
                 steady,
                 unit=part.amount_unit,
                 says=f"{{size}} {{unit}} of {part.name} gathered in {{item}} (negative: came out of its inventory)",
-                separate=f"sample {{item}} at the start and the end of the period, or take a longer period: {part.name} "
-                "that gathers must come out again",
+                separate="sample {item} at the start and the end of the period, or take a longer period: "
+                "what gathers must come out again",
             )
             closure = closure - place([names.index(n) for n in steady], len(names)) @ gathered
     system.require(

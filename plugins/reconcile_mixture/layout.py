@@ -300,7 +300,7 @@ def _complete(options: MixtureOptions, parts: tuple[Part, ...]) -> frozenset[str
         if len(listed) < 2:
             raise ValueError(
                 f"the components of the {phase} are said to be complete, but "
-                f"{'only ' + listed[0] + ' is' if listed else 'none is'} listed; list all of them, or leave complete out"
+                f"{'only ' + listed[0] + ' is' if listed else 'none is'} listed; list all, or leave complete out"
             )
     return frozenset(complete)
 

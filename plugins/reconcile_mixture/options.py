@@ -34,7 +34,8 @@ _RESERVED = {
 def _check_name(name: str) -> str:
     if not re.fullmatch(r"[A-Za-z0-9_-]+", name) or name in _RESERVED:
         raise ValueError(
-            f"{name!r} cannot name a component: use letters, digits, _ and -, and none of {', '.join(sorted(_RESERVED))}"
+            f"{name!r} cannot name a component: use letters, digits, _ and -, "
+            f"and none of {', '.join(sorted(_RESERVED))}"
         )
     return name
 

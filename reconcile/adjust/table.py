@@ -79,6 +79,18 @@ class Group:
         return out
 
     @cached_property
+    def response(self) -> Array:
+        """How much each column moves per unit of each reading, shape (n, k); zero for absent readings."""
+        a = self.adjuster
+        inner = a.q2.T if not a.gain.size else a.q2.T - a.gain @ a.q1.T
+        measured = (a.sigma[:, None] * a.q2) @ (inner / a.sigma)
+        out = np.zeros((self.x.shape[1], self.columns.size))
+        out[np.ix_(self.columns[self.present], self.present)] = measured
+        out[np.ix_(self.free, self.present)] = -a.elimination.recover @ (a.measured @ measured)
+        out[:, self.absent] = 0.0
+        return out
+
+    @cached_property
     def determined(self) -> Bools:
         """Whether each column is determined by readings and balances, shape (n,)."""
         out = np.ones(self.x.shape[1], dtype=bool)

@@ -7,6 +7,7 @@ memory.
 
 from __future__ import annotations
 
+import difflib
 import math
 import re
 from collections.abc import Mapping
@@ -78,7 +79,7 @@ def read_sigma(
 
     stated = [k for k in STATEMENTS if k in data]
     if not stated:
-        if required:
+        if required and not _misspelt(data):
             complain(None, "sigma-missing", f"{owner} has no sigma, and none is guessed silently", f"write {_EXAMPLE}")
         for key in ("coverage", "resolution"):
             if key in data and not required:
@@ -133,6 +134,12 @@ def read_sigma(
         except Refusal as refused:
             complain("resolution", refused.code, refused.message, refused.hint)
     return SigmaSpec(tuple(parts), guess) if len(problems.found) == before else None
+
+
+def _misspelt(data: Mapping[str, Any]) -> bool:
+    """Whether a key looks like one of the three; it is told as unknown, and once is enough."""
+    others = [k for k in data if k not in ("span", "unit", "reads", "reading")]
+    return any(difflib.get_close_matches(s, others, n=1, cutoff=0.7) for s in STATEMENTS)
 
 
 def _coverage(data: Mapping[str, Any], owner: str, complain: Any) -> float:
@@ -243,6 +250,8 @@ class _Component:
             return f"write {number:g} % of span with e.g. span: 0 to 40 {self.unit}"
         if bare in _READING_WORDS:
             return f"write {number:g} % of reading"
+        if re.search(r"[+,;]|\band\b", bare):
+            return "write several components as a list, e.g. [0.5 % of reading, 0.1 L/min]"
         near = did_you_mean(f"of {bare}", _OF) or did_you_mean(bare, ["reading", "span"])
         if near:
             word = "span" if "span" in near else "value" if "value" in near else "reading"
@@ -264,7 +273,9 @@ class _Component:
                     "sigma-unreadable", f"{self.subject}: {text!r} is not understood", self._unknown_hint(text)
                 ) from None
             hint = problem.hint
-            if re.search(r"\bof\b|,|;|\+", text):
+            if re.fullmatch(rf"{_NUMBER}\s*of\s+\w+", text):
+                hint = f"write {text.replace('of', '% of', 1)}"
+            elif re.search(r"\bof\b|,\s|;|\+", text):
                 hint = "write components as a list, e.g. [0.5 % of reading, 0.1 L/min]"
             raise Refusal(problem.code, f"{self.subject}: {problem.message}", hint) from None
         self._positive(value, text)

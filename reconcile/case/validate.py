@@ -116,11 +116,12 @@ def _tell(
         "less_than_equal": "at most",
     }
     if kind in limits:
-        limit = next((context[k] for k in ("gt", "ge", "lt", "le") if k in context), "")
-        return Problem("out-of-range", f"{subject} is {shown}", f"write a number {limits[kind]} {limit}", where)
+        limit = next((context[k] for k in ("gt", "ge", "lt", "le") if k in context), 0.0)
+        return Problem("out-of-range", f"{subject} is {shown}", f"write a number {limits[kind]} {limit:g}", where)
     if kind in ("too_short", "string_too_short"):
         least = context.get("min_length", 1)
-        return Problem("too-short", f"{subject} has fewer than {least} entries", _describe(model, (), last), where)
+        what = "is empty" if least == 1 else f"has fewer than {least} entries"
+        return Problem("too-short", f"{subject} {what}", f"write at least {least}", where)
     text = str(error["msg"]).removeprefix("Value error, ").removeprefix("Assertion failed, ")
     return Problem("option-refused", f"{subject}: {text}", "", where)
 

@@ -260,6 +260,8 @@ def _explain(name: str, text: str, error: yaml.MarkedYAMLError) -> Problem:
             "a colon is not expected here",
             "put text with ': ' in quotes, or begin the key on its own line with the right indentation",
         )
+    if "unexpected ':'" in problem:
+        return at("colon-unexpected", "a colon is not expected here", "put a space behind the colon of a key")
     if "undefined alias" in problem:
         return at("alias-unknown", f"{problem}", "define it with & before it is used, or put the text in quotes")
     if "nesting depth" in problem:

@@ -1,0 +1,44 @@
+"""Shared fixtures."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+
+import numpy as np
+import pytest
+from hypothesis import settings
+
+ROOT = Path(__file__).resolve().parent.parent
+
+settings.register_profile("default", deadline=None, derandomize=True, max_examples=50)
+settings.load_profile("default")
+
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
+
+@pytest.fixture(autouse=True)
+def _global_random_state_is_left_alone():
+    before = np.random.get_state()[1].copy()  # noqa: NPY002 - this is the guard
+    yield
+    after = np.random.get_state()[1]  # noqa: NPY002
+    assert np.array_equal(before, after), "the global random state was used; pass a Generator"
+
+
+@pytest.fixture
+def datasets() -> Path:
+    return ROOT / "datasets"
+
+
+@pytest.fixture
+def write_case(tmp_path):
+    """Write a case file (and readings) into a folder of their own; returns the path of the case."""
+
+    def write(text: str, readings: str | None = None, name: str = "case.yaml") -> Path:
+        path = tmp_path / name
+        path.write_text(text, encoding="utf-8")
+        if readings is not None:
+            (tmp_path / "readings.csv").write_text(readings, encoding="utf-8")
+        return path
+
+    return write
