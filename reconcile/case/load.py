@@ -19,20 +19,13 @@ from .tables import read_table
 from .validate import keys_of, validated
 from .yaml_source import read_yaml
 
-__all__ = ["read_case"]
+__all__ = ["read_case", "read_what_stands"]
 
 _METER_OPTIONS = ("description", "fault_rate", "reading")
 
 
 def read_case(path: str | FilePath, *, option_models: Mapping[str, DomainModels] | None = None) -> CaseSpec:
-    """Read and check a case file.
-
-    Parameters
-    ----------
-    path : path
-        The YAML file.
-    option_models : mapping of domain name to DomainModels, optional
-        The installed domains; without it, what belongs to domains is taken as it stands.
+    """Read and check a case file; see `read_what_stands`, which goes on where this raises.
 
     Returns
     -------
@@ -42,10 +35,42 @@ def read_case(path: str | FilePath, *, option_models: Mapping[str, DomainModels]
     ------
     InputError
         With all problems of the file.
+    """
+    problems = Problems(str(path))
+    spec = read_what_stands(path, problems, option_models=option_models)
+    problems.raise_if_any()
+    if spec is None:  # pragma: no cover - whatever is refused has a problem
+        raise InputError(Problem("case-refused", "the case could not be read", where=Location(str(path))))
+    return spec
+
+
+def read_what_stands(
+    path: str | FilePath, problems: Problems, *, option_models: Mapping[str, DomainModels] | None = None
+) -> CaseSpec | None:
+    """Read a case file, and return what can be used of it even where something is wrong.
+
+    Parameters
+    ----------
+    path : path
+        The YAML file.
+    problems : Problems
+        Takes whatever is wrong.
+    option_models : mapping of domain name to DomainModels, optional
+        The installed domains; without it, what belongs to domains is taken as it stands.
+
+    Returns
+    -------
+    CaseSpec or None
+        Without the entries that were refused; None where domains, streams or nodes are not right, since nothing
+        can be built on those.
+
+    Raises
+    ------
+    InputError
+        If the file is no YAML, or no case at all.
     MissingExtra
         If a table is a spreadsheet and the library that reads it is not installed.
     """
-    problems = Problems(str(path))
     data, places = read_yaml(path, problems)
     if not isinstance(data, dict):
         problems.add(
@@ -62,10 +87,7 @@ def read_case(path: str | FilePath, *, option_models: Mapping[str, DomainModels]
     top = validated(CaseModel, data, path=(), owner="the case", places=places, problems=problems)
     reader = _CaseReader(FilePath(path), data, places, problems, option_models)
     spec = reader.read()
-    problems.raise_if_any()
-    if top is None or spec is None:  # pragma: no cover - whatever is refused has a problem
-        raise InputError(Problem("case-refused", "the case could not be read", where=Location(str(path))))
-    return spec
+    return None if top is None else spec
 
 
 def _version(data: Mapping[str, Any], places: Places, problems: Problems) -> None:
@@ -113,6 +135,7 @@ class _CaseReader:
                 self.places.where(("streams",), key=True),
             )
         nodes = read_nodes(self._block("nodes"), streams, options, complete=len(streams) == len(raw_streams))
+        sound = not self.problems
         raw_meters = self._table("meters", ("tag", "name"), tuple(keys_of(MeterModel)), any_key=False)
         meters = {t: m for t, v in raw_meters.items() if (m := self._meter(t, v)) is not None}
         known = {k.variable: k for n, v in self._block("known").items() if (k := self._known(n, v)) is not None}
@@ -122,7 +145,7 @@ class _CaseReader:
         figures = self._figures()
         readings = self._readings()
         settings = self._settings()
-        if self.problems:
+        if not sound:
             return None
         return CaseSpec(
             title=str(self.data.get("title") or ""),

@@ -64,7 +64,7 @@ class _Checker:
         """Whether there is such a variable; otherwise a problem is noted."""
         if name in self.variables:
             return True
-        hint = self._nearest(name) or self._all_near(name)
+        hint = self._glued(name) or self._nearest(name) or self._some()
         self.problems.extend(
             [
                 Problem(
@@ -138,9 +138,12 @@ class _Checker:
         near = did_you_mean(item, [i for i, q in items.items() if quantity in q]) or did_you_mean(item, items)
         return near.replace("'?", f".{quantity}'?") if near else ""
 
-    def _all_near(self, name: str) -> str:
+    def _glued(self, name: str) -> str:
         if "-" in name and any(part in self.variables for part in name.split("-")):
             return "a minus needs a space before and behind it, since names may hold one"
+        return ""
+
+    def _some(self) -> str:
         if not self.variables:
             return "the domains of this case declare no variables"
         some = ", ".join(list(self.variables)[:6])

@@ -129,6 +129,8 @@ def read_streams(data: dict[str, Any], options: OptionReader) -> dict[str, Strea
                 continue
             extra = {k: v for k, v in value.items() if k != "path"}
             route, spot = value["path"], (*path, "path")
+            if isinstance(route, (int, float)):
+                route = places.text(spot, route)
         checked = options.read("stream", extra, path, owner)
         try:
             source, target = _ends(route, owner)

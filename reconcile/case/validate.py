@@ -68,7 +68,14 @@ def validated(
     try:
         return model.model_validate(data)
     except ValidationError as error:
-        problems.extend(_tell(e, model, data, path, owner, places, more_keys) for e in error.errors(include_url=False))
+        errors = error.errors(include_url=False)
+        unknown = {e["loc"] for e in errors if e["type"] == "extra_forbidden"}
+        # A misspelt key is one mistake: it is told as unknown, not once more as missing.
+        problems.extend(
+            _tell(e, model, data, path, owner, places, more_keys)
+            for e in errors
+            if e["type"] != "missing" or not _is_near(e["loc"], unknown)
+        )
         return None
 
 
@@ -137,6 +144,11 @@ def _steps(loc: tuple[Any, ...], data: Any) -> tuple[tuple[Any, ...], Any]:
             continue
         inside.append(step)
     return tuple(inside), at
+
+
+def _is_near(missing: tuple[Any, ...], unknown: set[tuple[Any, ...]]) -> bool:
+    beside = [str(u[-1]) for u in unknown if u[:-1] == missing[:-1]]
+    return bool(did_you_mean(str(missing[-1]), beside))
 
 
 def _keys_at(model: type[BaseModel], inside: tuple[Any, ...]) -> list[str]:
