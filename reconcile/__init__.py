@@ -5,11 +5,12 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 from ._version import __version__
-from .errors import InputError, MissingExtra, Notice, PluginError, ReconcileError, SolveError
+from .errors import InputError, MissingExtra, Notice, PluginError, ReconcileError, SolveError, did_you_mean
 from .hookspecs import Domain, Section, hookimpl
 
 if TYPE_CHECKING:
     from .export import load_corrected
+    from .expression import Expression
     from .network import OUTSIDE, Network
     from .results import Result
     from .run import Case, load_case
@@ -19,6 +20,7 @@ if TYPE_CHECKING:
 _LAZY = {
     "Network": "network",
     "OUTSIDE": "network",
+    "Expression": "expression",
     "System": "system",
     "stack": "system",
     "Case": "run",
@@ -31,6 +33,7 @@ __all__ = [
     "OUTSIDE",
     "Case",
     "Domain",
+    "Expression",
     "InputError",
     "MissingExtra",
     "Network",
@@ -42,6 +45,7 @@ __all__ = [
     "SolveError",
     "System",
     "__version__",
+    "did_you_mean",
     "hookimpl",
     "load_case",
     "load_corrected",

@@ -10,11 +10,11 @@ from typing import Any
 import numpy as np
 
 from . import units
-from .case.load import read_case
+from .case.load import read_what_stands
 from .case.references import check_references
 from .case.spec import CaseSpec, DomainModels, KnownSpec, MeterSpec, SharedErrorSpec, SigmaSpec
 from .domains import Plugins
-from .errors import Notice, Problems
+from .errors import InputError, Notice, Problems
 from .model import Model, Reading, SharedError, build_model
 from .network import Network
 from .system import System
@@ -66,7 +66,11 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
     PluginError
         If a domain failed.
     """
-    spec = read_case(path, option_models=option_models(plugins))
+    problems = Problems(str(path))
+    spec = read_what_stands(path, problems, option_models=option_models(plugins))
+    if spec is None:
+        problems.raise_if_any()
+    assert spec is not None
     network = Network.from_paths(
         {name: (s.source, s.target) for name, s in spec.streams.items()},
         stream_options={name: s.options for name, s in spec.streams.items()},
@@ -74,12 +78,14 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
     )
     system = System()
     kinds = {name: plugins.domains[name].domain.options for name in spec.domains}
-    plugins.build(
-        network,
-        system,
-        [(name, None if kinds[name] is None else kinds[name].model_validate(raw)) for name, raw in spec.domains.items()],
-    )
-    problems = Problems(str(spec.path))
+    chosen_options = [
+        (name, None if kinds[name] is None else kinds[name].model_validate(raw)) for name, raw in spec.domains.items()
+    ]
+    try:
+        plugins.build(network, system, chosen_options)
+    except InputError as refused:
+        problems.extend(refused.problems)
+        problems.raise_if_any()
     check_references(spec, system.units(), problems)
     problems.raise_if_any()
     shared, independent = _shared_errors(spec.shared_errors)

@@ -137,7 +137,7 @@ class named:
     def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, _trace: object) -> bool:
         if error is None or not isinstance(error, Exception) or isinstance(error, (PluginError, InputError)):
             return False
-        if self.user_errors and type(error) is ValueError:
+        if self.user_errors and type(error) is ValueError and _is_refusal(error):
             raise InputError(
                 Problem("domain-refused", f"{self.doing}: {error}", where=Location(tag=self.plugin))
             ) from error
@@ -146,6 +146,15 @@ class named:
             f"{self.doing} failed with {type(error).__name__}: {error}",
             hint="report this to the author of the plugin; the program itself is well",
         ) from error
+
+
+def _is_refusal(error: ValueError) -> bool:
+    """Whether a domain refused the case: it raised itself, and not because it misused the program or the network."""
+    trace = error.__traceback__
+    while trace is not None and trace.tb_next is not None:
+        trace = trace.tb_next
+    raised_in = trace.tb_frame.f_code.co_filename if trace is not None else ""
+    return Path(raised_in).parent != Path(__file__).parent and "read-only" not in str(error)
 
 
 def _check_rows(system: System, first: int, info: DomainInfo) -> None:
