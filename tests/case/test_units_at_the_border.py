@@ -101,9 +101,7 @@ def test_temperatures_have_an_offset_and_their_differences_have_none():
     assert factor_offset("kJ/(kg degC)", "kJ/(kg K)") == (1.0, 0.0)
 
 
-@pytest.mark.parametrize(
-    "text", ["m3/h", "m^3/h", "m**3/h", "m³/h", "m3 / h", "m3 h-1", "m3·h^-1".replace("^-1", "-1"), "m3 per h"]
-)
+@pytest.mark.parametrize("text", ["m3/h", "m^3/h", "m**3/h", "m³/h", "m3 / h", "m3 h-1", "m3·h-1", "m3 per h"])
 def test_one_unit_may_be_spelt_in_several_ways(text):
     assert factor_offset(text, "L/h") == (1000.0, 0.0)
 
