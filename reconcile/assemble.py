@@ -12,7 +12,7 @@ import numpy as np
 from . import units
 from .case.load import read_what_stands
 from .case.references import check_references
-from .case.spec import CaseSpec, DomainModels, KnownSpec, MeterSpec, SharedErrorSpec, SigmaSpec
+from .case.spec import CaseSpec, DomainModels, KnownSpec, MeterSpec, SharedErrorSpec
 from .domains import Plugins
 from .errors import InputError, Notice, Problems
 from .model import Model, Reading, SharedError, build_model
@@ -77,10 +77,10 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
         node_options=spec.nodes,
     )
     system = System()
-    kinds = {name: plugins.domains[name].domain.options for name in spec.domains}
-    chosen_options = [
-        (name, None if kinds[name] is None else kinds[name].model_validate(raw)) for name, raw in spec.domains.items()
-    ]
+    chosen_options = []
+    for name, raw in spec.domains.items():
+        kind = plugins.domains[name].domain.options
+        chosen_options.append((name, None if kind is None else kind.model_validate(raw)))
     try:
         plugins.build(network, system, chosen_options)
     except InputError as refused:
@@ -91,7 +91,9 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
     shared, independent = _shared_errors(spec.shared_errors)
     readings = [_meter(m, system, independent.get(m.tag, 1.0)) for m in spec.meters.values()]
     readings += [_prior(k, system) for k in spec.known.values() if k.sigma is not None]
-    fixed = {k.variable: _to_variable(k.value, k.unit, k.variable, system) for k in spec.known.values() if k.sigma is None}
+    fixed = {
+        k.variable: _to_variable(k.value, k.unit, k.variable, system) for k in spec.known.values() if k.sigma is None
+    }
     design = {name: _to_variable(value, unit, name, system) for name, (value, unit) in spec.design.items()}
     model = build_model(system, readings, fixed=fixed, shared=shared, design=design)
     chosen = [plugins.domains[d].domain for d in spec.domains]
@@ -184,9 +186,13 @@ def _doubts(spec: CaseSpec) -> list[Notice]:
     laws = {tuple((p.kind, p.value) for p in m.sigma.components) for m in spec.meters.values()}
     if len(spec.meters) > 2 and laws == {(("absolute", 1.0),)}:
         out.append(
-            Notice("same-sigma", f"All {len(spec.meters)} sigmas are 1. The weights then depend on the units. Intended?")
+            Notice(
+                "same-sigma", f"All {len(spec.meters)} sigmas are 1. The weights then depend on the units. Intended?"
+            )
         )
     guessed = [m.tag for m in spec.meters.values() if m.sigma.marked_guess]
     if guessed:
-        out.append(Notice("guessed-sigma", f"The sigma of {', '.join(guessed)} is a guess that the case marks as such."))
+        out.append(
+            Notice("guessed-sigma", f"The sigma of {', '.join(guessed)} is a guess that the case marks as such.")
+        )
     return out

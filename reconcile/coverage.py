@@ -167,7 +167,9 @@ def coverage_of(case: Case) -> Coverage:
     for kind in dict.fromkeys(kinds):
         own = shifts[:, kinds == kind]
         live = np.linalg.norm(own, axis=0) > 0
-        limit_ratio[kind] = familywise_limit(own[:, live], settings.level).limit if live.any() and group.checks else np.nan
+        limit_ratio[kind] = (
+            familywise_limit(own[:, live], settings.level).limit if live.any() and group.checks else np.nan
+        )
     lines = _lines(model, group, settings, norms, limit_ratio)
     alike = classes(shifts) if group.checks else None
     pairs = near_parallel(shifts) if group.checks else None
@@ -238,7 +240,9 @@ def _from_readings(case: Case, values: Array) -> Array:
         return values
     table = case.read(None)
     out = values.copy()
-    base = case.model.to_base(np.where(table.usable, table.values, np.nan)[:, [table.columns.index(t) for t in case.tags]])
+    base = case.model.to_base(
+        np.where(table.usable, table.values, np.nan)[:, [table.columns.index(t) for t in case.tags]]
+    )
     for i in np.flatnonzero(~np.isfinite(out)):
         seen = base[np.isfinite(base[:, i]), i]
         if seen.size:

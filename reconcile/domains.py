@@ -10,7 +10,7 @@ from dataclasses import dataclass, field
 from importlib.metadata import EntryPoint, entry_points
 from pathlib import Path
 from types import ModuleType
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 import pluggy
 
@@ -134,7 +134,7 @@ class named:
     def __enter__(self) -> None:
         return None
 
-    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, _trace: object) -> bool:
+    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, _trace: object) -> Literal[False]:
         if error is None or not isinstance(error, Exception) or isinstance(error, (PluginError, InputError)):
             return False
         if self.user_errors and type(error) is ValueError and _is_refusal(error):
@@ -174,20 +174,17 @@ def _check_rows(system: System, first: int, info: DomainInfo) -> None:
                 f"in balance {block.names[int(wrong[0])]!r}",
             )
         if len(set(block.names)) != len(block.names):
-            raise PluginError(
-                info.plugin, f"domain {info.domain.name!r} named two balances of {block.kind!r} alike"
-            )
+            raise PluginError(info.plugin, f"domain {info.domain.name!r} named two balances of {block.kind!r} alike")
 
 
 def _ordered(chosen: Sequence[tuple[str, Any]], known: dict[str, DomainInfo]) -> list[tuple[str, Any]]:
     """Order of writing: that of the case file, but every domain behind those it reads from."""
-    waiting, done = list(chosen), []
+    waiting = list(chosen)
+    done: list[tuple[str, Any]] = []
     names = {n for n, _ in chosen}
     while waiting:
         ready = [
-            c
-            for c in waiting
-            if all(a not in names or a in {d for d, _ in done} for a in known[c[0]].domain.after)
+            c for c in waiting if all(a not in names or a in {d for d, _ in done} for a in known[c[0]].domain.after)
         ]
         if not ready:
             ring = ", ".join(n for n, _ in waiting)
@@ -257,9 +254,7 @@ def load_plugins(
 
 def _import_file(path: Path) -> ModuleType:
     if not path.is_file():
-        raise InputError(
-            Problem("plugin-file", f"plugin file {str(path)!r} does not exist", "check the path")
-        )
+        raise InputError(Problem("plugin-file", f"plugin file {str(path)!r} does not exist", "check the path"))
     name = f"reconcile_plugin_file_{re.sub(r'[^A-Za-z0-9_]', '_', path.stem)}"
     spec = importlib.util.spec_from_file_location(name, path)
     if spec is None or spec.loader is None:
@@ -275,9 +270,7 @@ def _add(plugins: Plugins, name: str, module: Any, origin: str) -> None:
     """Register one plugin and its domains; a misspelt hook or an unusable domain is an error of that plugin."""
     manager = plugins.manager
     if manager.has_plugin(name):
-        raise PluginError(
-            name, f"two plugins are named {name!r}", code="name-clash", hint="rename or uninstall one"
-        )
+        raise PluginError(name, f"two plugins are named {name!r}", code="name-clash", hint="rename or uninstall one")
     misspelt = [
         a
         for a in vars(module)
@@ -311,13 +304,9 @@ def _add_domains(plugins: Plugins, name: str, module: Any, origin: str) -> None:
         offered = list(hook())
     for kind in offered:
         if not (isinstance(kind, type) and issubclass(kind, Domain)):
-            raise PluginError(
-                name, f"reconcile_domains offered {kind!r}, which is no subclass of reconcile.Domain"
-            )
+            raise PluginError(name, f"reconcile_domains offered {kind!r}, which is no subclass of reconcile.Domain")
         if not re.fullmatch(r"[a-z][a-z0-9_]*", kind.name or ""):
-            raise PluginError(
-                name, f"domain class {kind.__name__} needs a lower-case name, got {kind.name!r}"
-            )
+            raise PluginError(name, f"domain class {kind.__name__} needs a lower-case name, got {kind.name!r}")
         if kind.name in plugins.domains:
             other = plugins.domains[kind.name]
             raise PluginError(

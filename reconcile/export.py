@@ -79,14 +79,23 @@ def _evidence(result: Result) -> pd.DataFrame:
     rows = []
     for i in range(result.size):
         if i in result.table.failed:
-            rows.append((result.labels[i], np.nan, 0, np.nan, np.nan, "not solved", "", np.nan, str(result.table.failed[i])))
+            rows.append(
+                (result.labels[i], np.nan, 0, np.nan, np.nan, "not solved", "", np.nan, str(result.table.failed[i]))
+            )
             continue
         named, probability = most_likely(result, i)
         rows.append(
             (
-                result.labels[i], result.objective[i], int(result.checks[i]), result.limit[i], result.p_value[i],
-                result.words[i], named, probability, "" if result.checks[i] else "no check possible",
-            )  # fmt: skip
+                result.labels[i],
+                result.objective[i],
+                int(result.checks[i]),
+                result.limit[i],
+                result.p_value[i],
+                result.words[i],
+                named,
+                probability,
+                "" if result.checks[i] else "no check possible",
+            )
         )
     columns = ["snapshot", "objective", "checks", "limit", "p_value", "word", "explanation", "probability", "reason"]
     return pd.DataFrame(rows, columns=columns)
@@ -106,7 +115,19 @@ def _suspects(result: Result) -> pd.DataFrame:
 
     from .report.words import suspects_of
 
-    columns = ["fault", "kind", "item", "unit", "size", "sigma", "probability", "tied_with", "first", "last", "snapshots"]
+    columns = [
+        "fault",
+        "kind",
+        "item",
+        "unit",
+        "size",
+        "sigma",
+        "probability",
+        "tied_with",
+        "first",
+        "last",
+        "snapshots",
+    ]
     found: dict[str, list[Any]] = {}
     for i in _adjusted_snapshots(result):
         if not result.suspicious[i]:
@@ -142,9 +163,17 @@ def _figures(result: Result) -> pd.DataFrame:
 
     rows = [
         (
-            result.labels[i], f.name, f.text, f.value, f.sigma, f.raw, f.raw_sigma, f.diagonal_sigma,
-            "; ".join(f"{k} {v:.4f}" for k, v in f.shares.items()), f.reason,
-        )  # fmt: skip
+            result.labels[i],
+            f.name,
+            f.text,
+            f.value,
+            f.sigma,
+            f.raw,
+            f.raw_sigma,
+            f.diagonal_sigma,
+            "; ".join(f"{k} {v:.4f}" for k, v in f.shares.items()),
+            f.reason,
+        )
         for i in _adjusted_snapshots(result)
         for f in result.figure_values(i)
     ]
@@ -171,10 +200,12 @@ def summary_of(result: Result) -> dict[str, Any]:
     """
     from .report.words import suspects_of, verdict_line
 
-    per_snapshot = []
+    per_snapshot: list[dict[str, Any]] = []
     for i in range(result.size):
         if i in result.table.failed:
-            per_snapshot.append({"snapshot": result.labels[i], "status": "not solved", "reason": str(result.table.failed[i])})
+            per_snapshot.append(
+                {"snapshot": result.labels[i], "status": "not solved", "reason": str(result.table.failed[i])}
+            )
             continue
         named, probability = most_likely(result, i)
         per_snapshot.append(
@@ -197,7 +228,9 @@ def summary_of(result: Result) -> dict[str, Any]:
         "title": result.title,
         "verdict": verdict_line(result),
         "snapshots": per_snapshot,
-        "not_checked": [r.tag for r in lines.readings if r.kind == "meter" and r.word == "not checked"] if lines else [],
+        "not_checked": [r.tag for r in lines.readings if r.kind == "meter" and r.word == "not checked"]
+        if lines
+        else [],
         "cannot_be_calculated": [v.name for v in lines.variables if v.klass == "cannot be calculated"] if lines else [],
         "left_out": dict(result.excluded),
         "cautions": list(result.cautions),

@@ -182,11 +182,7 @@ class Expression:
         return self._scaled(1.0 / np.atleast_1d(np.asarray(other, dtype=float)))
 
     def __rmatmul__(self, matrix: Any) -> Expression:
-        m = (
-            sp.csr_array(matrix)
-            if sp.issparse(matrix)
-            else sp.csr_array(np.atleast_2d(np.asarray(matrix, float)))
-        )
+        m = sp.csr_array(matrix) if sp.issparse(matrix) else sp.csr_array(np.atleast_2d(np.asarray(matrix, float)))
         if m.shape[1] != self.size:
             raise ValueError(f"matrix has {m.shape[1]} columns, but the expression has {self.size} entries")
         return Expression(
@@ -231,7 +227,7 @@ class Expression:
         if factor.size == 1 or factor.size == self.size:
             d = sp.diags_array(np.broadcast_to(factor, (self.size,)).astype(float))
         elif self.size == 1:
-            return sp.csr_array(factor.reshape(-1, 1)) @ self  # type: ignore[operator,no-any-return]
+            return sp.csr_array(factor.reshape(-1, 1)) @ self
         else:
             raise ValueError(f"{factor.size} factors do not fit an expression with {self.size} entries")
         return Expression(
@@ -246,9 +242,7 @@ class Expression:
 
 def _constant(system: Any, values: Array) -> Expression:
     k = values.size
-    return Expression(
-        system, sp.csr_array((k, 0)), values, sp.csr_array((k, 0)), np.zeros((0, 2), dtype=np.int64)
-    )
+    return Expression(system, sp.csr_array((k, 0)), values, sp.csr_array((k, 0)), np.zeros((0, 2), dtype=np.int64))
 
 
 def _same_size(left: Expression, right: Expression) -> tuple[Expression, Expression]:
@@ -272,9 +266,7 @@ def _multiply(left: Expression, right: Expression) -> Expression:
     from_a = a.indptr[row] + within // np.maximum(count_b[row], 1)
     from_b = b.indptr[row] + within % np.maximum(count_b[row], 1)
     i, j = a.indices[from_a], b.indices[from_b]
-    pairs, where = np.unique(
-        np.column_stack([np.minimum(i, j), np.maximum(i, j)]), axis=0, return_inverse=True
-    )
+    pairs, where = np.unique(np.column_stack([np.minimum(i, j), np.maximum(i, j)]), axis=0, return_inverse=True)
     coefficient = a.data[from_a] * b.data[from_b]
     products = sp.csr_array((coefficient, (row, where.ravel())), shape=(left.size, len(pairs)))
     linear = sp.diags_array(right.constant) @ a + sp.diags_array(left.constant) @ b

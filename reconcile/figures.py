@@ -233,7 +233,9 @@ def evaluate(name: str, text: str, result: Result, index: int) -> FigureValue:
     try:
         value, slopes = figure.value(values)
     except (ZeroDivisionError, ValueError, OverflowError):
-        return FigureValue(name, text, nan, nan, nan, nan, nan, {}, "it has no value here (division by zero or the like)")
+        return FigureValue(
+            name, text, nan, nan, nan, nan, nan, {}, "it has no value here (division by zero or the like)"
+        )
     gradient = np.zeros(result.model.size)
     for v, slope in slopes.items():
         gradient[columns[position[v]]] = slope
@@ -243,7 +245,9 @@ def evaluate(name: str, text: str, result: Result, index: int) -> FigureValue:
     diagonal = float(np.linalg.norm(gradient[used_columns] * np.linalg.norm(group.cover[used_columns], axis=1)))
     raw, raw_sigma = _from_raw(figure, result, index, group)
     shares = _shares(gradient, result, group)
-    return FigureValue(name, text, value, sigma, raw, raw_sigma, diagonal, shares, _near_zero(figure, values, result, index))
+    return FigureValue(
+        name, text, value, sigma, raw, raw_sigma, diagonal, shares, _near_zero(figure, values, result, index)
+    )
 
 
 def _from_raw(figure: Figure, result: Result, index: int, group: object) -> tuple[float, float]:

@@ -301,12 +301,12 @@ class Model:
         top = sp.csr_array((e.linear.data, e.linear.indices, e.linear.indptr), shape=(e.shape[0], self.size))
         linear = sp.csr_array(sp.vstack([top, self.meter_rows])) if self.meter_rows.shape[0] else top
         extra = self.meter_rows.shape[0]
-        widen = sp.vstack([e.products, sp.csr_array((extra, e.products.shape[1]))]) if e.pairs.size else sp.csr_array(
-            (linear.shape[0], 0)
+        widen = (
+            sp.vstack([e.products, sp.csr_array((extra, e.products.shape[1]))])
+            if e.pairs.size
+            else sp.csr_array((linear.shape[0], 0))
         )
-        calls = tuple(
-            (sp.csr_array(sp.vstack([f, sp.csr_array((extra, f.shape[1]))])), c) for f, c in e.calls
-        )
+        calls = tuple((sp.csr_array(sp.vstack([f, sp.csr_array((extra, f.shape[1]))])), c) for f, c in e.calls)
         return Equations(linear, np.concatenate([e.rhs, np.zeros(extra)]), sp.csr_array(widen), e.pairs, calls)
 
     def with_shared(self, base: Array) -> Equations:
@@ -343,9 +343,15 @@ class Model:
         if r.kind == "cause":
             words = ("{item} is off by {size} of its own sigmas", "check what these instruments share: {item}")
         elif r.kind == "prior":
-            words = ("the stated value of {item} is {direction} by {size} {unit}", "measure {item}, or look it up again")
+            words = (
+                "the stated value of {item} is {direction} by {size} {unit}",
+                "measure {item}, or look it up again",
+            )
         else:
-            words = ("{item} reads {direction} by {size} {unit}", "read {item} a second way: bucket and stopwatch, a second meter")
+            words = (
+                "{item} reads {direction} by {size} {unit}",
+                "read {item} a second way: bucket and stopwatch, a second meter",
+            )
         kind = {"meter": "bias", "prior": "constant", "cause": "shared error"}[r.kind]
         item = r.tag.removeprefix("shared:").removeprefix("known:")
         return Candidate(r.tag, kind, item, r.unit, r.factor, 0, i, -1, *words)
@@ -403,7 +409,9 @@ def build_model(
             known.update({c: known.get(c, 0.0) for c in range(block.start, block.stop)})
     every = [*readings, *_domain_priors(system, readings)]
     in_group = {t for s in shared for t in s.tags}
-    columns, indirect, taken = [], [], set(known)
+    columns: list[int] = []
+    indirect: list[int] = []
+    taken = set(known)
     for i, r in enumerate(every):
         column = system.column(r.reads[0][0])
         direct = len(r.reads) == 1 and r.reads[0][1] == 1.0 and r.tag not in in_group and column not in taken

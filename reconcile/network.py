@@ -49,9 +49,7 @@ class Network:
         for name in ("source", "target"):
             array = np.array(getattr(self, name), dtype=np.int64)
             if array.shape != (len(self.streams),):
-                raise ValueError(
-                    f"{name} must hold one node index for each of the {len(self.streams)} streams"
-                )
+                raise ValueError(f"{name} must hold one node index for each of the {len(self.streams)} streams")
             if array.size and (array.min() < -1 or array.max() >= len(self.nodes)):
                 raise ValueError(f"{name} holds an index that is no node")
             array.setflags(write=False)
@@ -95,9 +93,7 @@ class Network:
         -------
         Network
         """
-        triples = (
-            [(name, a, b) for name, (a, b) in paths.items()] if isinstance(paths, Mapping) else list(paths)
-        )
+        triples = [(name, a, b) for name, (a, b) in paths.items()] if isinstance(paths, Mapping) else list(paths)
         number: dict[str, int] = {OUTSIDE: -1}
         for name in nodes:
             number.setdefault(name, len(number) - 1)

@@ -36,9 +36,7 @@ __all__ = ["Case", "load_case"]
 Array = npt.NDArray[np.float64]
 
 
-def load_case(
-    path: str | Path, *, plugins: Sequence[str | Path] = (), modules: Sequence[object] = ()
-) -> Case:
+def load_case(path: str | Path, *, plugins: Sequence[str | Path] = (), modules: Sequence[object] = ()) -> Case:
     """Read and check a case: network, balances, meters; every mistake of the file is reported at once.
 
     Parameters
@@ -232,7 +230,9 @@ class Case:
         problems = Problems(str(self.parts.spec.path))
         for tag, because in exclude.items():
             if tag not in self.tags:
-                problems.add("unknown-meter", f"{tag!r} cannot be left out: no such meter", did_you_mean(tag, self.tags))
+                problems.add(
+                    "unknown-meter", f"{tag!r} cannot be left out: no such meter", did_you_mean(tag, self.tags)
+                )
             elif not str(because or "").strip():
                 problems.add(
                     "no-reason",

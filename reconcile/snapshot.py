@@ -14,14 +14,13 @@ from .adjust.eliminate import dependent_rows
 from .adjust.structure import checks, ties
 from .adjust.table import Group
 from .diagnose.critical import smallest_detectable
-from .diagnose.verdict import Conclusion
 from .diagnose.tests_of_readings import (
     GlobalTest,
     SignatureTests,
     global_test,
-    share_checked,
     signature_tests,
 )
+from .diagnose.verdict import Conclusion
 from .model import Candidate, Model
 
 if TYPE_CHECKING:
@@ -377,7 +376,9 @@ def _readings(
                 sigma=spread,
                 adjustment=float(move),
                 in_sigmas=float(move / before[i]),
-                share=float(np.clip(1.0 - sum(c * group.response[k, i] for k, c in combination), 0.0, 1.0)) if checked else 0.0,
+                share=float(np.clip(1.0 - sum(c * group.response[k, i] for k, c in combination), 0.0, 1.0))
+                if checked
+                else 0.0,
                 z=float(tests.z[place[i]]) if i in place and checked else np.nan,
                 smallest=smallest_detectable(length, settings.level, settings.power) if checked else np.inf,
                 klass=klass,
@@ -504,11 +505,19 @@ def _balances(result: Result, index: int, group: Group, x: Array) -> tuple[Balan
                 ratio = before[k] / spread[k] if ok and spread[k] > 0 else np.nan
             out.append(
                 BalanceLine(
-                    name, block.kind, block.unit, block.nodes[j], block.writer,
-                    float(before[k]) if ok else np.nan, float(spread[k]) if ok else np.nan, float(ratio),
-                    float(after[k]), float(scale[k]),
-                    float(inflow[k]) if ok else np.nan, float(-outflow[k]) if ok else np.nan,
-                )  # fmt: skip
+                    name,
+                    block.kind,
+                    block.unit,
+                    block.nodes[j],
+                    block.writer,
+                    float(before[k]) if ok else np.nan,
+                    float(spread[k]) if ok else np.nan,
+                    float(ratio),
+                    float(after[k]),
+                    float(scale[k]),
+                    float(inflow[k]) if ok else np.nan,
+                    float(-outflow[k]) if ok else np.nan,
+                )
             )
     return tuple(out)
 
@@ -550,7 +559,9 @@ def checks_in_words(model: Model, group: Group) -> tuple[str, ...]:
         weights = row @ group.jacobian[:, columns]
         terms = {model.tags[present[j]]: weights[j] for j in np.flatnonzero(np.abs(weights) > 1e-9)}
         lead = abs(next(iter(terms.values())))
-        constant = float(row @ group.equations.rhs - row @ group.jacobian[:, list(model.fixed)] @ list(model.fixed.values()))
+        constant = float(
+            row @ group.equations.rhs - row @ group.jacobian[:, list(model.fixed)] @ list(model.fixed.values())
+        )
         right = 0.0 if abs(constant) < 1e-12 else constant / lead
         out.append(f"{sum_in_words({k: v / lead for k, v in terms.items()})} = {right:g}")
     return tuple(out)

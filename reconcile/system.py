@@ -116,7 +116,7 @@ class Equations:
     @property
     def shape(self) -> tuple[int, int]:
         """(rows, variables)."""
-        return self.linear.shape  # type: ignore[no-any-return]
+        return self.linear.shape
 
     @property
     def is_linear(self) -> bool:
@@ -317,9 +317,7 @@ class System:
             )
         taken.update(new)
         self.blocks.append(Block(quantity, names, unit, self._count, self._writer, fault))
-        self._bounds.append(
-            (np.broadcast_to(lower, k).astype(float), np.broadcast_to(upper, k).astype(float))
-        )
+        self._bounds.append((np.broadcast_to(lower, k).astype(float), np.broadcast_to(upper, k).astype(float)))
         self._starts.append(np.broadcast_to(start, k).astype(float))
         first, self._count = self._count, self._count + k
         return self._select(np.arange(first, first + k), names)
@@ -327,9 +325,7 @@ class System:
     def _select(self, columns: npt.NDArray[np.int64], items: tuple[str, ...]) -> Expression:
         k = columns.size
         matrix = sp.csr_array((np.ones(k), (np.arange(k), columns)), shape=(k, self._count))
-        return Expression(
-            self, matrix, np.zeros(k), sp.csr_array((k, 0)), np.zeros((0, 2), dtype=np.int64), (), items
-        )
+        return Expression(self, matrix, np.zeros(k), sp.csr_array((k, 0)), np.zeros((0, 2), dtype=np.int64), (), items)
 
     def find(self, quantity: str, items: Sequence[str] | None = None) -> Expression | None:
         """Variables of a quantity that another domain declared, or None where it is not there.
@@ -453,9 +449,7 @@ class System:
         for column, value in zip(*_single(variables, values), strict=True):
             self.fixed[int(column)] = float(value)
 
-    def prior(
-        self, variables: Expression, values: float | Array, sigmas: float | Array, *, origin: str
-    ) -> None:
+    def prior(self, variables: Expression, values: float | Array, sigmas: float | Array, *, origin: str) -> None:
         """Declare prior knowledge with its own sigma; it then counts as a reading.
 
         Parameters
@@ -481,9 +475,7 @@ class System:
             empty = sp.csr_array((0, n))
             return Equations(empty, np.zeros(0), sp.csr_array((0, 0)), np.zeros((0, 2), dtype=np.int64))
         total = stack(self._balances) if len(self._balances) > 1 else self._balances[0]
-        linear = sp.csr_array(
-            (total.linear.data, total.linear.indices, total.linear.indptr), shape=(total.size, n)
-        )
+        linear = sp.csr_array((total.linear.data, total.linear.indices, total.linear.indptr), shape=(total.size, n))
         linear.sum_duplicates()
         linear.eliminate_zeros()
         pairs, where = np.unique(total.pairs, axis=0, return_inverse=True)

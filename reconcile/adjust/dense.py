@@ -205,9 +205,7 @@ class Adjuster:
         whole = np.linalg.norm(self.q1, axis=1) ** 2
         redundant = self.redundant & (left > 1e-10 * whole)
         redundant[index] = False
-        return replace(
-            self, redundant=redundant, freed=index, undetermined=undetermined, turn=turn, gain=gain
-        )
+        return replace(self, redundant=redundant, freed=index, undetermined=undetermined, turn=turn, gain=gain)
 
 
 def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:

@@ -170,7 +170,9 @@ def _start(problem: Problem, present: Ints, free: Ints) -> Array:
     scale = float(np.median(typical[typical > 0])) if np.any(typical > 0) else 1.0
     low, high = problem.lower[empty], problem.upper[empty]
     guess = np.where(
-        np.isfinite(low) & np.isfinite(high), 0.5 * (np.where(np.isfinite(low), low, 0.0) + np.where(np.isfinite(high), high, 0.0)), scale
+        np.isfinite(low) & np.isfinite(high),
+        0.5 * (np.where(np.isfinite(low), low, 0.0) + np.where(np.isfinite(high), high, 0.0)),
+        scale,
     )
     x[empty] = np.clip(guess, low, high)
     return x
@@ -226,12 +228,16 @@ def _linearise(
         in_sigma = np.abs(length * direction[measured] / s).max(initial=0.0)
         relative = np.abs(length * direction[free]) / np.maximum(np.abs(x[free]), 1e-9)
         det = adjuster.observable
-        small = small + 1 if (
-            length == 1.0
-            and closure.max(initial=0.0) < 1e-11
-            and in_sigma < 1e-7
-            and relative[det].max(initial=0.0) < 1e-8
-        ) else 0
+        small = (
+            small + 1
+            if (
+                length == 1.0
+                and closure.max(initial=0.0) < 1e-11
+                and in_sigma < 1e-7
+                and relative[det].max(initial=0.0) < 1e-8
+            )
+            else 0
+        )
         if small:
             adjuster, target, parity, jacobian = pass_at(x)
             return Solution(target, parity, adjuster, present, free, equations, jacobian, sigma, step, round_)

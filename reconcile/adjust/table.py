@@ -215,8 +215,19 @@ def _linear(
         absent = np.flatnonzero(~(ever & present[rows[0]]))
         groups.append(
             Group(
-                rows, x, parity, adjuster, whole.present, absent, problem.columns, whole.free,
-                whole.equations, whole.jacobian, whole.sigma, 1, 1,
-            )  # fmt: skip
+                rows,
+                x,
+                parity,
+                adjuster,
+                whole.present,
+                absent,
+                problem.columns,
+                whole.free,
+                whole.equations,
+                whole.jacobian,
+                whole.sigma,
+                1,
+                1,
+            )
         )
     return Table(tuple(groups), {}, len(readings))

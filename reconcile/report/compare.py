@@ -34,7 +34,9 @@ def render_comparison(before: Result, after: Result, snapshot: int = 0) -> str:
     for j, name in enumerate(before.variables):
         a, sa = before.adjusted[snapshot, j], before.sigmas[snapshot, j]
         b, sb = after.adjusted[snapshot, j], after.sigmas[snapshot, j]
-        rows.append((name, before.units[j], plain(a, sa), plain(sa, sa), plain(b, sb), plain(sb, sb), signed(b - a, sb)))
+        rows.append(
+            (name, before.units[j], plain(a, sa), plain(sa, sa), plain(b, sb), plain(sb, sb), signed(b - a, sb))
+        )
     header = ("WHAT IF", "unit", "with all", "±", f"without {left_out}", "±", "change")
     lost = int(before.checks[snapshot] - after.checks[snapshot])
     text = (

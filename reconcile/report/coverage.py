@@ -50,7 +50,8 @@ def render_coverage(found: Coverage, *, ascii_only: bool = False) -> str:
         out += ["", table(("POSSIBLE FAULT", "unit", "smallest", "of all"), rows, left=(0, 1))]
     if found.unread:
         rows = [
-            (x.name, x.unit, plain(x.sigma, x.sigma), x.klass + (f": {x.reason}" if x.reason else "")) for x in found.unread
+            (x.name, x.unit, plain(x.sigma, x.sigma), x.klass + (f": {x.reason}" if x.reason else ""))
+            for x in found.unread
         ]
         out += ["", table(("NOT READ", "unit", "±", ""), rows, left=(0, 1, 3))]
     out += _notes(found, readings)
@@ -61,13 +62,21 @@ def render_coverage(found: Coverage, *, ascii_only: bool = False) -> str:
 def _readings(lines: list[CoverageLine]) -> str:
     rows = []
     for x in lines:
-        relative = f"{100 * x.smallest / abs(x.value):.1f} %" if x.value and math.isfinite(x.smallest / x.value) else "-"
+        relative = (
+            f"{100 * x.smallest / abs(x.value):.1f} %" if x.value and math.isfinite(x.smallest / x.value) else "-"
+        )
         rows.append(
             (
-                x.item, x.unit, plain(x.sigma_before, x.sigma_before), plain(x.sigma_after, x.sigma_after),
-                f"{x.share:.3f}", _size(x.smallest), relative, _size(x.smallest_of_all),
+                x.item,
+                x.unit,
+                plain(x.sigma_before, x.sigma_before),
+                plain(x.sigma_after, x.sigma_after),
+                f"{x.share:.3f}",
+                _size(x.smallest),
+                relative,
+                _size(x.smallest_of_all),
                 "checked" if x.share > 0 else "not checked",
-            )  # fmt: skip
+            )
         )
     header = ("READING", "unit", "±before", "±after", "checked", "smallest", "of value", "of all", "")
     return table(header, rows, left=(0, 1, 8))

@@ -36,7 +36,8 @@ def describe_case(case: Case, readings: Path | None = None) -> str:
     network, model, spec = case.parts.network, case.model, case.parts.spec
     out = [f"{spec.path}: no mistakes found.", "", case.title, ""]
     rows = [
-        (node, ", ".join(network.entering(node)) or "-", ", ".join(network.leaving(node)) or "-") for node in network.nodes
+        (node, ", ".join(network.entering(node)) or "-", ", ".join(network.leaving(node)) or "-")
+        for node in network.nodes
     ]
     out.append(table(("NODE", "in", "out"), rows, left=(0, 1, 2)))
     crossing = [s for s, a, b in zip(network.streams, network.source, network.target, strict=True) if a < 0 or b < 0]
@@ -50,7 +51,15 @@ def describe_case(case: Case, readings: Path | None = None) -> str:
             continue
         relative = f"{100 * r.relative:.3g} % of reading" if r.relative else ""
         absolute = f"{plain(r.absolute, r.absolute)} {r.unit}" if r.absolute else ""
-        lines.append((r.tag, " + ".join(n for n, _ in r.reads), r.unit, " and ".join(x for x in (relative, absolute) if x), r.origin))
+        lines.append(
+            (
+                r.tag,
+                " + ".join(n for n, _ in r.reads),
+                r.unit,
+                " and ".join(x for x in (relative, absolute) if x),
+                r.origin,
+            )
+        )
     out += ["", table(("READING", "reads", "unit", "sigma", "from"), lines, left=(0, 1, 2, 3, 4))]
     out.append("")
     out.append(

@@ -8,7 +8,18 @@ __all__ = ["ASCII", "table", "to_ascii", "wrap"]
 
 WIDTH = 100
 
-ASCII = {"±": "+/-", "χ²": "chi2", "✓": "ok", "✗": "NO", "→": "->", "≤": "<=", "≥": ">=", "σ": "sigma", "–": "-", "—": "-"}
+ASCII = {
+    "±": "+/-",
+    "χ²": "chi2",
+    "✓": "ok",
+    "✗": "NO",
+    "→": "->",
+    "≤": "<=",
+    "≥": ">=",
+    "σ": "sigma",
+    "–": "-",
+    "—": "-",
+}
 """What stands for each character where a terminal cannot show it."""
 
 

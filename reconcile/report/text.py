@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 from .layout import table, to_ascii, wrap
@@ -10,8 +11,9 @@ from .numbers import plain, signed
 from .words import MARKS, explanation_sentences, percent, verdict_line, verdict_sentences
 
 if TYPE_CHECKING:
+    from ..figures import FigureValue
     from ..results import Result
-    from ..snapshot import Snapshot
+    from ..snapshot import Snapshot, VariableLine
 
 __all__ = ["render"]
 
@@ -59,9 +61,13 @@ def _many(result: Result) -> str:
         word = result.words[i]
         rows.append(
             (
-                result.labels[i], f"{result.objective[i]:.2f}", str(result.checks[i]), plain(result.limit[i], 0.01),
-                f"{result.p_value[i]:.3f}" if math.isfinite(result.p_value[i]) else "-", f"{MARKS[word]} {word}",
-            )  # fmt: skip
+                result.labels[i],
+                f"{result.objective[i]:.2f}",
+                str(result.checks[i]),
+                plain(result.limit[i], 0.01),
+                f"{result.p_value[i]:.3f}" if math.isfinite(result.p_value[i]) else "-",
+                f"{MARKS[word]} {word}",
+            )
         )
     if len(rows) > 2 * MANY:
         skipped = len(rows) - 2 * MANY
@@ -104,12 +110,29 @@ def _balances(s: Snapshot) -> str:
             ratio = signed(b.ratio, 0.1) if math.isfinite(b.ratio) else "-"
             rows.append(
                 (
-                    b.name, b.unit, plain(b.inflow, b.spread), plain(b.outflow, b.spread), signed(b.before, b.spread),
-                    plain(b.spread, b.spread), ratio, "closed" if abs(b.after) <= 1e-9 * max(b.scale, 1e-300) else f"{b.after:.1e}",
-                )  # fmt: skip
+                    b.name,
+                    b.unit,
+                    plain(b.inflow, b.spread),
+                    plain(b.outflow, b.spread),
+                    signed(b.before, b.spread),
+                    plain(b.spread, b.spread),
+                    ratio,
+                    "closed" if abs(b.after) <= 1e-9 * max(b.scale, 1e-300) else f"{b.after:.1e}",
+                )
             )
         else:
-            rows.append((b.name, b.unit, "", "", "not all read", "", "", "closed" if abs(b.after) <= 1e-9 * max(b.scale, 1e-300) else f"{b.after:.1e}"))
+            rows.append(
+                (
+                    b.name,
+                    b.unit,
+                    "",
+                    "",
+                    "not all read",
+                    "",
+                    "",
+                    "closed" if abs(b.after) <= 1e-9 * max(b.scale, 1e-300) else f"{b.after:.1e}",
+                )
+            )
     return table(("BALANCE", "unit", "in", "out", "closure", "spread", "ratio", "after"), rows, left=(0, 1))
 
 
@@ -119,29 +142,47 @@ def _readings(s: Snapshot) -> str:
         sigma = min(x for x in (r.sigma_before, r.sigma, math.inf) if math.isfinite(x) or x == math.inf)
         rows.append(
             (
-                r.tag.removeprefix("known:"), r.unit, plain(r.reading, sigma), plain(r.adjusted, sigma),
-                plain(r.sigma_before, r.sigma_before), plain(r.sigma, r.sigma), signed(r.adjustment, sigma),
-                signed(r.in_sigmas, 0.1), f"{r.share:.2f}", signed(r.z, 0.1), r.word,
-            )  # fmt: skip
+                r.tag.removeprefix("known:"),
+                r.unit,
+                plain(r.reading, sigma),
+                plain(r.adjusted, sigma),
+                plain(r.sigma_before, r.sigma_before),
+                plain(r.sigma, r.sigma),
+                signed(r.adjustment, sigma),
+                signed(r.in_sigmas, 0.1),
+                f"{r.share:.2f}",
+                signed(r.z, 0.1),
+                r.word,
+            )
         )
     header = ("READING", "unit", "read", "adjusted", "±before", "±after", "moved", "in ±", "checked", "z", "")
     return table(header, rows, left=(0, 1, 10))
 
 
-def _unread(unread: list) -> str:  # type: ignore[type-arg]
+def _unread(unread: Sequence[VariableLine]) -> str:
     rows = [
-        (v.name, v.unit, plain(v.adjusted, v.sigma), plain(v.sigma, v.sigma), v.klass + (f": {v.reason}" if v.reason else ""))
+        (
+            v.name,
+            v.unit,
+            plain(v.adjusted, v.sigma),
+            plain(v.sigma, v.sigma),
+            v.klass + (f": {v.reason}" if v.reason else ""),
+        )
         for v in unread
     ]
     return table(("NOT READ", "unit", "value", "±", ""), rows, left=(0, 1, 4))
 
 
-def _figures(figures: tuple) -> str:  # type: ignore[type-arg]
+def _figures(figures: Sequence[FigureValue]) -> str:
     rows = [
         (
-            f.name, plain(f.value, f.sigma), plain(f.sigma, f.sigma), plain(f.raw, f.raw_sigma), plain(f.raw_sigma, f.raw_sigma),
+            f.name,
+            plain(f.value, f.sigma),
+            plain(f.sigma, f.sigma),
+            plain(f.raw, f.raw_sigma),
+            plain(f.raw_sigma, f.raw_sigma),
             f.reason or ", ".join(f"{k} {percent(v)}" for k, v in list(f.shares.items())[:3]),
-        )  # fmt: skip
+        )
         for f in figures
     ]
     return table(("FIGURE", "value", "±", "raw", "±raw", "uncertainty from"), rows, left=(0, 5))

@@ -104,8 +104,10 @@ def suspects_of(snapshot: Snapshot) -> tuple[Suspect, ...]:
         for s in account.alternatives:
             for f in s.faults:
                 c = f.candidate
-                others = () if a.conclusion is Conclusion.ONE else tuple(
-                    sorted(rivals - {g.candidate.name for g in s.faults})
+                others = (
+                    ()
+                    if a.conclusion is Conclusion.ONE
+                    else tuple(sorted(rivals - {g.candidate.name for g in s.faults}))
                 )
                 found = Suspect(c.name, c.kind, c.item, c.unit, f.size, f.sigma, s.probability, others)
                 if c.name not in out or out[c.name].probability < s.probability:
@@ -194,8 +196,10 @@ def _named(a: Accounts | None) -> list[str]:
         if a.max_faults == 0:
             return ["Which reading is wrong cannot be told."]
         return [
-            f"No set of up to {a.max_faults} possible faults accounts for it: several readings, a balance that is "
-            "not drawn right, or sigmas that are too small."
+            (
+                f"No set of up to {a.max_faults} possible faults accounts for it: several readings, a balance that is "
+                "not drawn right, or sigmas that are too small."
+            )
         ]
     best = a.standing[0]
     first = best.alternatives[0]

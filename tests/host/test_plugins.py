@@ -162,6 +162,7 @@ def test_domains_write_in_the_order_they_need():
         def build(self, network, system, options):
             order.append(name)
             system.variables(name, network.streams, unit="1/h")
+
         return build
 
     late = type("Late", (Domain,), {"name": "late", "build": note("late"), "after": ("early",)})

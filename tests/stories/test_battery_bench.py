@@ -60,7 +60,8 @@ def test_off_diagonal_terms_are_used(write_case):
     independent = CASE
     for i in (1, 2, 3):
         independent = independent.replace(
-            f"string_{i}.flow, unit: A h, sigma: 0.05 A h", f"string_{i}.flow, unit: A h, sigma: [0.05 A h, 1 % of reading]"
+            f"string_{i}.flow, unit: A h, sigma: 0.05 A h",
+            f"string_{i}.flow, unit: A h, sigma: [0.05 A h, 1 % of reading]",
         )
     wrong = reconcile.load_case(write_case(independent)).run(READ)
     assert wrong.objective[0] == pytest.approx(3.13, abs=5e-3)
