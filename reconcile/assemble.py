@@ -88,8 +88,8 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
         problems.raise_if_any()
     check_references(spec, system.units(), problems)
     problems.raise_if_any()
-    shared, independent = _shared_errors(spec.shared_errors)
-    readings = [_meter(m, system, independent.get(m.tag, 1.0)) for m in spec.meters.values()]
+    shared = [cause for s in spec.shared_errors.values() for cause in _causes(s)]
+    readings = [_meter(m, system) for m in spec.meters.values()]
     readings += [_prior(k, system) for k in spec.known.values() if k.sigma is not None]
     fixed = {
         k.variable: _to_variable(k.value, k.unit, k.variable, system) for k in spec.known.values() if k.sigma is None
@@ -120,7 +120,7 @@ def _to_variable(value: float, unit: str, name: str, system: System) -> float:
     return factor * value + offset
 
 
-def _meter(m: MeterSpec, system: System, independent: float) -> Reading:
+def _meter(m: MeterSpec, system: System) -> Reading:
     base = system.unit(system.column(m.reads[0][0]))
     factor, offset = units.factor_offset(m.unit, base)
     reads = []
@@ -132,7 +132,7 @@ def _meter(m: MeterSpec, system: System, independent: float) -> Reading:
     origin = " and ".join(p.text for p in m.sigma.components)
     return Reading(
         m.tag, tuple(reads), m.unit, relative, absolute, factor, offset,
-        span=span, origin=origin, independent=independent,
+        span=span, origin=origin,
     )  # fmt: skip
 
 
@@ -146,38 +146,28 @@ def _prior(k: KnownSpec, system: System) -> Reading:
     )  # fmt: skip
 
 
-def _shared_errors(specs: Any) -> tuple[list[SharedError], dict[str, float]]:
-    """Causes behind several meters; correlations are split into causes and what is each meter's own."""
-    out: list[SharedError] = []
-    independent: dict[str, float] = {}
-    for spec in specs.values():
-        if spec.correlations:
-            out.extend(_from_correlations(spec, independent))
-        else:
-            out.append(_one_cause(spec))
-    return out, independent
-
-
-def _one_cause(spec: SharedErrorSpec) -> SharedError:
-    relative, absolute = (tuple(getattr(law, part) for law in spec.sigma) for part in ("relative", "absolute"))
-    return SharedError(spec.name, spec.meters, relative, absolute)
-
-
-def _from_correlations(spec: SharedErrorSpec, independent: dict[str, float]) -> list[SharedError]:
+def _causes(spec: SharedErrorSpec) -> list[SharedError]:
+    """Causes behind several meters: one where they move together, else one for each direction of the correlations."""
+    relative = np.array([law.relative for law in spec.sigma])
+    absolute = np.array([law.absolute for law in spec.sigma])
+    if spec.correlations is None:
+        return [SharedError(spec.name, spec.meters, tuple(relative), tuple(absolute))]
     index = {t: i for i, t in enumerate(spec.meters)}
     matrix = np.eye(len(index))
-    for a, b, rho in spec.correlations or ():
+    for a, b, rho in spec.correlations:
         matrix[index[a], index[b]] = matrix[index[b], index[a]] = rho
-    own = 0.5 * float(np.linalg.eigvalsh(matrix)[0])
-    values, vectors = np.linalg.eigh(matrix - own * np.eye(len(index)))
-    for tag in spec.meters:
-        independent[tag] = math.sqrt(own)
-    none = (0.0,) * len(index)
-    return [
-        SharedError(f"{spec.name} {c + 1}", spec.meters, none, none, tuple(math.sqrt(v) * vectors[:, c]))
-        for c, v in enumerate(values)
-        if v > 1e-14
-    ]
+    values, vectors = np.linalg.eigh(matrix)
+    none = np.zeros(len(index))
+    out: list[SharedError] = []
+    # Parts in percent and absolute parts have their own causes, since they move independently of each other.
+    for part in ((relative, none), (none, absolute)):
+        if not np.any(part[0]) and not np.any(part[1]):
+            continue
+        for value, vector in zip(values, vectors.T, strict=True):
+            shape = np.sqrt(value) * vector
+            name = f"{spec.name} {len(out) + 1}"
+            out.append(SharedError(name, spec.meters, tuple(shape * part[0]), tuple(shape * part[1])))
+    return out
 
 
 def _doubts(spec: CaseSpec) -> list[Notice]:

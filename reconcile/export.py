@@ -472,8 +472,10 @@ def load_corrected(folder: str | Path) -> Corrected:
                     "run the case again, or restore the file",
                 )
             )
+    # Before its version 3, pandas read the last digit of a number exactly only when asked to.
+    exact: dict[str, Any] = {"float_precision": "round_trip"} if int(pd.__version__.split(".")[0]) < 3 else {}
     read = {
-        stem: pd.read_csv(base / f"{stem}.csv", float_precision="round_trip", dtype={"snapshot": str})
+        stem: pd.read_csv(base / f"{stem}.csv", dtype={"snapshot": str}, **exact)
         for stem in ("adjusted", "sigmas", "variables", "evidence", "suspects", "balances", "figures")
     }
     with np.load(base / "covariance.npz") as arrays:

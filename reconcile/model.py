@@ -48,8 +48,6 @@ class Reading:
         Width of the instrument's span in `unit`; nan where it is not stated.
     origin : str
         Where its sigma comes from, in words.
-    independent : float
-        Share of the stated sigma that is its own, where correlations are given; the rest comes from causes.
     """
 
     tag: str
@@ -63,7 +61,6 @@ class Reading:
     value: float = np.nan
     span: float = np.nan
     origin: str = ""
-    independent: float = 1.0
 
 
 @dataclass(frozen=True)
@@ -77,15 +74,12 @@ class SharedError:
         The readings concerned.
     relative, absolute : tuple of float
         Standard deviation that the cause gives each of them: of its value, and in its unit; signs count.
-    of_sigma : tuple of float
-        The same as a multiple of its stated sigma.
     """
 
     name: str
     tags: tuple[str, ...]
     relative: tuple[float, ...]
     absolute: tuple[float, ...]
-    of_sigma: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -259,27 +253,17 @@ class Model:
 
     def sigma(self, base: Array) -> Array:
         """Own sigma of each reading at these values, shape (..., k), base units."""
-        return self.stated_sigma(base) * self.independent
-
-    def stated_sigma(self, base: Array) -> Array:
-        """Sigma of each reading as stated, shape (..., k), base units."""
         return np.hypot(self.relative * self.stated(base), self.absolute) * np.abs(self.factor)
-
-    @cached_property
-    def independent(self) -> Array:
-        """Share of each stated sigma that is the reading's own, shape (k,)."""
-        return np.array([r.independent for r in self.readings])
 
     def shared_part(self, base: Array) -> Array:
         """What each shared error contributes to each reading, shape (k, number of causes), base units."""
         out = np.zeros((len(self.readings), len(self.shared)))
         index = {t: i for i, t in enumerate(self.tags)}
-        stated, sigma = self.stated(base), self.stated_sigma(base)
+        stated = self.stated(base)
         for c, cause in enumerate(self.shared):
-            multiples = cause.of_sigma or (0.0,) * len(cause.tags)
-            for tag, rel, abso, multiple in zip(cause.tags, cause.relative, cause.absolute, multiples, strict=True):
+            for tag, rel, abso in zip(cause.tags, cause.relative, cause.absolute, strict=True):
                 i = index[tag]
-                out[i, c] = (rel * stated[i] + abso) * self.factor[i] + multiple * sigma[i]
+                out[i, c] = (rel * stated[i] + abso) * self.factor[i]
         return out
 
     def total_sigma(self, base: Array) -> Array:
