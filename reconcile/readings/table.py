@@ -51,7 +51,7 @@ STATUS_WORDS: dict[Status, str] = {
 }
 
 # Statuses whose number may stand in a balance as a measurement.
-_USABLE = (Status.GOOD, Status.ESTIMATED, Status.DERIVED)
+_USABLE = (Status.GOOD, Status.ESTIMATED)
 
 
 def _frozen(array: npt.NDArray[Any]) -> npt.NDArray[Any]:
