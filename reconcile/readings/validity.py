@@ -144,6 +144,8 @@ def _check_one(marks: _Marks, j: int, tag: str, rule: SignalLimits, seconds: npt
     if rule.flat_count is not None:
         _flat(marks, x, j, tag, rule.flat_count, rule.flat_tolerance)
     if rule.spike is not None:
+        # What other tests have caught is no neighbour to be compared with.
+        x = np.where(marks.taken[:, j], np.nan, x)
         near = np.full(x.size, np.nan)
         near[1:-1] = 0.5 * (x[:-2] + x[2:])
         # A neighbour of a spike is far from its neighbours' mean, too, but by half as much.

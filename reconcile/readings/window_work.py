@@ -208,7 +208,7 @@ class WindowWork:
             if np.isfinite(self.values[w, j]):
                 mean, sigma = float(self.values[w, j]), float(self.sigma[w, j])
                 self.zeros.append(ZeroCheck(w, self.labels[w], tag, mean, sigma))
-                shown.append((abs(mean), f"{tag} shows {mean:.3g}"))
+                shown.append((abs(mean), f"{tag} shows {mean:.2g}"))
         shown.sort(key=lambda s: -s[0])
         words = ", ".join(s for _, s in shown[:4])
         self._leave(w, "off", f"the plant is off; readings used for a zero check only ({words})")
