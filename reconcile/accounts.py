@@ -75,6 +75,9 @@ class Account:
         Whether it is not excluded: what remains is within the limit, and some set has possible signs.
     probability : float
         Of all its alternatives together, given the stated priors.
+    refitted : tuple of float
+        Where balances hold products: what remains of the objective for each alternative when the snapshot is solved
+        again with its faults free, while `left` is the first-order value; empty in linear cases, where both agree.
     """
 
     alternatives: tuple[Alternative, ...]
@@ -84,6 +87,7 @@ class Account:
     checks: int
     survives: bool
     probability: float
+    refitted: tuple[float, ...] = ()
 
     @property
     def count(self) -> int:
@@ -170,6 +174,7 @@ def explainer_of(
             fault_rate=rate,
             size_prior=size,
             max_faults=most,
+            scale=np.linalg.norm(signatures, axis=0),
             saturated=saturated,
         )
     except Refusal as refusal:

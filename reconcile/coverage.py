@@ -10,7 +10,8 @@ import numpy.typing as npt
 
 from .adjust.structure import additions_to_calculate, additions_to_check, ties
 from .adjust.table import Group, adjust_table
-from .diagnose.critical import familywise_limit, smallest_detectable
+from .diagnose.critical import smallest_detectable
+from .diagnose.familywise import familywise_limit
 from .diagnose.lookalike import classes, near_parallel
 from .errors import InputError, Location, Problem
 from .snapshot import checks_in_words, dependent_in_words, signatures
@@ -171,8 +172,8 @@ def coverage_of(case: Case) -> Coverage:
             familywise_limit(own[:, live], settings.level).limit if live.any() and group.checks else np.nan
         )
     lines = _lines(model, group, settings, norms, limit_ratio)
-    alike = classes(shifts) if group.checks else None
-    pairs = near_parallel(shifts) if group.checks else None
+    alike = classes(shifts, scale=norms) if group.checks else None
+    pairs = near_parallel(shifts, scale=norms) if group.checks else None
     names = [c.name for c in model.candidates]
     tied = tuple(tuple(names[i] for i in m) for m in alike.tied) if alike else ()
     near = (

@@ -23,6 +23,7 @@ from .assemble import Assembled, assemble
 from .domains import Plugins, load_plugins
 from .errors import InputError, Location, Notice, Problem, Problems, did_you_mean
 from .readings.table import ReadingsTable
+from .refit import problem_of
 from .results import Result
 
 if TYPE_CHECKING:
@@ -244,25 +245,7 @@ class Case:
 
     def problem(self, settings: Any = None) -> Snapshot:
         """Return what all snapshots share, as arrays."""
-        settings = settings or self.parts.spec.settings
-        model = self.model
-        start = np.full(model.size, np.nan)
-        typical = model.system.starts
-        start[: typical.size] = typical
-        for source in (model.design, model.fixed):
-            start[list(source)] = list(source.values())
-        return Snapshot(
-            equations=model.with_shared,
-            sigma=model.sigma,
-            columns=model.columns,
-            readings=np.full(model.columns.size, np.nan),
-            fixed=np.array(sorted(model.fixed), dtype=np.int64),
-            start=start,
-            value_dependent=model.has_relative,
-            settle=settings.percent_at == "adjusted",
-            lower=model.lower,
-            upper=model.upper,
-        )
+        return problem_of(self.model, settings or self.parts.spec.settings)
 
     def name_of_column(self, column: int) -> str:
         """Return the name of a column."""

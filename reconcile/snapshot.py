@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -14,6 +14,12 @@ from .adjust.eliminate import dependent_rows
 from .adjust.structure import checks, ties
 from .adjust.table import Group
 from .diagnose.critical import smallest_detectable
+from .diagnose.tests_of_balances import (
+    NodalTest,
+    PrincipalComponentTest,
+    nodal_test,
+    principal_component_test,
+)
 from .diagnose.tests_of_readings import (
     GlobalTest,
     SignatureTests,
@@ -29,6 +35,8 @@ if TYPE_CHECKING:
 __all__ = ["FRAME_COLUMNS", "BalanceLine", "FaultLine", "ReadingLine", "Snapshot", "VariableLine", "look"]
 
 Array = npt.NDArray[np.float64]
+
+MOST_REFITS = 8
 
 FRAME_COLUMNS = (
     "snapshot",
@@ -187,6 +195,12 @@ class Snapshot:
         Over the meters alone, with the limit for their number.
     accounts : Accounts or None
         Explanations; None where there is no check.
+    nodal : NodalTest
+        Tests of the balances that the raw readings suffice for, in the order of `nodal_rows`.
+    nodal_rows : tuple of int
+        Which of `balances` these are; balances that others imply are left out.
+    components : PrincipalComponentTest
+        Their closures on the principal components of their covariance.
     checks_in_words : tuple of str
         The independent checks, each as a combination of variables.
     reductions : str
@@ -203,6 +217,9 @@ class Snapshot:
     meter_tests: SignatureTests
     accounts: Accounts | None
     candidates: tuple[Candidate, ...]
+    nodal: NodalTest
+    nodal_rows: tuple[int, ...]
+    components: PrincipalComponentTest
     checks_in_words: tuple[str, ...]
     dependent: tuple[str, ...]
     steps: int
@@ -284,23 +301,28 @@ def look(result: Result, index: int) -> Snapshot:
     parity, shifts, candidates = evidence(result, index)
     x = group.x[int(np.flatnonzero(group.rows == index)[0])]
     test = global_test(parity, settings.level)
-    tests = signature_tests(parity, shifts, settings.level)
+    norms = np.linalg.norm(shifts, axis=0)
+    tests = signature_tests(parity, shifts, settings.level, scale=norms)
     meters = model.meters
-    meter_tests = signature_tests(parity, shifts[:, meters], settings.level)
+    meter_tests = signature_tests(parity, shifts[:, meters], settings.level, scale=norms[meters])
     accounts = _accounts(result, index, parity, test)
     faults = _faults(candidates, tests, shifts, settings)
     readings = _readings(result, index, group, x, meter_tests, shifts, accounts)
+    balances, closure, covariance, rows = _balances(result, index, group, x)
     return Snapshot(
         label=result.labels[index],
         readings=readings,
         variables=_variables(result, group, x),
-        balances=_balances(result, index, group, x),
+        balances=balances,
         faults=faults,
         test=test,
         tests=tests,
         meter_tests=meter_tests,
         accounts=accounts,
         candidates=candidates,
+        nodal=nodal_test(closure[rows], covariance[np.ix_(rows, rows)], settings.level),
+        nodal_rows=tuple(int(i) for i in rows),
+        components=principal_component_test(closure[rows], covariance[np.ix_(rows, rows)], settings.level),
         checks_in_words=checks_in_words(model, group),
         dependent=dependent_in_words(model, group),
         steps=group.steps,
@@ -319,8 +341,20 @@ def _accounts(result: Result, index: int, parity: Array, test: GlobalTest) -> Ac
         more = explainer.max_faults + 1
         stuck = found.conclusion is Conclusion.NOT_FOUND and result.settings.max_faults is None
         if not stuck or more > min(MOST_FAULTS, test.checks - 1):
-            return found
+            linear = result.group(index).equations.is_linear
+            return found if linear or test.status != "disagrees" else _refitted(result, index, found)
         most = more
+
+
+def _refitted(result: Result, index: int, found: Accounts) -> Accounts:
+    """Standing explanations of a case with products, each solved again with its faults free."""
+    from .refit import grant
+
+    standing = []
+    for account in found.standing[:MOST_REFITS]:
+        exact = [grant(result, index, a) for a in account.alternatives]
+        standing.append(replace(account, refitted=tuple(np.nan if g is None else g.left for g in exact)))
+    return replace(found, standing=(*standing, *found.standing[MOST_REFITS:]))
 
 
 # ------------------------------------------------------------------ lines
@@ -471,8 +505,19 @@ def sum_in_words(terms: dict[str, float]) -> str:
     return text
 
 
-def _balances(result: Result, index: int, group: Group, x: Array) -> tuple[BalanceLine, ...]:
-    """Closure of every balance of the domains, before with the raw readings where they suffice, and after."""
+def _balances(
+    result: Result, index: int, group: Group, x: Array
+) -> tuple[tuple[BalanceLine, ...], Array, Array, npt.NDArray[np.int64]]:
+    """Closure of every balance of the domains, before with the raw readings where they suffice, and after.
+
+    Returns
+    -------
+    lines : tuple of BalanceLine
+    closure, covariance : ndarray, shapes (m,) and (m, m)
+        Of the raw closures.
+    rows : ndarray of int
+        Balances that can be tested alone: formed from readings only, and not implied by others.
+    """
     model, e = result.model, group.equations
     base = model.to_base(result.readings[index : index + 1])[0]
     base[group.absent] = np.nan
@@ -493,7 +538,8 @@ def _balances(result: Result, index: int, group: Group, x: Array) -> tuple[Balan
     covariance = model.covariance_of_readings(np.where(np.isfinite(base), base, x[model.columns]))
     read = np.flatnonzero(source >= 0)
     part = jacobian[:, read]
-    spread = np.sqrt(np.einsum("ij,jk,ik->i", part, covariance[np.ix_(source[read], source[read])], part))
+    of_closure = part @ covariance[np.ix_(source[read], source[read])] @ part.T
+    spread = np.sqrt(np.diag(of_closure))
     inflow, outflow = (t[:m] for t in e.split_terms(x_raw))
     after, scale = e.closure(np.nan_to_num(x))[:m], e.largest_term(np.nan_to_num(x))[:m]
     out = []
@@ -519,7 +565,10 @@ def _balances(result: Result, index: int, group: Group, x: Array) -> tuple[Balan
                     float(-outflow[k]) if ok else np.nan,
                 )
             )
-    return tuple(out)
+    alone = np.flatnonzero(complete & (spread > 0))
+    implied = dependent_rows(jacobian[np.ix_(alone, read)])
+    rows = np.delete(alone, [int(np.flatnonzero(row)[-1]) for row in implied])
+    return tuple(out), before, of_closure, rows
 
 
 def _faults(

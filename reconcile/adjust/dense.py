@@ -86,9 +86,9 @@ class Adjuster:
 
     @cached_property
     def signatures(self) -> Array:
-        """Parity shift per unit bias of each reading, shape (r, n); zero for absent readings."""
+        """Parity shift per unit bias of each reading, shape (r, n); zero where nothing checks it or it is absent."""
         out = (self.q1 @ self.turn).T / self.sigma
-        out[:, self.freed] = 0.0
+        out[:, ~self.redundant] = 0.0
         return out
 
     def signature_of_columns(self, columns: Array) -> Array:
@@ -103,7 +103,11 @@ class Adjuster:
         -------
         ndarray, shape (r, k)
         """
-        return -self.rows_to_parity @ columns
+        out = -self.rows_to_parity @ columns
+        # What is only rounding is zero: judged against the terms it is the sum of.
+        terms = np.linalg.norm(np.abs(self.rows_to_parity) @ np.abs(columns), axis=0)
+        out[:, np.linalg.norm(out, axis=0) <= 1e-10 * terms] = 0.0
+        return out
 
     @cached_property
     def cover(self) -> Array:

@@ -6,11 +6,13 @@ import math
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
+from ..refit import figures_if
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
-from .words import MARKS, explanation_sentences, percent, verdict_line, verdict_sentences
+from .words import MARKS, explanations_in_words, percent, remarks_on_explanations, verdict_line, verdict_sentences
 
 if TYPE_CHECKING:
+    from ..accounts import Alternative
     from ..figures import FigureValue
     from ..results import Result
     from ..snapshot import Snapshot, VariableLine
@@ -78,7 +80,10 @@ def _many(result: Result) -> str:
 def _detail(result: Result, index: int) -> list[str]:
     s = result.snapshot(index)
     word = result.words[index]
-    out = [wrap(f"{MARKS[word]} " + " ".join(verdict_sentences(s)), ""), "", _balances(s), "", _readings(s)]
+    out = [wrap(f"{MARKS[word]} " + " ".join(verdict_sentences(s)), ""), "", _balances(s)]
+    if math.isfinite(s.nodal.limit):
+        out.append(wrap(f"A ratio is compared with {s.nodal.limit:.2f}, exact for {_tested(len(s.nodal_rows))}."))
+    out += ["", _readings(s)]
     out.append(
         wrap(
             f"z is compared with {s.meter_tests.limit:.2f}, exact for the {s.meter_tests.distinct} different tests of "
@@ -90,17 +95,34 @@ def _detail(result: Result, index: int) -> list[str]:
     unread = [v for v in s.variables if not v.meters]
     if unread:
         out += ["", _unread(unread)]
-    told = explanation_sentences(s)
+    told = explanations_in_words(s)
     if told:
-        out += ["", "EXPLANATIONS", *(wrap(f"{i}. {t}" if i <= _standing(s) else t) for i, t in enumerate(told, 1))]
+        out += ["", "EXPLANATIONS"]
+        for i, lines in enumerate(told, 1):
+            out.append(wrap(lines[0], "     ").replace("     ", f"  {i}. ", 1))
+            out += [wrap(line, "     ") for line in lines[1:]]
+        out += [wrap(remark) for remark in remarks_on_explanations(s)]
     figures = result.figure_values(index)
     if figures:
         out += ["", _figures(figures)]
+        granted = figures_if(result, index)
+        if granted:
+            rows = [
+                (f.name, plain(f.value, f.sigma), plain(f.sigma, f.sigma), _granted_name(alternative))
+                for alternative, values in granted
+                for f in values
+            ]
+            out.append(wrap("These hold if nothing is wrong. Granting an explanation instead:"))
+            out.append(table(("FIGURE", "value", "±", "granting"), rows, left=(0, 3)))
     return out
 
 
-def _standing(s: Snapshot) -> int:
-    return min(6, len(s.accounts.standing)) if s.accounts else 0
+def _granted_name(alternative: Alternative) -> str:
+    return " and ".join(f.candidate.name for f in alternative.faults)
+
+
+def _tested(count: int) -> str:
+    return "one balance" if count == 1 else f"the {count} balances that can be formed from readings"
 
 
 def _balances(s: Snapshot) -> str:

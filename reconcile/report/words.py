@@ -19,8 +19,10 @@ __all__ = [
     "MARKS",
     "Suspect",
     "explanation_sentences",
+    "explanations_in_words",
     "fault_phrase",
     "percent",
+    "remarks_on_explanations",
     "short_name",
     "suspects_of",
     "test_phrase",
@@ -224,12 +226,31 @@ def _named(a: Accounts | None) -> list[str]:
 # ------------------------------------------------------------------ explanations
 
 
-def explanation_sentences(snapshot: Snapshot, limit: int = 6) -> list[str]:
-    """For every standing explanation one sentence with its numbers, its rival and what would separate them."""
+def explanations_in_words(snapshot: Snapshot, limit: int = 6) -> list[list[str]]:
+    """Every standing explanation as a few lines: its sets of faults, then what granting it leaves.
+
+    Parameters
+    ----------
+    snapshot : Snapshot
+    limit : int
+        At most so many explanations.
+
+    Returns
+    -------
+    list of list of str
+    """
     a = snapshot.accounts
     if a is None or snapshot.test.status != "disagrees":
         return []
-    out = [_sentence(account, a) for account in a.standing[:limit]]
+    return [_told(account) for account in a.standing[:limit]]
+
+
+def remarks_on_explanations(snapshot: Snapshot, limit: int = 6) -> list[str]:
+    """Sentences behind the explanations: what was rejected, and what would separate those that stand."""
+    a = snapshot.accounts
+    if a is None or snapshot.test.status != "disagrees":
+        return []
+    out = []
     if len(a.standing) > limit:
         out.append(f"{len(a.standing) - limit} further explanations are not excluded, each less probable.")
     rejected = [x for x in a.ranked if not x.survives and x.count == 1][:3]
@@ -248,25 +269,44 @@ def explanation_sentences(snapshot: Snapshot, limit: int = 6) -> list[str]:
     return out
 
 
+def explanation_sentences(snapshot: Snapshot, limit: int = 6) -> list[str]:
+    """All of it as sentences, one per explanation, then the remarks."""
+    return [" ".join(lines) for lines in explanations_in_words(snapshot, limit)] + remarks_on_explanations(
+        snapshot, limit
+    )
+
+
 def _names(account: Account) -> str:
     sets = account.alternatives or account.excluded_by_sign
     return " or ".join("+".join(f.candidate.name for f in s.faults) for s in sets)
 
 
-def _sentence(account: Account, a: Accounts) -> str:
-    parts = []
-    for s in account.alternatives:
-        sizes = "; ".join(
-            f"{f.candidate.name} {signed(f.size, f.sigma)} ± {plain(f.sigma, f.sigma)} {f.candidate.unit} "
-            f"(95 %: {signed(f.size - INTERVAL * f.sigma, f.sigma)} to {signed(f.size + INTERVAL * f.sigma, f.sigma)})"
-            for f in s.faults
-        )
-        parts.append(f"{alternative_phrase(s)} [{sizes}]")
-    text = ", or equally well ".join(parts)
+def _told(account: Account) -> list[str]:
+    lines = []
+    for i, s in enumerate(account.alternatives):
+        told = " and ".join(f"{fault_phrase(f)} ({_spread(f, len(s.faults) == 1)})" for f in s.faults)
+        exact = f", refitted χ² {account.refitted[i]:.2f}" if account.refitted else ""
+        lines.append(f"{'or ' if i else ''}{told}{exact}")
+    lines[-1] += "."
+    tied = "No reading here can tell these apart. " if len(lines) > 1 else ""
     if account.checks == 0:
-        return f"{text}. Granting this, no check is left, so nothing could contradict it."
-    left = f"Granting this, the other {_count(account.checks, 'check')} agree (χ² {account.left:.2f}, limit {account.limit:.2f})"
-    return f"{text}. {left}; probability {percent(account.probability)}."
+        lines.append(f"{tied}Granting it, no check is left, so nothing could contradict it.")
+        return lines
+    agree = "the other check agrees" if account.checks == 1 else f"the other {account.checks} checks agree"
+    order = "first-order " if account.refitted else ""
+    lines.append(
+        f"{tied}Granting it, {agree} ({order}χ² {account.left:.2f}, limit {account.limit:.2f}); "
+        f"probability {percent(account.probability)}."
+    )
+    return lines
+
+
+def _spread(f: SizedFault, interval: bool) -> str:
+    spread = f"± {plain(f.sigma, f.sigma)}"
+    if not interval:
+        return spread
+    low, high = f.size - INTERVAL * f.sigma, f.size + INTERVAL * f.sigma
+    return f"{spread}; 95 %: {signed(low, f.sigma)} to {signed(high, f.sigma)} {f.candidate.unit}"
 
 
 def separating_tests(a: Accounts, limit: int = 3) -> list[str]:

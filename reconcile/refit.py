@@ -1,0 +1,142 @@
+"""What a case looks like if an explanation is granted: solved again with those faults free."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from .accounts import Alternative
+from .adjust.solve import Problem
+from .adjust.table import Group, adjust_table
+from .model import Model
+
+if TYPE_CHECKING:
+    from .figures import FigureValue
+    from .results import Result
+
+__all__ = ["Granted", "figures_if", "grant", "problem_of"]
+
+Array = npt.NDArray[np.float64]
+
+
+def problem_of(model: Model, settings: Any) -> Problem:
+    """Return what all snapshots of a model share, as arrays."""
+    start = np.full(model.size, np.nan)
+    typical = model.system.starts
+    start[: typical.size] = typical
+    for source in (model.design, model.fixed):
+        start[list(source)] = list(source.values())
+    return Problem(
+        equations=model.with_shared,
+        sigma=model.sigma,
+        columns=model.columns,
+        readings=np.full(model.columns.size, np.nan),
+        fixed=np.array(sorted(model.fixed), dtype=np.int64),
+        start=start,
+        value_dependent=model.has_relative,
+        settle=settings.percent_at == "adjusted",
+        lower=model.lower,
+        upper=model.upper,
+    )
+
+
+@dataclass(frozen=True)
+class Granted:
+    """A snapshot solved with the faults of one explanation free.
+
+    Attributes
+    ----------
+    group : Group
+        With one snapshot.
+    left : float
+        Objective that remains.
+    checks : int
+        Checks that remain.
+    result : Result
+        The same as a result, so that figures and covariances can be asked for.
+    """
+
+    group: Group
+    left: float
+    checks: int
+    result: Result
+
+
+def grant(result: Result, index: int, alternative: Alternative) -> Granted | None:
+    """Solve one snapshot again with the faults of an explanation free.
+
+    Parameters
+    ----------
+    result : Result
+    index : int
+        Snapshot, counted from 0.
+    alternative : Alternative
+
+    Returns
+    -------
+    Granted or None
+        None where no consistent answer is found.
+    """
+    model = result.model
+    names = {f.candidate.name for f in alternative.faults}
+    free = {f.candidate.column for f in alternative.faults if f.candidate.column >= 0}
+    tags = {f.candidate.name for f in alternative.faults if f.candidate.reading >= 0}
+    opened = replace(model, fixed={c: v for c, v in model.fixed.items() if c not in free})
+    problem = problem_of(opened, result.settings)
+    start = problem.start.copy()
+    # A fault variable starts at the size that the explanation gives it.
+    for f in alternative.faults:
+        if f.candidate.column >= 0:
+            start[f.candidate.column] = f.size * f.candidate.scale
+    base = model.to_base(result.readings[index : index + 1])
+    base[0, result.group(index).absent] = np.nan
+    base[0, [i for i, t in enumerate(model.tags) if t in tags]] = np.nan
+    table = adjust_table(
+        replace(problem, start=start), base, names=lambda c: model.names[c], row_names=lambda r: model.row_names[r]
+    )
+    if table.failed:
+        return None
+    group = table.groups[0]
+    readings = result.readings[index : index + 1].copy()
+    readings[0, [j for j, t in enumerate(result.tags) if t in tags]] = np.nan
+    granted = replace(
+        result,
+        model=opened,
+        table=table,
+        readings=readings,
+        labels=(f"{result.labels[index]} granting {' and '.join(sorted(names))}",),
+        _explainers={},
+        _looked_at={},
+    )
+    left = float((group.parity**2).sum())
+    return Granted(group, left, group.checks, granted)
+
+
+def figures_if(result: Result, index: int, limit: int = 4) -> list[tuple[Alternative, tuple[FigureValue, ...]]]:
+    """Evaluate the figures of a case anew for every standing explanation of a snapshot.
+
+    Parameters
+    ----------
+    result : Result
+    index : int
+        Snapshot, counted from 0.
+    limit : int
+        At most so many explanations.
+
+    Returns
+    -------
+    list of (Alternative, figures)
+    """
+    accounts = result.snapshot(index).accounts
+    if accounts is None or not result.suspicious[index] or not result.figures:
+        return []
+    out = []
+    for account in accounts.standing[:limit]:
+        for alternative in account.alternatives:
+            granted = grant(result, index, alternative)
+            if granted is not None:
+                out.append((alternative, granted.result.figure_values(0)))
+    return out
