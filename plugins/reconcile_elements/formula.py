@@ -23,7 +23,9 @@ from fractions import Fraction
 from types import MappingProxyType
 from typing import NoReturn
 
-from reconcile.errors import InputError, Problem, did_you_mean
+from reconcile import did_you_mean
+
+from .refusal import Mistake, Refusal
 
 __all__ = ["SYMBOLS", "Formula", "parse_formula"]
 
@@ -94,7 +96,7 @@ def parse_formula(text: str) -> Formula:
 
     Raises
     ------
-    InputError
+    Refusal
         Codes ``formula-empty``, ``formula-unexpected`` (with the position counted from 1),
         ``formula-unknown-element``, ``formula-bracket``, ``formula-zero``, ``formula-charge-ambiguous``.
     """
@@ -272,7 +274,7 @@ class _Parser:
         self._fail("formula-bracket", f"bracket at position {opened} is never closed", "add the closing bracket")
 
     def _fail(self, code: str, message: str, hint: str = "") -> NoReturn:
-        raise InputError(Problem(code, f"{self.text!r}: {message}" if self.text else message, hint))
+        raise Refusal(Mistake(code, f"{self.text!r}: {message}" if self.text else message, hint))
 
 
 def _signed(sign: str, number: str) -> Fraction:

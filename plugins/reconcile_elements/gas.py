@@ -13,7 +13,9 @@ from typing import NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-from reconcile.errors import InputError, Problem, did_you_mean
+from reconcile import did_you_mean
+
+from .refusal import Mistake, Refusal
 
 __all__ = [
     "CONDITIONS",
@@ -77,15 +79,15 @@ def conditions(text: str) -> Conditions:
 
     Raises
     ------
-    InputError
+    Refusal
         ``gas-reference`` for names such as "standard", which do not say which standard.
     """
     if text in CONDITIONS:
         return CONDITIONS[text]
     known = "; ".join(CONDITIONS)
     hint = did_you_mean(text, CONDITIONS)
-    raise InputError(
-        Problem(
+    raise Refusal(
+        Mistake(
             "gas-reference",
             f"{text!r} does not state a temperature and a pressure that is known here",
             f"{hint} known: {known}".strip(),
@@ -124,8 +126,8 @@ def volume_factor(
     """
     before, after = reference.kpa - water_kpa, target.kpa - target_water_kpa
     if min(before, after) <= 0:
-        raise InputError(
-            Problem(
+        raise Refusal(
+            Mistake(
                 "gas-all-water",
                 "the water vapour pressure reaches the total pressure: no dry gas is left",
                 "check temperature and pressure; pressures are absolute",
@@ -172,12 +174,12 @@ def saturation_pressure(celsius: float) -> float:
 
     Raises
     ------
-    InputError
+    Refusal
         ``gas-temperature`` outside that range.
     """
     if not 0.0 <= celsius <= 373.946:
-        raise InputError(
-            Problem(
+        raise Refusal(
+            Mistake(
                 "gas-temperature",
                 f"{celsius:g} deg C is outside 0 to 373.946 deg C, where liquid water has a vapour pressure",
                 "check the temperature and its unit",
@@ -250,13 +252,13 @@ def inert_balance(
 
     Raises
     ------
-    InputError
+    Refusal
         ``gas-flow`` unless exactly one flow is given; ``gas-fractions`` if fractions leave no inert gas (percent
         given as fraction, for instance).
     """
     if (inflow is None) == (outflow is None):
-        raise InputError(
-            Problem("gas-flow", "an inert balance needs exactly one of inflow and outflow", "give one of them")
+        raise Refusal(
+            Mistake("gas-flow", "an inert balance needs exactly one of inflow and outflow", "give one of them")
         )
     o_in, c_in, o_out, c_out, w_in, w_out = (
         np.asarray(v, dtype=np.float64)
@@ -264,8 +266,8 @@ def inert_balance(
     )
     inert_in, inert_out = 1.0 - o_in - c_in - w_in, 1.0 - o_out - c_out - w_out
     if np.any(inert_in <= 0) or np.any(inert_out <= 0):
-        raise InputError(
-            Problem(
+        raise Refusal(
+            Mistake(
                 "gas-fractions",
                 "the fractions leave no inert gas",
                 "write fractions between 0 and 1; 20.95 % is 0.2095",

@@ -13,9 +13,8 @@ from __future__ import annotations
 from fractions import Fraction
 from types import MappingProxyType
 
-from reconcile.errors import InputError, Problem
-
 from .formula import Formula
+from .refusal import Mistake, Refusal
 
 __all__ = ["AVOGADRO_ELECTRON_MASS", "FARADAY", "STANDARD_WEIGHTS", "mass_fraction", "molar_mass"]
 
@@ -69,7 +68,7 @@ def molar_mass(formula: Formula) -> float:
 
     Raises
     ------
-    InputError
+    Refusal
         An element has no standard atomic weight (code ``no-standard-weight``), e.g. technetium.
     """
     return float(_sum(formula)) - float(formula.charge) * AVOGADRO_ELECTRON_MASS
@@ -83,8 +82,8 @@ def mass_fraction(formula: Formula, element: str) -> float:
 def _sum(formula: Formula) -> Fraction:
     missing = [symbol for symbol in formula.composition if symbol not in STANDARD_WEIGHTS]
     if missing:
-        raise InputError(
-            Problem(
+        raise Refusal(
+            Mistake(
                 "no-standard-weight",
                 f"{formula.text!r}: {', '.join(missing)} has no standard atomic weight (no stable isotopes of "
                 "known abundance)",

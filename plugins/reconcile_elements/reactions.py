@@ -11,9 +11,10 @@ from collections.abc import Iterable, Mapping, Sequence
 from fractions import Fraction
 from math import gcd, lcm
 
-from reconcile.errors import InputError, Problem, did_you_mean
+from reconcile import did_you_mean
 
 from .formula import Formula, parse_formula
+from .refusal import Mistake, Refusal
 
 __all__ = [
     "CHARGE",
@@ -84,15 +85,15 @@ def reduction_weights(
 
     Raises
     ------
-    InputError
+    Refusal
         ``nitrogen-source-missing`` when N occurs and its source is not stated, ``nitrogen-source-unknown``,
         ``reduction-reference-missing`` for an element without a usual end state, ``reduction-reference``.
     """
     compounds = {**_REFERENCES, **(references or {})}
     if nitrogen is not None:
         if nitrogen not in NITROGEN_SOURCES:
-            raise InputError(
-                Problem(
+            raise Refusal(
+                Mistake(
                     "nitrogen-source-unknown",
                     f"nitrogen source {nitrogen!r} is not known",
                     "write NH3, NO3 or N2",
@@ -109,15 +110,15 @@ def reduction_weights(
 def _weight(element: str, compounds: Mapping[str, str], known: Mapping[str, Fraction]) -> Fraction:
     if element not in compounds:
         if element == "N":
-            raise InputError(
-                Problem(
+            raise Refusal(
+                Mistake(
                     "nitrogen-source-missing",
                     "the degree of reduction of a compound with nitrogen depends on the nitrogen source",
                     "which is it: NH3 (N counts -3), NO3 (+5) or N2 (0)? State e.g. nitrogen_source: NH3",
                 )
             )
-        raise InputError(
-            Problem(
+        raise Refusal(
+            Mistake(
                 "reduction-reference-missing",
                 f"{element} has no usual end state to count its electrons from",
                 f"name its reference compound, e.g. references: {{{element}: ...}}",
@@ -126,8 +127,8 @@ def _weight(element: str, compounds: Mapping[str, str], known: Mapping[str, Frac
     compound = parse_formula(compounds[element])
     others = [e for e in compound.composition if e != element and e not in known]
     if not compound[element] or others:
-        raise InputError(
-            Problem(
+        raise Refusal(
+            Mistake(
                 "reduction-reference",
                 f"{compounds[element]!r} cannot be the reference compound of {element}",
                 f"write a compound of {element} with nothing but H, O and charge",
@@ -310,7 +311,7 @@ def require_balanced(
 
     Raises
     ------
-    InputError
+    Refusal
         ``reaction-unbalanced``, with both sides of each element that does not balance.
     """
     gaps = imbalance(coefficients, species)
@@ -327,8 +328,8 @@ def require_balanced(
         if abs(gap) > Fraction(tolerance) * max(abs(left), abs(right)):
             words.append(f"{row} {float(left):g} on the left, {float(right):g} on the right")
     if words:
-        raise InputError(
-            Problem(
+        raise Refusal(
+            Mistake(
                 "reaction-unbalanced",
                 f"{name} is not balanced: {'; '.join(words)}",
                 "correct a coefficient, or add the species that is missing (water, H+, CO2, ...)",
@@ -361,40 +362,38 @@ def parse_reaction(text: str, species: Mapping[str, Formula], *, name: str = "re
 
     Raises
     ------
-    InputError
-        ``reaction-arrow``, ``reaction-term``, ``reaction-species``, ``reaction-empty``: all problems at once.
+    Refusal
+        ``reaction-arrow``, ``reaction-term``, ``reaction-species``, ``reaction-empty``: all mistakes at once.
     """
     sides = text.split("->")
     if len(sides) != 2:
-        raise InputError(
-            Problem("reaction-arrow", f"{name}: {text!r} needs exactly one '->'", "write e.g. a + 2 b -> c")
-        )
+        raise Refusal(Mistake("reaction-arrow", f"{name}: {text!r} needs exactly one '->'", "write e.g. a + 2 b -> c"))
     net: dict[str, Fraction] = {}
-    problems = []
+    mistakes = []
     for sign, side in zip((-1, 1), sides, strict=True):
         for term in re.split(r"\s\+\s", f" {side} ") if side.strip() else []:
             found = _TERM.fullmatch(term.strip())
             if not found:
-                problems.append(
-                    Problem("reaction-term", f"{name}: cannot read {term.strip()!r}", "write e.g. 6 oxygen")
+                mistakes.append(
+                    Mistake("reaction-term", f"{name}: cannot read {term.strip()!r}", "write e.g. 6 oxygen")
                 )
             elif found[2] not in species:
-                problems.append(
-                    Problem(
+                mistakes.append(
+                    Mistake(
                         "reaction-species",
                         f"{name}: {found[2]!r} is not one of the species",
                         did_you_mean(found[2], species) or f"known: {', '.join(species)}",
                     )
                 )
             elif found[1] and _exact(found[1]) == 0:
-                problems.append(Problem("reaction-term", f"{name}: coefficient 0 of {found[2]}", "leave it out"))
+                mistakes.append(Mistake("reaction-term", f"{name}: coefficient 0 of {found[2]}", "leave it out"))
             else:
                 net[found[2]] = net.get(found[2], Fraction(0)) + sign * _exact(found[1] or "1")
     net = {label: value for label, value in net.items() if value}
-    if not net and not problems:
-        problems.append(Problem("reaction-empty", f"{name}: {text!r} changes nothing", "write e.g. a + 2 b -> c"))
-    if problems:
-        raise InputError(problems)
+    if not net and not mistakes:
+        mistakes.append(Mistake("reaction-empty", f"{name}: {text!r} changes nothing", "write e.g. a + 2 b -> c"))
+    if mistakes:
+        raise Refusal(mistakes)
     return net
 
 

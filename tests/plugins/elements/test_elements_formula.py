@@ -7,8 +7,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from reconcile_elements.formula import SYMBOLS, parse_formula
-
-from reconcile import InputError
+from reconcile_elements.refusal import Refusal
 
 
 def composition(text):
@@ -45,7 +44,7 @@ def composition(text):
 )
 def test_composition(text, expected):
     if expected is None:
-        with pytest.raises(InputError, match="unexpected 3 at position 1"):
+        with pytest.raises(Refusal, match="unexpected 3 at position 1"):
             parse_formula(text)
     else:
         assert composition(text) == expected
@@ -114,7 +113,7 @@ def test_electron():
     ],
 )
 def test_refusals(text, code, says):
-    with pytest.raises(InputError) as caught:
+    with pytest.raises(Refusal) as caught:
         parse_formula(text)
     assert caught.value.code == code
     assert says in str(caught.value)
@@ -154,7 +153,7 @@ def test_what_is_written_is_read_back(counts, charge):
 def test_any_text_is_read_or_refused(text):
     try:
         read, code = parse_formula(text), "formula-"
-    except InputError as error:
+    except Refusal as error:
         read, code = None, error.code
     assert code.startswith("formula-")
     assert read is None or all(count > 0 for count in read.composition.values())

@@ -19,8 +19,7 @@ from reconcile_elements.gas import (
     volume_factor,
     wet_fraction,
 )
-
-from reconcile import InputError
+from reconcile_elements.refusal import Refusal
 
 
 @pytest.mark.parametrize(
@@ -40,7 +39,7 @@ def test_choice_of_standard_moves_a_flow():
 
 
 def test_unknown_reference_lists_the_known_ones():
-    with pytest.raises(InputError, match="does not state a temperature and a pressure") as caught:
+    with pytest.raises(Refusal, match="does not state a temperature and a pressure") as caught:
         conditions("standard")
     assert caught.value.code == "gas-reference"
     assert "15 C, 101.325 kPa" in str(caught.value)
@@ -69,7 +68,7 @@ def test_saturation_pressure_in_the_physiologist_s_unit():
 
 
 def test_saturation_pressure_refuses_ice():
-    with pytest.raises(InputError, match=r"outside 0 to 373\.946"):
+    with pytest.raises(Refusal, match=r"outside 0 to 373\.946"):
         saturation_pressure(-5.0)
 
 
@@ -80,7 +79,7 @@ def test_btps_to_stpd():
 
 
 def test_no_dry_gas_left():
-    with pytest.raises(InputError, match="no dry gas is left"):
+    with pytest.raises(Refusal, match="no dry gas is left"):
         volume_factor(Conditions(100, 101.325, ""), CONDITIONS["0 C, 101.325 kPa"], water_kpa=101.4)
 
 
@@ -141,13 +140,13 @@ def test_wet_and_dry_analysis_agree_once_water_is_counted():
 
 
 def test_percent_given_as_fraction_is_refused():
-    with pytest.raises(InputError, match=r"20\.95 % is 0\.2095"):
+    with pytest.raises(Refusal, match=r"20\.95 % is 0\.2095"):
         inert_balance(oxygen_in=20.95, carbon_dioxide_in=0.04, oxygen_out=19.0, carbon_dioxide_out=1.0, inflow=1.0)
 
 
 @pytest.mark.parametrize("flows", [{}, {"inflow": 1.0, "outflow": 1.0}])
 def test_exactly_one_flow(flows):
-    with pytest.raises(InputError, match="exactly one of inflow and outflow"):
+    with pytest.raises(Refusal, match="exactly one of inflow and outflow"):
         inert_balance(oxygen_in=0.2, carbon_dioxide_in=0.0, oxygen_out=0.2, carbon_dioxide_out=0.0, **flows)
 
 

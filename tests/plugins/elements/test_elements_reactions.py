@@ -22,8 +22,7 @@ from reconcile_elements.reactions import (
     reduction_weights,
     require_balanced,
 )
-
-from reconcile import InputError
+from reconcile_elements.refusal import Refusal
 
 
 def species(**formulas):
@@ -92,19 +91,19 @@ def test_degree_of_reduction_by_definition(formula, nitrogen, gamma):
 
 
 def test_degree_of_reduction_asks_for_the_nitrogen_source():
-    with pytest.raises(InputError) as caught:
+    with pytest.raises(Refusal) as caught:
         degree_of_reduction("CH1.8O0.5N0.2")
     assert caught.value.code == "nitrogen-source-missing"
     assert "which is it: NH3 (N counts -3), NO3 (+5) or N2 (0)?" in str(caught.value)
 
 
 def test_nitrogen_source_must_be_known():
-    with pytest.raises(InputError, match="write NH3, NO3 or N2"):
+    with pytest.raises(Refusal, match="write NH3, NO3 or N2"):
         degree_of_reduction("NH3", "urea")
 
 
 def test_element_without_usual_end_state_is_asked_for():
-    with pytest.raises(InputError, match="Fe has no usual end state") as caught:
+    with pytest.raises(Refusal, match="Fe has no usual end state") as caught:
         degree_of_reduction("Fe+2")
     assert caught.value.code == "reduction-reference-missing"
     assert degree_of_reduction("Fe+2", references={"Fe": "Fe+3"}) == 1
@@ -112,7 +111,7 @@ def test_element_without_usual_end_state_is_asked_for():
 
 
 def test_reference_compound_must_fit():
-    with pytest.raises(InputError, match="cannot be the reference compound of Fe"):
+    with pytest.raises(Refusal, match="cannot be the reference compound of Fe"):
         degree_of_reduction("Fe+2", references={"Fe": "FeCl3"})
 
 
@@ -243,7 +242,7 @@ def test_species_with_a_plus_in_its_name():
     ],
 )
 def test_reaction_refusals(text, code, says):
-    with pytest.raises(InputError) as caught:
+    with pytest.raises(Refusal) as caught:
         parse_reaction(text, FERMENTATION, name="growth")
     assert caught.value.code == code
     assert says in str(caught.value)
@@ -252,16 +251,16 @@ def test_reaction_refusals(text, code, says):
 
 def test_unbalanced_reaction_names_both_sides():
     read = parse_reaction("glucose + 5 oxygen -> 6 carbon_dioxide + 6 water", FERMENTATION)
-    with pytest.raises(InputError, match="respiration is not balanced: O 16 on the left, 18 on the right"):
+    with pytest.raises(Refusal, match="respiration is not balanced: O 16 on the left, 18 on the right"):
         require_balanced(read, FERMENTATION, name="respiration")
     charged = species(**{"Fe+2": "Fe+2", "Fe+3": "Fe+3"})
-    with pytest.raises(InputError, match="charge 2 on the left, 3 on the right"):
+    with pytest.raises(Refusal, match="charge 2 on the left, 3 on the right"):
         require_balanced(parse_reaction("Fe+2 -> Fe+3", charged), charged)
 
 
 def test_rounded_coefficients_need_a_stated_tolerance():
     rounded = {"glucose": -1, "oxygen": -5.999, "carbon_dioxide": 6, "water": 6}
-    with pytest.raises(InputError, match="not balanced"):
+    with pytest.raises(Refusal, match="not balanced"):
         require_balanced(rounded, FERMENTATION)
     require_balanced(rounded, FERMENTATION, tolerance=1e-3)
 
