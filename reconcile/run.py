@@ -189,15 +189,19 @@ class Case:
                         Location(file=str(self.parts.spec.path)),
                     )
                 )
-            from .readings.csv_source import read_csv as read_readings
+            from .readings.sources import read_readings
 
             options = self.parts.spec.readings if isinstance(self.parts.spec.readings, dict) else {}
             given = {k: v for k, v in options.items() if k != "file"}
-            table = read_readings(path, expected=self.tags, **given)
+            table = read_readings(path, readers=self._readers(), expected=self.tags, **given)
         else:
             table = from_values(readings)
         self._check_columns(table)
         return table
+
+    def _readers(self) -> dict[str, Any]:
+        """Readers of measured data that plugins offer, by suffix or scheme."""
+        return {k: v for _, offered in self.plugins.each("reconcile_sources") for k, v in offered.items()}
 
     def _check_columns(self, table: ReadingsTable) -> None:
         problems = Problems(None)

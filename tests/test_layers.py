@@ -43,7 +43,12 @@ def test_kernels_know_only_arrays(path):
     for name in imports_of(path):
         if name.startswith("reconcile"):
             assert allowed(
-                name, "reconcile.adjust", "reconcile.diagnose", "reconcile.system", "reconcile.expression", "reconcile.errors"
+                name,
+                "reconcile.adjust",
+                "reconcile.diagnose",
+                "reconcile.system",
+                "reconcile.expression",
+                "reconcile.errors",
             ), f"{path.name} imports {name}"
         assert not allowed(name, "pandas", "yaml", "pint", "pydantic", "click", "scipy.stats", "scipy.optimize")
 
@@ -65,7 +70,9 @@ def test_nobody_imports_the_command_line_or_a_plugin(path):
 @pytest.mark.parametrize("path", files("report"), ids=lambda p: p.name)
 def test_reports_are_the_end_of_the_way(path):
     for name in imports_of(path):
-        assert not allowed(name, "reconcile.run", "reconcile.readings", "reconcile.domains") or _only_for_types(path, name)
+        assert not allowed(name, "reconcile.run", "reconcile.readings", "reconcile.domains") or _only_for_types(
+            path, name
+        )
 
 
 def _only_for_types(path: Path, name: str) -> bool:

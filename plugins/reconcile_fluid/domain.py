@@ -14,9 +14,7 @@ class FluidOptions(BaseModel):
     """Options under ``domains: {fluid: ...}``."""
 
     model_config = ConfigDict(extra="forbid")
-    unit: str = Field(
-        description="Unit of every flow in the network, mass or volume per time, e.g. kg/h or L/min"
-    )
+    unit: str = Field(description="Unit of every flow in the network, mass or volume per time, e.g. kg/h or L/min")
     leaks: bool = Field(True, description="Whether a loss at each node is considered as a possible fault")
 
 

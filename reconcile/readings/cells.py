@@ -301,6 +301,11 @@ class CellReader:
 
     def _limit(self, out: ParsedColumn, row: int, text: str, sign: str, rest: str) -> None:
         limit = self.number(rest)
+        if limit is None and (found := _NUMBER_WITH_UNIT.fullmatch(rest)) is not None:
+            words = f"{text!r} is a limit with its own unit, {found.group(2).strip()!r}"
+            hint = "write the limit in the unit of the column, without the unit"
+            out.faults.append((row, "limit-unit", words, hint))
+            return
         if limit is None:
             out.faults.append((row, *self._complain(text)))
             return

@@ -53,7 +53,7 @@ def read_fast(decoded: Decoded, delimiter: str, name: str, options: ReadOptions)
         return None
     columns = [list(c) for c in zip(*body, strict=True)]
     roles = match_columns(header, columns, options, name, None, problems)
-    if problems or top:
+    if problems or top or {"date", "time"} <= {h.casefold() for h in header}:
         return None
     numeric = {i for i in roles.tags.values() if i is not None}
     cells = telling_cells(columns[i] for i in numeric)

@@ -7,6 +7,7 @@ files are read by a compiled parser, whose result is used only if nothing about 
 from __future__ import annotations
 
 import hashlib
+import re
 from collections.abc import Sequence
 from itertools import pairwise
 from pathlib import Path
@@ -24,6 +25,7 @@ __all__ = ["FAST_FROM_BYTES", "parse_csv", "raw_from_records", "read_csv"]
 
 FAST_FROM_BYTES = 2_000_000
 _ODD_SPACES = "\u00a0\u2007\u202f"
+_CLOCK = re.compile(r"\d{1,2}:\d{2}")
 _NO_UNIT = ("", "-", "\u2013", "\u2014")
 
 
@@ -188,6 +190,8 @@ def raw_from_records(records: Records, name: str, delimiter: str, options: ReadO
     header = header[:width]
     body = _even_rows(body, body_lines, header, width, delimiter, name, problems)
     columns: list[Any] = [list(c) for c in zip(*body, strict=True)] if body else [[] for _ in header]
+    if options.time_column is None:
+        units = merge_date_and_clock(header, columns, units)
     raw = RawTable(name, header, columns, body_lines, header_line, units, notices=notices)
     _find_marks(raw, delimiter, options, problems)
     raw.echo.append(f"decimal mark {raw.marks.decimal!r}, thousands mark {raw.marks.thousands or 'none'}")
@@ -219,6 +223,20 @@ def find_header(rows: Sequence[Sequence[str]], expected: Sequence[str] | None) -
         if len(names) <= len(filled) or any(_numeric(c) for c in names):
             return i
     return 0
+
+
+def merge_date_and_clock(header: list[str], columns: list[Any], units: list[str] | None) -> list[str] | None:
+    """Join a column of days and one of times of day into one of stamps, in place; return the row of units."""
+    folded = [h.casefold() for h in header]
+    if "date" not in folded or "time" not in folded:
+        return units
+    day, clock = folded.index("date"), folded.index("time")
+    if not columns[day] or ":" in columns[day][0] or not _CLOCK.match(clean(columns[clock][0])):
+        return units
+    columns[day] = [f"{clean(a)} {clean(b)}" for a, b in zip(columns[day], columns[clock], strict=True)]
+    header[day] = "date time"
+    del header[clock], columns[clock]
+    return None if units is None else [u for i, u in enumerate(units) if i != clock]
 
 
 def _numeric(text: str) -> bool:

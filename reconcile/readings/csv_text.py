@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import codecs
 import csv
+import io
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 
@@ -146,10 +147,8 @@ def split_records(text: str, delimiter: str, problems: Problems, limit: int | No
         Stop after so many records.
     """
     out = Records()
-    # Lines are parted here, so that a lone carriage return and \r\n count as one line end each, but a line
-    # separator inside a quoted cell stays what it is.
-    source = text.replace("\r\n", "\n").replace("\r", "\n").split("\n")
-    reader = csv.reader((line + "\n" for line in source), delimiter=delimiter, strict=True)
+    # A lone carriage return and \r\n count as one line end each; other separators inside a cell stay what they are.
+    reader = csv.reader(io.StringIO(text, newline=None), delimiter=delimiter, strict=True)
     start = 1
     while True:
         try:
@@ -168,7 +167,7 @@ def split_records(text: str, delimiter: str, problems: Problems, limit: int | No
             break
         line, start = start, reader.line_num + 1
         if not any(cell and not cell.isspace() for cell in row):
-            out.blank += bool(line < len(source))
+            out.blank += 1
             continue
         if not out.rows and row[0].lstrip().startswith("#") and not row[0].lstrip().startswith("#,"):
             out.comments += 1

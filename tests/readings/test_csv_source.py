@@ -1,6 +1,7 @@
 """The CSV reader: what it understands, and what it says about what it does not."""
 
 import hashlib
+import subprocess
 import sys
 
 import numpy as np
@@ -163,6 +164,28 @@ def test_stamp_column_is_found_by_its_cells(write):
     assert str(table.time[0]) == "2025-04-03 10:00:00"
 
 
+def test_day_and_clock_in_two_columns(write):
+    table = read_csv(
+        write("Date,Time,FT-1\n,,kg/h\n2025-04-03,10:00,1.5\n2025-04-03,10:10:30,2.5\n"), expected=["FT-1"]
+    )
+    assert str(table.time[1]) == "2025-04-03 10:10:30"
+    assert table.units == {"FT-1": "kg/h"}
+
+
+def test_lone_carriage_returns_end_lines(write):
+    table = read_csv(write("A,B\r1,2\r3,4\r"))
+    assert table.lines.tolist() == [2, 3]
+
+
+def test_small_files_without_stamps_need_no_pandas(write):
+    path = write("A,B\n1,2\n")
+    code = (
+        f"import sys; from reconcile.readings import read_csv; read_csv({str(path)!r}); print('pandas' in sys.modules)"
+    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert done.stdout.strip() == "False"
+
+
 def test_remarks_and_kept_columns(write):
     table = read_csv(write('A,note,pump_run\n1,"a leak, small",1\n2,,0\n'), keep=["pump_run"])
     assert table.columns == ("A",)
@@ -196,6 +219,12 @@ def test_a_limit_of_zero_cannot_be(write):
     error = refusal(write("Cu\n0.1\n<0\n"))
     assert error.code == "limit-zero"
     assert "a limit of detection of 0 cannot be" in str(error)
+
+
+def test_a_limit_in_another_unit(write):
+    error = refusal(write("Cu [mg/l]\n0.1\n<50 \u00b5g/l\n"))
+    assert error.code == "limit-unit"
+    assert "is a limit with its own unit, '\u00b5g/l'; write the limit in the unit of the column" in str(error)
 
 
 def test_failed_formulas_are_missing_with_a_notice(write):
