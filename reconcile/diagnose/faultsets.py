@@ -13,8 +13,11 @@ from math import comb
 
 import numpy as np
 import numpy.typing as npt
+import scipy.sparse as sp
+from scipy.sparse.csgraph import connected_components
+from scipy.spatial import cKDTree
 
-from .lookalike import PARALLEL, LookAlikes, basis, same_space
+from .lookalike import ANGLE, PARALLEL, LookAlikes, basis, same_space
 
 __all__ = ["Spans", "choose_all", "count_sets", "expand", "make_spans", "raw_sets"]
 
@@ -23,6 +26,7 @@ Ints = npt.NDArray[np.int64]
 Set = tuple[int, ...]
 
 CHUNK = 50_000
+PROBES = 8
 
 
 def count_sets(candidates: int, most: int) -> int:
@@ -177,36 +181,48 @@ def _spanning(one: Set, gram: Array) -> Set:
 
 
 def _groups(rows: Ints, inverse: Array, units: Array) -> list[list[int]]:
-    """Rows that span the same space, found by a projection of two fixed vectors and then verified."""
+    """Rows that span the same space: found by how they project some fixed vectors, and then verified."""
     n, s = rows.shape
     if s == 1 or n == 1:
         return [[i] for i in range(n)]
-    probe = np.random.default_rng(20240229).normal(size=(2, units.shape[0]))
-    probe /= np.linalg.norm(probe, axis=1, keepdims=True)
-    h = probe @ units
-    key = np.einsum("qni,nij,qnj->nq", h[:, rows], inverse, h[:, rows])
-    order = np.argsort(key[:, 0], kind="stable")
-    breaks = np.flatnonzero(np.diff(key[order, 0]) > 1e-5) + 1
+    if s == units.shape[0]:
+        return [list(range(n))]
     groups: list[list[int]] = []
-    for run in np.split(order, breaks):
+    for run in _near(_keys(rows, inverse, units)):
         if run.size == 1:
             groups.append([int(run[0])])
             continue
-        local: list[tuple[float, Array | None, list[int]]] = []
-        for i in np.sort(run):
-            mine: Array | None = None
-            for at, (second, space, members) in enumerate(local):
-                if abs(second - key[i, 1]) > 1e-5:
-                    continue
-                if mine is None:
-                    mine = basis(units[:, rows[i]])
-                if space is None:
-                    space = basis(units[:, rows[members[0]]])
-                    local[at] = (second, space, members)
+        local: list[tuple[Array, list[int]]] = []
+        for i in run:
+            mine = basis(units[:, rows[i]])
+            for space, members in local:
                 if same_space(space, mine):
                     members.append(int(i))
                     break
             else:
-                local.append((float(key[i, 1]), mine, [int(i)]))
-        groups.extend(members for _, _, members in local)
+                local.append((mine, [int(i)]))
+        groups.extend(members for _, members in local)
     return sorted(groups, key=lambda g: g[0])
+
+
+def _keys(rows: Ints, inverse: Array, units: Array) -> Array:
+    """Squared lengths of the projections of fixed unit vectors: spaces at an angle t differ by at most sin t."""
+    probe = np.random.default_rng(20240229).normal(size=(PROBES, units.shape[0]))
+    h = (probe / np.linalg.norm(probe, axis=1, keepdims=True)) @ units
+    out = np.empty((rows.shape[0], PROBES))
+    for lo in range(0, rows.shape[0], CHUNK):
+        part = h[:, rows[lo : lo + CHUNK]]
+        out[lo : lo + CHUNK] = np.einsum("qni,nij,qnj->nq", part, inverse[lo : lo + CHUNK], part)
+    return out
+
+
+def _near(key: Array) -> list[Ints]:
+    """Runs of rows whose keys may belong to the same space, each in ascending order."""
+    bucket, where = np.unique(np.round(key, 8), axis=0, return_inverse=True)
+    reach = np.sqrt(PROBES) * ANGLE + 1e-7
+    pairs = cKDTree(bucket).query_pairs(reach, output_type="ndarray")
+    link = sp.coo_array((np.ones(len(pairs)), (pairs[:, 0], pairs[:, 1])), shape=(len(bucket),) * 2)
+    _, run = connected_components(link, directed=False)
+    label = run[where.ravel()]
+    order = np.argsort(label, kind="stable")
+    return np.split(order, np.flatnonzero(np.diff(label[order])) + 1)
