@@ -44,6 +44,8 @@ class Adjuster:
         Upper triangular factor R.
     order : ndarray of int, shape (r,)
         Column order of the factorisation.
+    pivots : ndarray of int, shape (r,)
+        Measured variables of the identity block of `form`: those that are known worst.
     elimination : Elimination
         What was done with the unmeasured variables.
     measured : ndarray, shape (m, n)
@@ -63,6 +65,7 @@ class Adjuster:
     q2: Array
     triangle: Array
     order: npt.NDArray[np.int64]
+    pivots: npt.NDArray[np.int64]
     elimination: Elimination
     measured: Array
     redundant: Bools
@@ -118,7 +121,12 @@ class Adjuster:
     @cached_property
     def cover_unmeasured(self) -> Array:
         """Factor of the covariance of the unmeasured variables, shape (n_u, q), same columns as `cover`."""
-        return -self.elimination.recover @ (self.measured @ self.cover)
+        # Variables known worst are put in terms of the others first: their large spreads would cancel only to rounding.
+        parts = self.elimination.recover @ self.measured
+        whole = np.abs(parts).max(axis=1, initial=0.0, keepdims=True)
+        parts = parts - parts[:, self.pivots] @ self.form
+        parts[np.abs(parts) < 1e-14 * whole] = 0.0
+        return -parts @ self.cover
 
     # ------------------------------------------------------------------ adjustment
 
@@ -246,7 +254,7 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
     whole = np.linalg.norm(a_m, axis=0)
     projected[:, np.linalg.norm(projected, axis=0) <= 1e-10 * whole] = 0.0
     projected[np.linalg.norm(projected, axis=1) <= 1e-10] = 0.0
-    form, transform, _ = independent_form(projected, sigma)
+    form, transform, pivots = independent_form(projected, sigma)
     redundant = np.any(form != 0, axis=0)
     transform = (transform @ elimination.keep) / size
     elimination = replace(elimination, recover=elimination.recover / size)
@@ -263,6 +271,7 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
         q2=q[:, r:],
         triangle=upper[:r],
         order=np.asarray(order, dtype=np.int64),
+        pivots=pivots,
         elimination=elimination,
         measured=measured,
         redundant=redundant,

@@ -109,18 +109,22 @@ def independent_form(rows: Array, sigma: Array) -> tuple[Array, Array, npt.NDArr
         Columns of the identity block.
     """
     m, n = rows.shape
-    weighted = rows * sigma
-    size = np.linalg.norm(weighted, axis=1)
-    live = size > 0
+    length = np.linalg.norm(rows, axis=1)
+    live = length > 0
     if m == 0 or n == 0 or not live.any():
         return np.zeros((0, n)), np.zeros((0, m)), np.zeros(0, dtype=np.int64)
-    weighted = weighted[live] / size[live, None]
-    upper, order = qr(weighted, mode="r", pivoting=True)
-    rank = _rank(np.abs(np.diag(upper)))
-    scaled = rows[live] / size[live, None]
-    p, lower, u = lu(scaled[:, order])
+    scaled = rows[live] / length[live, None]
+    order, rank, rest = np.arange(n), 0, scaled
+    while rest.size:
+        weighted = rest * sigma[order[rank:]]
+        upper, next_ = qr(weighted / np.linalg.norm(weighted, axis=1)[:, None], mode="r", pivoting=True)
+        order = np.concatenate([order[:rank], order[rank:][next_]])
+        rank += _rank(np.abs(np.diag(upper)))
+        p, lower, u = lu(scaled[:, order])
+        # Rows that only look dependent because sigmas differ by many orders still show here, where no sigma counts.
+        rest = u[rank:, rank:]
+        rest = rest[np.linalg.norm(rest, axis=1) > RANK_TOLERANCE]
     lead, rest = u[:rank, :rank], u[:rank, rank:]
-    # Row pivoting of the pivot columns may still find a smaller rank than the weighted columns promised.
     step = solve_triangular(lower[:rank, :rank], p.T[:rank], lower=True, unit_diagonal=True)
     form = np.zeros((rank, n))
     form[:, order[:rank]] = np.eye(rank)
@@ -128,7 +132,7 @@ def independent_form(rows: Array, sigma: Array) -> tuple[Array, Array, npt.NDArr
     tail[np.abs(tail) < 1e-14 * np.abs(tail).max(initial=0.0)] = 0.0
     form[:, order[rank:]] = tail
     transform = np.zeros((rank, m))
-    transform[:, live] = solve_triangular(lead, step) / size[live]
+    transform[:, live] = solve_triangular(lead, step) / length[live]
     return form, transform, order[:rank].astype(np.int64)
 
 
