@@ -203,8 +203,10 @@ class Snapshot:
         Their closures on the principal components of their covariance.
     checks_in_words : tuple of str
         The independent checks, each as a combination of variables.
-    reductions : str
-        What was done to get here: linearisations, rounds of sigma.
+    dependent : tuple of str
+        Balances that others imply.
+    steps : int
+        Linearisations that were needed.
     """
 
     label: str
@@ -223,7 +225,6 @@ class Snapshot:
     checks_in_words: tuple[str, ...]
     dependent: tuple[str, ...]
     steps: int
-    rounds: int
 
     def reading(self, tag: str) -> ReadingLine:
         """Line of a meter by its tag."""
@@ -326,7 +327,6 @@ def look(result: Result, index: int) -> Snapshot:
         checks_in_words=checks_in_words(model, group),
         dependent=dependent_in_words(model, group),
         steps=group.steps,
-        rounds=group.rounds,
     )
 
 

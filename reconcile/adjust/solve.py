@@ -15,6 +15,7 @@ import numpy.typing as npt
 
 from ..errors import SolveError
 from ..system import Equations
+from .accelerate import Acceleration
 from .dense import Adjuster, prepare
 
 __all__ = ["Problem", "Solution", "solve"]
@@ -23,7 +24,6 @@ Array = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
 
 MAX_STEPS = 100
-MAX_SIGMA_ROUNDS = 50
 
 
 @dataclass(frozen=True)
@@ -85,8 +85,8 @@ class Solution:
         At the solution.
     sigma : ndarray, shape (k,)
         Sigma of every reading as it was used.
-    steps, rounds : int
-        Linearisations in the last round, and rounds of sigma.
+    steps : int
+        Linearisations that were needed.
     """
 
     x: Array
@@ -98,7 +98,6 @@ class Solution:
     jacobian: Array
     sigma: Array
     steps: int
-    rounds: int
 
 
 def solve(problem: Problem, *, names: Callable[[int], str], row_names: Callable[[int], str]) -> Solution:
@@ -121,34 +120,17 @@ def solve(problem: Problem, *, names: Callable[[int], str], row_names: Callable[
         variable. Nothing half-solved is returned.
     """
     present = np.flatnonzero(np.isfinite(problem.readings))
-    measured = problem.columns[present]
     taken = np.zeros(problem.start.size, dtype=bool)
-    taken[measured] = True
+    taken[problem.columns[present]] = True
     taken[problem.fixed] = True
     free = np.flatnonzero(~taken)
-    values = np.where(np.isfinite(problem.readings), problem.readings, 0.0)
     x = _start(problem, present, free)
-    solution = None
-    for round_ in range(1, MAX_SIGMA_ROUNDS + 1):
-        sigma = problem.sigma(values)
-        _check_sigma(sigma[present], lambda i: names(int(measured[i])))
-        equations = problem.equations(values)
-        solution = _linearise(problem, equations, sigma, present, free, x, round_, names, row_names)
-        x = solution.x
-        if not (problem.settle and problem.value_dependent):
-            return solution
-        new = x[problem.columns]
-        change = np.abs(problem.sigma(new)[present] - sigma[present]) / sigma[present]
-        values = new
-        if change.max(initial=0.0) < 1e-12:
-            return solution
-    if solution is not None and change.max() < 1e-6:
-        return solution
-    raise SolveError(
-        f"sigmas stated in percent did not settle in {MAX_SIGMA_ROUNDS} rounds",
-        code="sigma-unsettled",
-        hint="state an absolute part for meters that read near zero",
-    )
+    # Sigmas start at the readings; absent ones do not count, so any value serves.
+    values = np.where(np.isfinite(problem.readings), problem.readings, 0.0)
+    step = _Linearised(problem, present, free, names, row_names)
+    if not problem.value_dependent and problem.equations(values).is_linear:
+        return step.at(np.where(np.isfinite(x), x, 0.0), values).solution(1)
+    return _iterate(step, x, values)
 
 
 def _check_sigma(sigma: Array, name: Callable[[int], str]) -> None:
@@ -178,96 +160,122 @@ def _start(problem: Problem, present: Ints, free: Ints) -> Array:
     return x
 
 
-def _linearise(
-    problem: Problem,
-    equations: Equations,
-    sigma: Array,
-    present: Ints,
-    free: Ints,
-    x: Array,
-    round_: int,
-    names: Callable[[int], str],
-    row_names: Callable[[int], str],
-) -> Solution:
-    measured = problem.columns[present]
-    y, s = problem.readings[present], sigma[present]
+@dataclass(frozen=True)
+class _Pass:
+    """One linearisation, and where it leads."""
 
-    def pass_at(x: Array) -> tuple[Adjuster, Array, Array, Array]:
-        jacobian = equations.jacobian(x).toarray()
-        rhs = jacobian @ x - equations.closure(x)
-        known = rhs - jacobian[:, problem.fixed] @ x[problem.fixed]
-        adjuster = prepare(jacobian[:, measured], jacobian[:, free], s)
-        if equations.is_linear:
-            reference = known
-        else:  # undetermined directions stay where they are instead of jumping to zero
-            reference = known - jacobian[:, free] @ x[free]
-        xm, parity = adjuster.adjust(y[None], known)
-        new = x.copy()
-        new[measured] = xm[0]
-        moved = adjuster.unmeasured(xm, reference)[0]
-        new[free] = moved if equations.is_linear else x[free] + moved
-        return adjuster, new, parity[0], jacobian
+    x: Array
+    target: Array
+    parity: Array
+    adjuster: Adjuster
+    jacobian: Array
+    equations: Equations
+    sigma: Array
+    step: _Linearised
 
-    if equations.is_linear:
-        x = np.where(np.isfinite(x), x, 0.0)
-        adjuster, x, parity, jacobian = pass_at(x)
-        return Solution(x, parity, adjuster, present, free, equations, jacobian, sigma, 1, round_)
-
-    x = _close_unmeasured(equations, x, free)
-    penalty = np.zeros(equations.shape[0])
-    small = 0
-    for step in range(1, MAX_STEPS + 1):
-        with np.errstate(all="ignore"):
-            adjuster, target, parity, jacobian = _guarded(pass_at, x, equations, row_names)
-        direction = target - x
-        multiplier = np.abs(adjuster.rows_to_parity.T @ parity)
-        penalty = np.maximum(penalty, 2.0 * multiplier)
-        length = _line_search(equations, x, direction, measured, y, s, penalty)
-        x = x + length * direction
-        closure = np.abs(equations.closure(x)) / np.maximum(equations.largest_term(x), 1e-300)
-        in_sigma = np.abs(length * direction[measured] / s).max(initial=0.0)
-        relative = np.abs(length * direction[free]) / np.maximum(np.abs(x[free]), 1e-9)
-        det = adjuster.observable
-        small = (
-            small + 1
-            if (
-                length == 1.0
-                and closure.max(initial=0.0) < 1e-11
-                and in_sigma < 1e-7
-                and relative[det].max(initial=0.0) < 1e-8
-            )
-            else 0
+    def solution(self, steps: int) -> Solution:
+        s = self.step
+        return Solution(
+            self.target, self.parity, self.adjuster, s.present, s.free, self.equations, self.jacobian, self.sigma, steps
         )
-        if small:
-            adjuster, target, parity, jacobian = pass_at(x)
-            return Solution(target, parity, adjuster, present, free, equations, jacobian, sigma, step, round_)
+
+
+class _Linearised:
+    """Solves the snapshot with the balances linearised, and the sigmas taken, at a given point."""
+
+    def __init__(
+        self,
+        problem: Problem,
+        present: Ints,
+        free: Ints,
+        names: Callable[[int], str],
+        row_names: Callable[[int], str],
+    ) -> None:
+        self.problem, self.present, self.free, self.names, self.row_names = problem, present, free, names, row_names
+        self.measured = problem.columns[present]
+        self.y = problem.readings[present]
+
+    def at(self, x: Array, values: Array) -> _Pass:
+        problem, free = self.problem, self.free
+        sigma = problem.sigma(values)
+        _check_sigma(sigma[self.present], lambda i: self.names(int(self.measured[i])))
+        equations = problem.equations(values)
+        closure = equations.closure(x)
+        jacobian = equations.jacobian(x).toarray()
+        if not np.all(np.isfinite(closure)) or not np.all(np.isfinite(jacobian)):
+            bad = np.flatnonzero(~np.isfinite(closure) | ~np.isfinite(jacobian).all(axis=1))
+            raise SolveError(
+                f"balance {self.row_names(int(bad[0]))!r} is not a finite number at the current values",
+                code="not-finite",
+                hint="check units and expected values",
+            )
+        known = jacobian @ x - closure - jacobian[:, problem.fixed] @ x[problem.fixed]
+        adjuster = prepare(jacobian[:, self.measured], jacobian[:, free], sigma[self.present])
+        adjusted, parity = adjuster.adjust(self.y[None], known)
+        target = x.copy()
+        target[self.measured] = adjusted[0]
+        if equations.is_linear:
+            target[free] = adjuster.unmeasured(adjusted, known)[0]
+        else:
+            # Undetermined directions stay where they are instead of jumping to zero.
+            target[free] += adjuster.unmeasured(adjusted, known - jacobian[:, free] @ x[free])[0]
+        return _Pass(x, target, parity[0], adjuster, jacobian, equations, sigma, self)
+
+
+def _iterate(step: _Linearised, x: Array, values: Array) -> Solution:
+    """Repeat the linearised solution until balances, values and sigmas have settled."""
+    problem, measured, free = step.problem, step.measured, step.free
+    equations = problem.equations(values)
+    if not equations.is_linear:
+        x = _close_unmeasured(equations, x, free)
+    x = np.where(np.isfinite(x), x, 0.0)
+    penalty = np.zeros(equations.shape[0])
+    size = np.zeros(x.size)
+    size[measured], size[free] = problem.sigma(values)[step.present], np.maximum(np.abs(x[free]), 1e-6)
+    memory = Acceleration(size)
+    for count in range(1, MAX_STEPS + 1):
+        with np.errstate(all="ignore"):
+            now = step.at(x, values)
+        s = now.sigma[step.present]
+        direction = now.target - x
+        closure = np.abs(now.equations.closure(x)) / np.maximum(now.equations.largest_term(x), 1e-300)
+        in_sigma = np.abs(direction[measured] / s).max(initial=0.0)
+        relative = np.abs(direction[free]) / np.maximum(np.abs(x[free]), 1e-9)
+        settled = in_sigma < 1e-7 and relative[now.adjuster.observable].max(initial=0.0) < 1e-8
+        if count > 1 and settled and closure.max(initial=0.0) < 1e-11:
+            return now.solution(count)
+        penalty = np.maximum(penalty, 2.0 * np.abs(now.adjuster.rows_to_parity.T @ now.parity))
+        if in_sigma < 1e-5 and closure.max(initial=0.0) < 1e-8:
+            # So near to the end the merit function is all rounding, and the full step is the right one.
+            x = now.target
+        else:
+            x = _next_point(now, direction, penalty, memory)
+        if problem.settle:
+            values = x[problem.columns]
     worst = int(np.argmax(closure))
-    weight = np.abs(jacobian[worst]) * np.maximum(np.abs(x), 1e-12)
+    weight = np.abs(now.jacobian[worst]) * np.maximum(np.abs(x), 1e-12)
     weight[problem.fixed] = 0.0
+    most = int(np.argmax(weight))
     raise SolveError(
-        f"balance {row_names(worst)!r} was not closed after {MAX_STEPS} steps (worst {closure[worst]:.1e} of its "
-        f"largest term); nothing is exported. Most influential: {names(int(np.argmax(weight)))} at {x[np.argmax(weight)]:.6g}",
+        f"no consistent answer in {MAX_STEPS} steps: balance {step.row_names(worst)!r} closes to {closure[worst]:.1e} of its "
+        f"largest term, values still move by {in_sigma:.1e} sigma; nothing is exported. Most influential: "
+        f"{step.names(most)} at {x[most]:.6g}",
         code="no-convergence",
         hint="check its unit and value, or state an expected value under design:",
     )
 
 
-def _guarded(
-    pass_at: Callable[[Array], tuple[Adjuster, Array, Array, Array]],
-    x: Array,
-    equations: Equations,
-    row_names: Callable[[int], str],
-) -> tuple[Adjuster, Array, Array, Array]:
-    try:
-        return pass_at(x)
-    except ValueError as error:
-        bad = np.flatnonzero(~np.isfinite(equations.closure(x)))
-        where = f" in balance {row_names(int(bad[0]))!r}" if bad.size else ""
-        raise SolveError(
-            f"the balances are not finite{where} at the current values ({error})",
-            code="not-finite",
-            hint="check units and expected values",
-        ) from error
+def _next_point(now: _Pass, direction: Array, penalty: Array, memory: Acceleration) -> Array:
+    """Damped step from one linearisation, or a leap over several where that lowers the merit function."""
+    merit = _Merit(now, penalty)
+    length = merit.search(direction)
+    if length < 1.0:
+        memory.forget()
+        return np.asarray(now.x + length * direction)
+    leap = memory.propose(now.x, direction)
+    if leap is not None and merit(leap) <= merit(now.x):
+        return leap
+    return now.target
 
 
 def _close_unmeasured(equations: Equations, x: Array, free: Ints) -> Array:
@@ -293,23 +301,30 @@ def _close_unmeasured(equations: Equations, x: Array, free: Ints) -> Array:
     return x
 
 
-def _line_search(
-    equations: Equations, x: Array, direction: Array, measured: Ints, y: Array, s: Array, penalty: Array
-) -> float:
-    """Longest of 1, 1/2, 1/4, ... that lowers the exact-penalty merit function enough."""
+class _Merit:
+    """Exact-penalty merit function of one step: objective and closures together."""
 
-    def merit(z: Array) -> float:
+    def __init__(self, now: _Pass, penalty: Array) -> None:
+        self.now, self.penalty = now, penalty
+        self.s = now.sigma[now.step.present]
+
+    def __call__(self, z: Array) -> float:
         with np.errstate(all="ignore"):
-            value = 0.5 * (((y - z[measured]) / s) ** 2).sum() + (penalty * np.abs(equations.closure(z))).sum()
+            off = (self.now.step.y - z[self.now.step.measured]) / self.s
+            value = 0.5 * (off**2).sum() + (self.penalty * np.abs(self.now.equations.closure(z))).sum()
         return float(value) if np.isfinite(value) else np.inf
 
-    before = merit(x)
-    objective_slope = -(((y - x[measured]) / s) * (direction[measured] / s)).sum()
-    slope = objective_slope - (penalty * np.abs(equations.closure(x))).sum()
-    length = 1.0
-    floor = 1e-13 * max(1.0, abs(before))
-    while length > 1e-6:
-        if merit(x + length * direction) <= before + 1e-4 * length * min(slope, 0.0) + floor:
-            return length
-        length *= 0.5
-    return length
+    def search(self, direction: Array) -> float:
+        """Longest of 1, 1/2, 1/4, ... that lowers the merit function enough."""
+        x, measured = self.now.x, self.now.step.measured
+        before = self(x)
+        off = (self.now.step.y - x[measured]) / self.s
+        slope = -(off * (direction[measured] / self.s)).sum()
+        slope -= (self.penalty * np.abs(self.now.equations.closure(x))).sum()
+        length = 1.0
+        floor = 1e-12 * max(1.0, abs(before))
+        while length > 1e-6:
+            if self(x + length * direction) <= before + 1e-4 * length * min(slope, 0.0) + floor:
+                return length
+            length *= 0.5
+        return length

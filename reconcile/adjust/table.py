@@ -45,8 +45,8 @@ class Group:
     jacobian : ndarray, shape (m, n)
     sigma : ndarray, shape (k,)
         Sigma of every reading as used.
-    steps, rounds : int
-        Linearisations and rounds of sigma that were needed.
+    steps : int
+        Linearisations that were needed.
     """
 
     rows: Ints
@@ -61,7 +61,6 @@ class Group:
     jacobian: Array
     sigma: Array
     steps: int
-    rounds: int
 
     @property
     def checks(self) -> int:
@@ -185,7 +184,7 @@ def adjust_table(
 def _single(row: int, s: Solution, columns: Ints, absent: Ints) -> Group:
     return Group(
         np.array([row]), s.x[None], s.parity[None], s.adjuster, s.present, absent, columns, s.free,
-        s.equations, s.jacobian, s.sigma, s.steps, s.rounds,
+        s.equations, s.jacobian, s.sigma, s.steps,
     )  # fmt: skip
 
 
@@ -226,7 +225,6 @@ def _linear(
                 whole.equations,
                 whole.jacobian,
                 whole.sigma,
-                1,
                 1,
             )
         )
