@@ -7,7 +7,7 @@ import sys
 from collections.abc import Callable
 from functools import wraps
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 import click
 
@@ -62,6 +62,13 @@ _plugin = click.option(
 @click.option("--parquet", is_flag=True, help="Write the tables of --out as Parquet, too.")
 @click.option("--exclude", multiple=True, metavar="TAG", help="Leave a meter out; needs --because, one for each.")
 @click.option("--because", multiple=True, metavar="TEXT", help="Why the meter is left out; stands in the result.")
+@click.option(
+    "--suspects",
+    type=click.Choice(["flag", "exclude", "compensate"]),
+    default="flag",
+    show_default=True,
+    help="What the adjusted values do about a suspect where the evidence names one.",
+)
 @click.option("--strict", is_flag=True, help="Exit with 1 when readings disagree.")
 @click.option("--json", "as_json", is_flag=True, help="Print the summary as JSON.")
 @click.option("--snapshot", type=int, help="Print this snapshot in detail, counted from 1.")
@@ -74,6 +81,7 @@ def run(
     parquet: bool,
     exclude: tuple[str, ...],
     because: tuple[str, ...],
+    suspects: Literal["flag", "exclude", "compensate"],
     strict: bool,
     as_json: bool,
     snapshot: int | None,
@@ -93,7 +101,7 @@ def run(
         )
     loaded = load_case(case, plugins=plugins)
     reasons = dict(zip(exclude, because, strict=True))
-    result = loaded.run(readings, exclude=reasons)
+    result = loaded.run(readings, exclude=reasons, suspects=suspects)
     if as_json:
         click.echo(json.dumps(result.to_dict(), indent=2, ensure_ascii=False))
     else:

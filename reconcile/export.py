@@ -80,7 +80,7 @@ def _evidence(result: Result) -> pd.DataFrame:
     for i in range(result.size):
         if i in result.table.failed:
             rows.append(
-                (result.labels[i], np.nan, 0, np.nan, np.nan, "not solved", "", np.nan, str(result.table.failed[i]))
+                (result.labels[i], np.nan, 0, np.nan, np.nan, "not solved", "", np.nan, "", str(result.table.failed[i]))
             )
             continue
         named, probability = most_likely(result, i)
@@ -94,11 +94,21 @@ def _evidence(result: Result) -> pd.DataFrame:
                 result.words[i],
                 named,
                 probability,
+                decision_of(result, i),
                 "" if result.checks[i] else "no check possible",
             )
         )
-    columns = ["snapshot", "objective", "checks", "limit", "p_value", "word", "explanation", "probability", "reason"]
+    columns = [
+        "snapshot", "objective", "checks", "limit", "p_value", "word", "explanation", "probability", "decision", "reason",
+    ]  # fmt: skip
     return pd.DataFrame(rows, columns=columns)
+
+
+def decision_of(result: Result, index: int) -> str:
+    """Return what was done about a suspect in one snapshot: flagged unless the user chose otherwise."""
+    if index in result.decisions:
+        return result.decisions[index].words
+    return "flagged" if result.suspicious[index] else ""
 
 
 def most_likely(result: Result, index: int) -> tuple[str, float]:
@@ -219,6 +229,7 @@ def summary_of(result: Result) -> dict[str, Any]:
                 "p_value": _number(result.p_value[i]),
                 "explanation": named,
                 "probability": _number(probability),
+                "decision": decision_of(result, i),
                 "suspects": [s.as_dict() for s in suspects_of(result.snapshot(i))] if result.suspicious[i] else [],
             }
         )
@@ -367,11 +378,16 @@ def _resource(stem: str, name: str, frame: pd.DataFrame, path: Path, result: Res
 def _write_covariance(result: Result, path: Path) -> None:
     """Covariance of the adjusted variables, one for each group of snapshots that share it."""
     shown = result.model.shown
+    groups = list(result.table.groups)
+    group_of = result.table.group_of.copy()
+    for i, decision in result.decisions.items():
+        group_of[i] = len(groups)
+        groups.append(decision.granted.group)
     arrays: dict[str, Any] = {
         "variables": np.array(result.variables, dtype=np.str_),
-        "group_of_snapshot": result.table.group_of,
+        "group_of_snapshot": group_of,
     }
-    for g, group in enumerate(result.table.groups):
+    for g, group in enumerate(groups):
         arrays[f"factor_{g}"] = group.cover[shown]
     with path.open("wb") as file:
         np.savez(file, **arrays)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 import numpy.typing as npt
@@ -11,13 +11,14 @@ import numpy.typing as npt
 from .accounts import Alternative
 from .adjust.solve import Problem
 from .adjust.table import Group, adjust_table
+from .diagnose.verdict import Conclusion
 from .model import Model
 
 if TYPE_CHECKING:
     from .figures import FigureValue
     from .results import Result
 
-__all__ = ["Granted", "figures_if", "grant", "problem_of"]
+__all__ = ["Decision", "Granted", "decide", "figures_if", "grant", "problem_of"]
 
 Array = npt.NDArray[np.float64]
 
@@ -63,6 +64,59 @@ class Granted:
     left: float
     checks: int
     result: Result
+
+
+@dataclass(frozen=True)
+class Decision:
+    """What was done about a suspect in one snapshot.
+
+    Attributes
+    ----------
+    policy : str
+        ``exclude`` or ``compensate``.
+    alternative : Alternative
+        The explanation that was granted.
+    granted : Granted
+    words : str
+        The decision in words.
+    """
+
+    policy: str
+    alternative: Alternative
+    granted: Granted
+    words: str
+
+
+def decide(result: Result, policy: Literal["exclude", "compensate"]) -> Result:
+    """Compute the adjusted values with suspects granted, wherever the evidence names one explanation.
+
+    Parameters
+    ----------
+    result : Result
+    policy : {"exclude", "compensate"}
+        Values are the same, since a reading with an unknown bias says nothing: ``exclude`` reports what the suspect
+        reads as calculated, ``compensate`` as its reading less the estimated bias.
+
+    Returns
+    -------
+    Result
+        The evidence stays that of all readings; snapshots in which the evidence cannot tell are left as they were.
+    """
+    decisions: dict[int, Decision] = {}
+    for i in np.flatnonzero(result.suspicious):
+        accounts = result.snapshot(int(i)).accounts
+        if accounts is None or accounts.conclusion is not Conclusion.ONE:
+            continue
+        alternative = accounts.standing[0].alternatives[0]
+        granted = grant(result, int(i), alternative)
+        if granted is None:
+            continue
+        named = " and ".join(
+            f"{f.candidate.name} ({f.size:+.4g} +/- {f.sigma:.2g} {f.candidate.unit})" for f in alternative.faults
+        )
+        verb = "excluded" if policy == "exclude" else "compensated for"
+        decisions[int(i)] = Decision(policy, alternative, granted, f"{verb} {named}")
+    return replace(result, decisions=decisions, _explainers={}, _looked_at={})
 
 
 def grant(result: Result, index: int, alternative: Alternative) -> Granted | None:

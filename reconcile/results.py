@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from .case.spec import CaseSpec
     from .diagnose.explain import Explainer
     from .figures import FigureValue
+    from .refit import Decision
     from .snapshot import Snapshot
 
 __all__ = ["CLASSES", "Result", "word_of_evidence"]
@@ -73,6 +74,8 @@ class Result:
         Why a reading was not used, where it was not simply missing.
     figures : mapping of str to str
         Derived values asked for.
+    decisions : mapping of int to Decision
+        Snapshots whose adjusted values were computed with a suspect granted, and what was decided.
     cautions, notices : tuple
         What has to be said with the result.
     provenance : mapping
@@ -89,6 +92,7 @@ class Result:
     excluded: Mapping[str, str] = field(default_factory=dict)
     statuses: Mapping[tuple[int, str], str] = field(default_factory=dict)
     figures: Mapping[str, str] = field(default_factory=dict)
+    decisions: Mapping[int, Decision] = field(default_factory=dict)
     cautions: tuple[str, ...] = ()
     notices: tuple[Notice, ...] = ()
     provenance: Mapping[str, Any] = field(default_factory=dict)
@@ -124,17 +128,29 @@ class Result:
         out.setflags(write=False)
         return out
 
+    def _decided(self, values: Array, of_group: Any) -> Array:
+        """Replace the rows of snapshots in which a suspect was granted."""
+        if not self.decisions:
+            return values
+        out = values.copy()
+        for i, decision in self.decisions.items():
+            out[i] = of_group(decision.granted.group)
+        out.setflags(write=False)
+        return out
+
     @cached_property
     def adjusted(self) -> Array:
         """Adjusted values of the variables, shape (N, v); nan where they cannot be calculated."""
         shown = self.model.shown
-        return self._spread(lambda g: np.where(g.determined[shown], g.x[:, shown], np.nan), shown.size)
+        out = self._spread(lambda g: np.where(g.determined[shown], g.x[:, shown], np.nan), shown.size)
+        return self._decided(out, lambda g: np.where(g.determined[shown], g.x[0, shown], np.nan))
 
     @cached_property
     def sigmas(self) -> Array:
         """Their standard uncertainties, shape (N, v)."""
         shown = self.model.shown
-        return self._spread(lambda g: np.linalg.norm(g.cover[shown], axis=1), shown.size)
+        out = self._spread(lambda g: np.linalg.norm(g.cover[shown], axis=1), shown.size)
+        return self._decided(out, lambda g: np.linalg.norm(g.cover[shown], axis=1))
 
     @cached_property
     def objective(self) -> Array:
@@ -195,8 +211,13 @@ class Result:
 
     def covariance(self, snapshot: int = 0) -> Array:
         """Full covariance of the adjusted variables, shape (v, v); nan where they cannot be calculated."""
-        cover = self.group(snapshot).cover[self.model.shown]
+        cover = self.final_group(snapshot).cover[self.model.shown]
         return cover @ cover.T
+
+    def final_group(self, snapshot: int) -> Group:
+        """Linearisation that the exported values of a snapshot come from, a granted suspect considered."""
+        decision = self.decisions.get(snapshot)
+        return self.group(snapshot) if decision is None else decision.granted.group
 
     # ------------------------------------------------------------------ detail and words
 
@@ -239,7 +260,9 @@ class Result:
         """Return the derived values of the case for one snapshot, with uncertainties and shares."""
         from .figures import evaluate
 
-        return tuple(evaluate(name, text, self, index) for name, text in self.figures.items())
+        decision = self.decisions.get(index)
+        source, row = (self, index) if decision is None else (decision.granted.result, 0)
+        return tuple(evaluate(name, text, source, row) for name, text in self.figures.items())
 
     def to_frame(self) -> pd.DataFrame:
         """One tidy table: a row per snapshot and reading, and per variable that is not read.

@@ -9,7 +9,7 @@ from dataclasses import dataclass, replace
 from functools import cached_property
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 import numpy.typing as npt
@@ -23,7 +23,7 @@ from .assemble import Assembled, assemble
 from .domains import Plugins, load_plugins
 from .errors import InputError, Location, Notice, Problem, Problems, did_you_mean
 from .readings.table import ReadingsTable
-from .refit import problem_of
+from .refit import decide, problem_of
 from .results import Result
 
 if TYPE_CHECKING:
@@ -121,6 +121,7 @@ class Case:
         readings: str | Path | pd.DataFrame | Mapping[str, Any] | ReadingsTable | None = None,
         *,
         exclude: Mapping[str, str] | None = None,
+        suspects: Literal["flag", "exclude", "compensate"] = "flag",
         **settings: Any,
     ) -> Result:
         """Adjust readings, test them, and look for explanations.
@@ -131,6 +132,8 @@ class Case:
             A column a meter, a row a snapshot; what the case names when left out.
         exclude : mapping of tag to reason, optional
             Meters to leave out; each needs a reason, which stands in the result.
+        suspects : {"flag", "exclude", "compensate"}
+            What the adjusted values do about a suspect where the evidence names one explanation; see `decide`.
         **settings
             Settings of the case to replace: level, power, max_faults, ...
 
@@ -154,7 +157,7 @@ class Case:
         chosen = replace(spec.settings, **settings) if settings else spec.settings
         adjusted = adjust_table(self.problem(chosen), base, names=self.name_of_column, row_names=self.name_of_row)
         self._refuse_contradictions(adjusted)
-        return Result(
+        result = Result(
             title=self.title,
             model=self.model,
             table=adjusted,
@@ -169,8 +172,9 @@ class Case:
             figures=spec.figures,
             cautions=self.parts.cautions,
             notices=(*self.parts.notices, *table.notices, *self._bound_notices(adjusted)),
-            provenance=self._provenance(table, chosen),
+            provenance=self._provenance(table, chosen, suspects),
         )
+        return result if suspects == "flag" else decide(result, suspects)
 
     def read(self, readings: Any = None) -> ReadingsTable:
         """Read readings and check that their columns fit the meters; see `run`."""
@@ -339,7 +343,7 @@ class Case:
             out[column] = (ends[0], ends[1])
         return out
 
-    def _provenance(self, table: ReadingsTable, settings: Any) -> dict[str, Any]:
+    def _provenance(self, table: ReadingsTable, settings: Any, suspects: str) -> dict[str, Any]:
         spec = self.parts.spec
         used = {name: self.plugins.domains[name].domain.version for name in spec.domains}
         libraries = {}
@@ -355,6 +359,7 @@ class Case:
             "domains": used,
             "case": spec.path.name,
             "case_sha256": hashlib.sha256(spec.path.read_bytes()).hexdigest(),
+            "suspects": suspects,
             "readings_sha256": table.source_hash,
         }
 

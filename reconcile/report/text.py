@@ -214,6 +214,8 @@ def _closing(result: Result) -> list[str]:
     out: list[str] = []
     if result.excluded:
         out += ["", "LEFT OUT", *(wrap(f"{tag}: {why}") for tag, why in result.excluded.items())]
+    if result.decisions:
+        out += ["", "DECIDED", *(wrap(f"{result.labels[i]}: {d.words}") for i, d in result.decisions.items())]
     if result.notices:
         out += ["", "NOTICES", *(wrap(str(n)) for n in result.notices)]
     for caution in result.cautions:

@@ -63,7 +63,7 @@ def test_the_evidence_names_the_bad_snapshot(result, tmp_path):
     back = load_corrected(tmp_path)
     assert list(back.evidence["word"]).count("agrees") == 4
     assert back.evidence["explanation"][4] == "R"
-    assert list(back.suspects["fault"])[0] == "R"
+    assert back.suspects["fault"].iloc[0] == "R"
     assert back.evidence["checks"][2] == 2
 
 
@@ -113,3 +113,27 @@ def test_one_changed_digit_changes_the_hash_and_only_its_row(datasets, tmp_path)
 def test_summary_is_strict_json(result):
     text = json.dumps(reconcile.export.summary_of(result), allow_nan=False)
     assert json.loads(text)["snapshots"][4]["explanation"] == "R"
+
+
+def test_what_is_done_about_a_suspect_is_the_users_choice_and_recorded(datasets, tmp_path):
+    case = reconcile.load_case(datasets / "membrane_skid")
+    flagged = case.run()
+    excluded = case.run(suspects="exclude")
+    compensated = case.run(suspects="compensate")
+    by_hand = case.run(exclude={"R": "what if"})
+    assert not np.array_equal(flagged.adjusted, excluded.adjusted)
+    np.testing.assert_allclose(excluded.adjusted, by_hand.adjusted, rtol=1e-12)
+    np.testing.assert_allclose(excluded.sigmas, by_hand.sigmas, rtol=1e-9)
+    np.testing.assert_allclose(excluded.adjusted, compensated.adjusted, rtol=1e-12)
+    assert excluded.objective[0] == flagged.objective[0]
+    for result, word in ((flagged, "flagged"), (excluded, "excluded R"), (compensated, "compensated for R")):
+        write(result, tmp_path / word)
+        back = load_corrected(tmp_path / word)
+        assert back.evidence["decision"][0].startswith(word)
+        np.testing.assert_allclose(np.sqrt(np.diag(back.covariance(0))), result.sigmas[0], rtol=1e-12)
+    assert excluded.figure_values()[0].value == pytest.approx(by_hand.figure_values()[0].value, rel=1e-12)
+
+
+def test_a_suspect_that_cannot_be_told_is_left_as_it_is(datasets):
+    case = reconcile.load_case(datasets / "crystalliser")
+    assert np.array_equal(case.run().adjusted, case.run(suspects="exclude").adjusted, equal_nan=True)
