@@ -48,6 +48,8 @@ class Domain:
         Extra keys of streams and nodes that this domain reads with ``network.of_streams(key)``.
     after : tuple of str
         Domains that must write first when both are used, because this one reads their variables.
+    needs_streams : bool
+        Whether the domain has nothing to say about a case without streams.
     caution : str
         What the trade must be told with every result; printed and exported.
     forgotten : tuple of str
@@ -61,6 +63,7 @@ class Domain:
     stream_options: ClassVar[type[BaseModel] | None] = None
     node_options: ClassVar[type[BaseModel] | None] = None
     after: ClassVar[tuple[str, ...]] = ()
+    needs_streams: ClassVar[bool] = True
     caution: ClassVar[str] = ""
     forgotten: ClassVar[tuple[str, ...]] = ()
 

@@ -334,7 +334,7 @@ class Model:
         else:
             words = (
                 "{item} reads {direction} by {size} {unit}",
-                "read {item} a second way: bucket and stopwatch, a second meter",
+                _second_way(r.unit),
             )
         kind = {"meter": "bias", "prior": "constant", "cause": "shared error"}[r.kind]
         item = r.tag.removeprefix("shared:").removeprefix("known:")
@@ -351,6 +351,14 @@ class Model:
     def fault_columns(self) -> Ints:
         """Columns of the fault variables, in the order of the candidates behind the readings."""
         return np.array([c.column for c in self.candidates if c.column >= 0], dtype=np.int64)
+
+
+def _second_way(unit: str) -> str:
+    """How a reading is checked by hand; flows can be caught in a bucket."""
+    of_flow = unit.endswith(("/s", "/min", "/h", "/d"))
+    return "take a second reading of {item}" + (
+        " (bucket and stopwatch, a second meter)" if of_flow else " by another method"
+    )
 
 
 def build_model(

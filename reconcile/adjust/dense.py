@@ -20,7 +20,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.linalg import qr, solve_triangular
 
-from .eliminate import Elimination, eliminate, independent_form
+from .eliminate import Elimination, balanced_scales, eliminate, independent_form
 
 __all__ = ["Adjuster", "prepare"]
 
@@ -245,26 +245,34 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
         raise ValueError("a coefficient of the balances is not a finite number")
     if not np.all(sigma > 0) or not np.all(np.isfinite(sigma)):
         raise ValueError("every sigma must be a finite number above zero")
-    size = np.sqrt((measured**2).sum(axis=1) + (unmeasured**2).sum(axis=1))
-    size[size == 0] = 1.0
-    a_m, a_u = measured / size[:, None], unmeasured / size[:, None]
+    sigma = np.asarray(sigma, dtype=float)
+    n = measured.shape[1]
+    rows, columns = balanced_scales(np.hstack([measured, unmeasured]))
+    unit, unit_u = columns[:n], columns[n:]
+    a_m, a_u = rows[:, None] * measured * unit, rows[:, None] * unmeasured * unit_u
     elimination = eliminate(a_u)
     projected = elimination.keep @ a_m
     # What the projection only rounds to zero is zero: judged against the column it came from.
     whole = np.linalg.norm(a_m, axis=0)
     projected[:, np.linalg.norm(projected, axis=0) <= 1e-10 * whole] = 0.0
     projected[np.linalg.norm(projected, axis=1) <= 1e-10] = 0.0
-    form, transform, pivots = independent_form(projected, sigma)
+    form, transform, pivots = independent_form(projected, sigma / unit)
     redundant = np.any(form != 0, axis=0)
-    transform = (transform @ elimination.keep) / size
-    elimination = replace(elimination, recover=elimination.recover / size)
-    n, r = measured.shape[1], form.shape[0]
+    form = unit[pivots, None] * form / unit
+    transform = unit[pivots, None] * (transform @ elimination.keep) * rows
+    elimination = replace(
+        elimination,
+        keep=elimination.keep * rows,
+        recover=unit_u[:, None] * elimination.recover * rows,
+        null=unit_u[:, None] * elimination.null,
+    )
+    r = form.shape[0]
     by_sigma = np.argsort(-sigma, kind="stable")
     q, upper, order = qr((form * sigma).T[by_sigma], pivoting=True) if r else (np.eye(n), np.zeros((n, 0)), [])
     back = np.argsort(by_sigma)
     q = np.asarray(q)[back]
     return Adjuster(
-        sigma=np.asarray(sigma, dtype=float),
+        sigma=sigma,
         form=form,
         transform=transform,
         q1=q[:, :r],

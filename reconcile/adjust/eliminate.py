@@ -13,7 +13,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.linalg import lu, qr, solve_triangular
 
-__all__ = ["Elimination", "dependent_rows", "eliminate", "independent_form"]
+__all__ = ["Elimination", "balanced_scales", "dependent_rows", "eliminate", "independent_form"]
 
 Array = npt.NDArray[np.float64]
 
@@ -45,6 +45,35 @@ class Elimination:
     rank: int
 
 
+def balanced_scales(matrix: Array) -> tuple[Array, Array]:
+    """Scales of rows and columns that bring the coefficients to comparable size, so that units do not matter.
+
+    Powers of two: scaling then rounds nothing, and rows that differ by very little keep their difference.
+
+    Parameters
+    ----------
+    matrix : ndarray, shape (m, n)
+
+    Returns
+    -------
+    rows, columns : ndarray, shapes (m,) and (n,)
+        ``rows[:, None] * matrix * columns`` has geometric means of rows and columns near 1 and no row with a
+        largest entry far from 1.
+    """
+    i, j = np.nonzero(matrix)
+    size = np.log2(np.abs(matrix[i, j]))
+    m, n = matrix.shape
+    row, column = np.zeros(m), np.zeros(n)
+    in_row, in_column = np.maximum(np.bincount(i, minlength=m), 1), np.maximum(np.bincount(j, minlength=n), 1)
+    for _ in range(10):
+        column = -np.bincount(j, size + row[i], minlength=n) / in_column
+        row = -np.bincount(i, size + column[j], minlength=m) / in_row
+    column = np.round(column)
+    largest = np.full(m, -np.inf)
+    np.maximum.at(largest, i, size + column[j])
+    return 2.0 ** -np.round(np.where(np.isfinite(largest), largest, 0.0)), 2.0**column
+
+
 def eliminate(unmeasured: Array) -> Elimination:
     """Project the unmeasured variables out of the rows.
 
@@ -60,13 +89,16 @@ def eliminate(unmeasured: Array) -> Elimination:
     m, n = unmeasured.shape
     scale = np.linalg.norm(unmeasured, axis=0)
     scale[scale == 0] = 1.0
-    if n == 0 or not np.any(unmeasured):
+    # Rows without unmeasured variables are kept as they are, to the last bit.
+    touched = np.flatnonzero(np.any(unmeasured != 0, axis=1))
+    alone = np.flatnonzero(np.all(unmeasured == 0, axis=1))
+    if touched.size == 0:
         return Elimination(np.eye(m), np.zeros((n, m)), np.eye(n), np.zeros(n, dtype=bool), 0)
-    q, r, order = qr(unmeasured / scale, pivoting=True)
+    q, r, order = qr(unmeasured[touched] / scale, pivoting=True)
     rank = _rank(np.abs(np.diag(r)))
     top, rest = order[:rank], order[rank:]
     recover = np.zeros((n, m))
-    recover[top] = solve_triangular(r[:rank, :rank], q[:, :rank].T)
+    recover[np.ix_(top, touched)] = solve_triangular(r[:rank, :rank], q[:, :rank].T)
     null = np.zeros((n, n - rank))
     if rest.size:
         tied = -solve_triangular(r[:rank, :rank], r[:rank, rank:])
@@ -75,8 +107,10 @@ def eliminate(unmeasured: Array) -> Elimination:
         null[rest, np.arange(rest.size)] = 1.0
     recover /= scale[:, None]
     null /= scale[:, None]
-    keep = q[:, rank:].T
-    keep[np.abs(keep) < 1e-15] = 0.0
+    keep = np.zeros((m - rank, m))
+    keep[np.arange(alone.size), alone] = 1.0
+    mixed = q[:, rank:].T
+    keep[alone.size :, touched] = np.where(np.abs(mixed) < 1e-15, 0.0, mixed)
     return Elimination(keep, recover, null, ~np.any(null != 0, axis=1), rank)
 
 
@@ -109,8 +143,8 @@ def independent_form(rows: Array, sigma: Array) -> tuple[Array, Array, npt.NDArr
         Columns of the identity block.
     """
     m, n = rows.shape
-    length = np.linalg.norm(rows, axis=1)
-    live = length > 0
+    length = 2.0 ** np.round(np.log2(np.maximum(np.linalg.norm(rows, axis=1), 1e-300)))
+    live = np.any(rows != 0, axis=1)
     if m == 0 or n == 0 or not live.any():
         return np.zeros((0, n)), np.zeros((0, m)), np.zeros(0, dtype=np.int64)
     scaled = rows[live] / length[live, None]

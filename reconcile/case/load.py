@@ -127,7 +127,8 @@ class _CaseReader:
         raw_streams = self._table("streams", ("name", "stream"), ("path", "source", "target", *options.keys("stream")),
                                   any_key=options.open_ended("stream"))  # fmt: skip
         streams = read_streams(raw_streams, options)
-        if not raw_streams and "streams" in self.data and isinstance(self.data["streams"], dict):
+        wanted = self.models is None or any(self.models[d].needs_streams for d in domains if d in self.models)
+        if wanted and not raw_streams and "streams" in self.data and isinstance(self.data["streams"], dict):
             self.problems.add(
                 "no-streams",
                 "the case has no streams",

@@ -41,11 +41,14 @@ class DomainModels:
         For ``domains: {name: {...}}``; None means that the domain takes no options.
     stream, node : type of pydantic model, or None
         For extra keys of streams and nodes.
+    needs_streams : bool
+        Whether the domain has nothing to say without streams.
     """
 
     options: type[BaseModel] | None
     stream: type[BaseModel] | None = None
     node: type[BaseModel] | None = None
+    needs_streams: bool = True
 
 
 @dataclass(frozen=True)

@@ -34,6 +34,8 @@ MARKS = {"agrees": "✓", "watch": "!", "does not agree": "✗", "cannot tell": 
 """Each word of evidence has a mark, so that colour is never needed."""
 
 INTERVAL = 1.959963984540054
+IMPROBABLE = 0.02
+MOST_ALTERNATIVES = 8
 
 
 @dataclass(frozen=True)
@@ -209,8 +211,10 @@ def _named(a: Accounts | None) -> list[str]:
         return [f"Most likely {alternative_phrase(first)} (probability {percent(first.probability)})."]
     least = f"At least {a.at_least} faults. " if a.at_least and a.at_least > 1 else ""
     if Reason.TIED in a.reasons:
-        options = ", or ".join(alternative_phrase(s) for s in best.alternatives)
-        return [f"{least}Cannot tell: {options}."]
+        plausible, others = plausible_alternatives(best)
+        options = ", or ".join(alternative_phrase(s) for s in plausible)
+        more = f" ({others} more fit equally well, but would have to be improbably large)" if others else ""
+        return [f"{least}Cannot tell: {options}{more}."]
     if Reason.SATURATED in a.reasons and best.checks == 0:
         return [f"{least}Cannot tell: with {best.count} assumed no check is left that could contradict it."]
     rivals = ", ".join(
@@ -281,14 +285,24 @@ def _names(account: Account) -> str:
     return " or ".join("+".join(f.candidate.name for f in s.faults) for s in sets)
 
 
+def plausible_alternatives(account: Account) -> tuple[tuple[Alternative, ...], int]:
+    """Alternatives that are not improbable beside the best one, and how many are left out."""
+    best = account.alternatives[0].probability
+    kept = tuple(s for s in account.alternatives if s.probability >= IMPROBABLE * best)[:MOST_ALTERNATIVES]
+    return kept, len(account.alternatives) - len(kept)
+
+
 def _told(account: Account) -> list[str]:
     lines = []
-    for i, s in enumerate(account.alternatives):
+    plausible, others = plausible_alternatives(account)
+    for i, s in enumerate(plausible):
         told = " and ".join(f"{fault_phrase(f)} ({_spread(f, len(s.faults) == 1)})" for f in s.faults)
         exact = f", refitted χ² {account.refitted[i]:.2f}" if account.refitted else ""
         lines.append(f"{'or ' if i else ''}{told}{exact}")
     lines[-1] += "."
     tied = "No reading here can tell these apart. " if len(lines) > 1 else ""
+    if others:
+        tied += f"{others} more fit equally well, but would have to be improbably large. "
     if account.checks == 0:
         lines.append(f"{tied}Granting it, no check is left, so nothing could contradict it.")
         return lines
@@ -315,7 +329,7 @@ def separating_tests(a: Accounts, limit: int = 3) -> list[str]:
         return []
     counts: Counter[str] = Counter()
     for account in a.standing:
-        for s in account.alternatives:
+        for s in plausible_alternatives(account)[0]:
             for f in s.faults:
                 c = f.candidate
                 if c.separate:

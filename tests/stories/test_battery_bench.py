@@ -15,7 +15,7 @@ CASE = """
 reconcile: 1
 title: Battery bench (invented)
 domains:
-  fluid: {unit: A h, leaks: false}
+  fluid: {unit: A h, leaks: none}
 streams:
   supply: outside -> bus
   string_1: bus -> outside
