@@ -76,12 +76,12 @@ known:
 ANALYSES = {
     # Hem, Study and Interpretation of the Chemical Characteristics of Natural Water (USGS Water-Supply Paper 2254),
     # figure 37 data as carried by a public-domain data file; mg/L. Sums in meq/L and error in percent as computed there.
-    "12-6": (dict(Ca=43, Mg=20, Na=28, K=4.6, HCO3=254, SO4=8.3, Cl=28, F=0.5, NO3=0.1), 5.127, 5.153, -0.25),
-    "15-1": (dict(Ca=48, Mg=3.6, Na=2.1, HCO3=152, SO4=3.2, Cl=8), 2.783, 2.783, -0.01),
-    "17-3": (dict(Ca=49, Mg=18, Na=168, HCO3=202, SO4=44, Cl=246, F=0.1, NO3=2.2), 11.234, 11.206, 0.12),
-    "10": (dict(Ca=37, Mg=24, Na=611, HCO3=429, SO4=1010, Cl=82, F=0.6), 30.398, 30.404, -0.01),
+    "12-6": ({"Ca": 43, "Mg": 20, "Na": 28, "K": 4.6, "HCO3": 254, "SO4": 8.3, "Cl": 28, "F": 0.5, "NO3": 0.1}, 5.127, 5.153, -0.25),
+    "15-1": ({"Ca": 48, "Mg": 3.6, "Na": 2.1, "HCO3": 152, "SO4": 3.2, "Cl": 8}, 2.783, 2.783, -0.01),
+    "17-3": ({"Ca": 49, "Mg": 18, "Na": 168, "HCO3": 202, "SO4": 44, "Cl": 246, "F": 0.1, "NO3": 2.2}, 11.234, 11.206, 0.12),
+    "10": ({"Ca": 37, "Mg": 24, "Na": 611, "HCO3": 429, "SO4": 1010, "Cl": 82, "F": 0.6}, 30.398, 30.404, -0.01),
 }
-CHARGES = dict(Ca=2, Mg=2, Na=1, K=1, HCO3=-1, SO4=-2, Cl=-1, F=-1, NO3=-1)
+CHARGES = {"Ca": 2, "Mg": 2, "Na": 1, "K": 1, "HCO3": -1, "SO4": -2, "Cl": -1, "F": -1, "NO3": -1}
 
 
 @pytest.mark.parametrize("sample", ANALYSES)
@@ -105,7 +105,7 @@ def test_published_stream_samples(datasets):
     with (datasets / "stream_water" / "readings.csv").open() as file:
         rows = list(csv.DictReader(file))
     assert len(rows) == 21
-    signs = dict(H_ion=1, Ca=1, Mg=1, Na=1, K=1, Alk=-1, NO2NO3=-1, Cl=-1, SO4=-1, F=-1)
+    signs = {"H_ion": 1, "Ca": 1, "Mg": 1, "Na": 1, "K": 1, "Alk": -1, "NO2NO3": -1, "Cl": -1, "SO4": -1, "F": -1}
     for row in rows[:11]:
         read = {k: float(row[k]) if row[k] else 0.0 for k in signs}
         cations = sum(v for k, v in read.items() if signs[k] > 0)
@@ -122,22 +122,22 @@ def test_published_stream_samples(datasets):
 def test_reference_seawater_is_neutral(write_case):
     # Millero, Feistel, Wright & McDougall 2008, Deep-Sea Res. I 55, 50: mole fractions times 1e7; from memory, cross-read
     # in an open package. Designed to be neutral to the last digit.
-    moles = dict(
-        Na=4188071,
-        Mg=471678,
-        Ca=91823,
-        K=91159,
-        Sr=810,
-        Cl=4874839,
-        SO4=252152,
-        HCO3=15340,
-        Br=7520,
-        CO3=2134,
-        BOH4=900,
-        F=610,
-        OH=71,
-    )
-    charge = dict(Na=1, Mg=2, Ca=2, K=1, Sr=2, Cl=-1, SO4=-2, HCO3=-1, Br=-1, CO3=-2, BOH4=-1, F=-1, OH=-1)
+    moles = {
+        "Na": 4188071,
+        "Mg": 471678,
+        "Ca": 91823,
+        "K": 91159,
+        "Sr": 810,
+        "Cl": 4874839,
+        "SO4": 252152,
+        "HCO3": 15340,
+        "Br": 7520,
+        "CO3": 2134,
+        "BOH4": 900,
+        "F": 610,
+        "OH": 71,
+    }
+    charge = {"Na": 1, "Mg": 2, "Ca": 2, "K": 1, "Sr": 2, "Cl": -1, "SO4": -2, "HCO3": -1, "Br": -1, "CO3": -2, "BOH4": -1, "F": -1, "OH": -1}
     listed = "\n".join(f"        {k}: {{charge: {charge[k]}, unit: mmol/L}}" for k in moles)
     meters = "\n".join(f"  {k}: {{reads: sea.{k}, unit: mmol/L, sigma: 1 % of reading}}" for k in moles)
     text = f"domains:\n  charge:\n    circuit: false\n    solutions:\n      sea:\n{listed}\nstreams: {{}}\nmeters:\n{meters}\n"
