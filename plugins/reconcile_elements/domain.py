@@ -18,7 +18,7 @@ class Elements(Domain):
     """Atoms and charge are conserved, whatever reacts.
 
     Variables
-        ``stream.species``, an amount per time; for a gas or a known mixture ``stream.flow``; for a gas
+        ``stream.species``, an amount per time; for a gas or a known mixture ``stream.total``; for a gas
         ``stream.species.fraction`` (dry or wet, as the stream says) and ``stream.volume_flow`` at stated conditions;
         ``stream.species.mass`` of weighed species; ``stream.current`` of electrons;
         ``node.reaction``, the extent of a reaction; ``node.species.accumulation``; and the shared parameters
@@ -36,7 +36,7 @@ class Elements(Domain):
     options: ClassVar[type[BaseModel]] = ElementsOptions
     stream_options: ClassVar[type[BaseModel]] = ElementsStream
     node_options: ClassVar[type[BaseModel]] = ElementsNode
-    after: ClassVar[tuple[str, ...]] = ("fluid", "charge")
+    after: ClassVar[tuple[str, ...]] = ("charge",)
     caution: ClassVar[str] = (
         "Closed balances do not prove that a vessel is tight: CO2, NH3, H2S and solvent vapour can escape unseen. "
         "Where hydrogen and oxygen meet (electrolysis, oxygen-enriched gas), a leak or crossover term is a hazard to "

@@ -230,7 +230,7 @@ def _streams(
                 f"stream {name!r} is a wet gas, but water is not among its species",
                 "add the water, or write gas: dry",
             )
-        if said.get("volume_at") and gas is None and len(species) > 1:
+        if said.get("volume_at") and gas is None and not composition and len(species) > 1:
             mistakes.add(
                 "wet-or-dry",
                 f"stream {name!r} has a gas volume, but not whether it is dry or wet",
@@ -316,6 +316,12 @@ def _uncertain(mistakes: Mistakes, plan: Plan) -> None:
                     f"uncertain: {row!r} does not occur in {name!r} ({formula.text})",
                     did_you_mean(row, [*formula.composition, REDUCTION]),
                 )
+        if "C" in sigmas and name in plan.options.weighed:
+            mistakes.add(
+                "uncertain-carbon",
+                f"{name!r} is weighed, and its carbon subscript is uncertain as well",
+                "write the formula per carbon and put the uncertainty into weighed: sigma",
+            )
         for stream in plan.streams:
             if name in stream.species and stream.gas and stream.can_leak:
                 mistakes.add(
@@ -353,6 +359,14 @@ def _possible(mistakes: Mistakes, plan: Plan, index: int) -> None:
         free = {s for j, s in enumerate(reacting) if any(v[j] for v in basis)}
     else:
         free = {s for r in node.reactions for s in plan.reactions[r]}
+        for species in free - set(present) - set(node.accumulates):
+            using = [r for r in node.reactions if species in plan.reactions[r]]
+            if len(using) == 1:
+                mistakes.add(
+                    "species-nowhere",
+                    f"reaction {using[0]!r} at {node.name!r} makes or uses {species!r}, which no stream there holds",
+                    "add it to a stream; it needs no meter",
+                )
     for species in present:
         if species in free or species in node.accumulates or (species in into and species in out):
             continue

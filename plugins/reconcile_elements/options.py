@@ -17,7 +17,16 @@ __all__ = ["ElementsNode", "ElementsOptions", "ElementsStream", "Weighed", "requ
 
 T = TypeVar("T")
 
-_RESERVED = {"flow", "volume_flow", "current", "atoms", "carbon_fraction", "degree_of_reduction"}
+_RESERVED = {
+    "air_drawn_in",
+    "atoms",
+    "carbon_fraction",
+    "current",
+    "degree_of_reduction",
+    "gas_lost",
+    "total",
+    "volume_flow",
+}
 _MASS = {"k": "kg", "": "g", "m": "mg", "u": "ug", "µ": "ug", "n": "ng"}
 _VOLUME = {"k": "m3", "": "L", "m": "mL", "u": "uL", "µ": "uL", "n": "nL"}
 _SECONDS = {"s": 1.0, "min": 60.0, "h": 3600.0, "d": 86400.0, "day": 86400.0}

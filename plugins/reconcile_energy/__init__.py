@@ -10,7 +10,7 @@ from .domain import Energy
 from .sensors import SwappedPair, swapped_pairs
 
 if TYPE_CHECKING:
-    from reconcile.results import Result
+    from reconcile import Result
 
 __all__ = ["Energy", "SwappedPair", "swapped_pairs"]
 

@@ -7,8 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from reconcile import Network, System
-from reconcile.errors import did_you_mean
+from reconcile import Network, System, did_you_mean
 from reconcile.units import (
     UnitProblem,
     describe_kind,

@@ -11,7 +11,7 @@ import numpy as np
 from reconcile import Network, Section
 
 if TYPE_CHECKING:
-    from reconcile.results import Result
+    from reconcile import Result
 
 __all__ = ["SwappedPair", "section", "swapped_pairs"]
 

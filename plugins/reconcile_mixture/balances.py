@@ -8,8 +8,7 @@ import numpy as np
 import numpy.typing as npt
 import scipy.sparse as sp
 
-from reconcile import Network, System
-from reconcile.expression import Expression
+from reconcile import Expression, Network, System
 
 from .faults import Losses, declare_losses
 from .layout import Part, Plan

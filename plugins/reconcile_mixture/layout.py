@@ -8,8 +8,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from reconcile import Network, System
-from reconcile.errors import did_you_mean
+from reconcile import Network, System, did_you_mean
 from reconcile.units import UnitProblem, describe_kind, factor_offset, same_kind
 
 from .options import Component, MixtureOptions, Ore, Phase

@@ -6,6 +6,7 @@ import math
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
+from ..mixups import mixups_of
 from ..refit import figures_if
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
@@ -96,6 +97,10 @@ def _detail(result: Result, index: int) -> list[str]:
     if unread:
         out += ["", _unread(unread)]
     told = explanations_in_words(s)
+    simple = mixups_of(result, index)[:3]
+    if simple:
+        out += ["", "SIMPLE MIX-UPS (put right, all readings agree; no size is fitted)"]
+        out += [wrap(f"{m.words}: leaves χ² {m.left:.2f}, limit {m.limit:.2f}.") for m in simple]
     if told:
         out += ["", "EXPLANATIONS"]
         for i, lines in enumerate(told, 1):

@@ -89,9 +89,7 @@ def models_in_the_tree():
     found = {}
     for package in sorted((ROOT / "plugins").glob("reconcile_*/__init__.py")):
         for kind in import_module(package.parent.name).reconcile_domains():
-            found[kind.name] = DomainModels(
-                kind.options, kind.stream_options, kind.node_options, kind.needs_streams
-            )
+            found[kind.name] = DomainModels(kind.options, kind.stream_options, kind.node_options, kind.needs_streams)
     return found
 
 

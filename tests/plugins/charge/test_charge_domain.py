@@ -76,9 +76,19 @@ known:
 ANALYSES = {
     # Hem, Study and Interpretation of the Chemical Characteristics of Natural Water (USGS Water-Supply Paper 2254),
     # figure 37 data as carried by a public-domain data file; mg/L. Sums in meq/L and error in percent as computed there.
-    "12-6": ({"Ca": 43, "Mg": 20, "Na": 28, "K": 4.6, "HCO3": 254, "SO4": 8.3, "Cl": 28, "F": 0.5, "NO3": 0.1}, 5.127, 5.153, -0.25),
+    "12-6": (
+        {"Ca": 43, "Mg": 20, "Na": 28, "K": 4.6, "HCO3": 254, "SO4": 8.3, "Cl": 28, "F": 0.5, "NO3": 0.1},
+        5.127,
+        5.153,
+        -0.25,
+    ),
     "15-1": ({"Ca": 48, "Mg": 3.6, "Na": 2.1, "HCO3": 152, "SO4": 3.2, "Cl": 8}, 2.783, 2.783, -0.01),
-    "17-3": ({"Ca": 49, "Mg": 18, "Na": 168, "HCO3": 202, "SO4": 44, "Cl": 246, "F": 0.1, "NO3": 2.2}, 11.234, 11.206, 0.12),
+    "17-3": (
+        {"Ca": 49, "Mg": 18, "Na": 168, "HCO3": 202, "SO4": 44, "Cl": 246, "F": 0.1, "NO3": 2.2},
+        11.234,
+        11.206,
+        0.12,
+    ),
     "10": ({"Ca": 37, "Mg": 24, "Na": 611, "HCO3": 429, "SO4": 1010, "Cl": 82, "F": 0.6}, 30.398, 30.404, -0.01),
 }
 CHARGES = {"Ca": 2, "Mg": 2, "Na": 1, "K": 1, "HCO3": -1, "SO4": -2, "Cl": -1, "F": -1, "NO3": -1}
@@ -137,7 +147,21 @@ def test_reference_seawater_is_neutral(write_case):
         "F": 610,
         "OH": 71,
     }
-    charge = {"Na": 1, "Mg": 2, "Ca": 2, "K": 1, "Sr": 2, "Cl": -1, "SO4": -2, "HCO3": -1, "Br": -1, "CO3": -2, "BOH4": -1, "F": -1, "OH": -1}
+    charge = {
+        "Na": 1,
+        "Mg": 2,
+        "Ca": 2,
+        "K": 1,
+        "Sr": 2,
+        "Cl": -1,
+        "SO4": -2,
+        "HCO3": -1,
+        "Br": -1,
+        "CO3": -2,
+        "BOH4": -1,
+        "F": -1,
+        "OH": -1,
+    }
     listed = "\n".join(f"        {k}: {{charge: {charge[k]}, unit: mmol/L}}" for k in moles)
     meters = "\n".join(f"  {k}: {{reads: sea.{k}, unit: mmol/L, sigma: 1 % of reading}}" for k in moles)
     text = f"domains:\n  charge:\n    circuit: false\n    solutions:\n      sea:\n{listed}\nstreams: {{}}\nmeters:\n{meters}\n"
