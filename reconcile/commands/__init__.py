@@ -1,0 +1,1 @@
+"""Commands of the command line, one subject a file: parse, call, print."""

@@ -1,0 +1,76 @@
+"""Command run: the main job."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+from typing import Literal
+
+import click
+
+from ..errors import InputError, Problem
+from .common import DONE, FAULTS_FOUND, ascii_only, case_argument, errors_to_exit_codes, plugin_option
+
+__all__ = ["run"]
+
+
+@click.command()
+@case_argument
+@plugin_option
+@click.option("--readings", type=click.Path(path_type=Path), help="Readings, instead of those the case names.")
+@click.option("--out", type=click.Path(path_type=Path), help="Write the corrected data set into this folder.")
+@click.option("--parquet", is_flag=True, help="Write the tables of --out as Parquet, too.")
+@click.option("--exclude", multiple=True, metavar="TAG", help="Leave a meter out; needs --because, one for each.")
+@click.option("--because", multiple=True, metavar="TEXT", help="Why the meter is left out; stands in the result.")
+@click.option(
+    "--suspects",
+    type=click.Choice(["flag", "exclude", "compensate"]),
+    default="flag",
+    show_default=True,
+    help="What the adjusted values do about a suspect where the evidence names one.",
+)
+@click.option("--strict", is_flag=True, help="Exit with 1 when readings disagree.")
+@click.option("--json", "as_json", is_flag=True, help="Print the summary as JSON.")
+@click.option("--snapshot", type=int, help="Print this snapshot in detail, counted from 1.")
+@errors_to_exit_codes
+def run(
+    case: Path,
+    plugins: tuple[Path, ...],
+    readings: Path | None,
+    out: Path | None,
+    parquet: bool,
+    exclude: tuple[str, ...],
+    because: tuple[str, ...],
+    suspects: Literal["flag", "exclude", "compensate"],
+    strict: bool,
+    as_json: bool,
+    snapshot: int | None,
+) -> int:
+    """Adjust the readings of CASE, test them, explain what disagrees."""
+    from ..export import write
+    from ..report.text import render
+    from ..run import load_case
+
+    if len(because) != len(exclude):
+        raise InputError(
+            Problem(
+                "no-reason",
+                f"{len(exclude)} meters are left out, but {len(because)} reasons are given",
+                'write --exclude TAG --because "..." for each',
+            )
+        )
+    loaded = load_case(case, plugins=plugins)
+    reasons = dict(zip(exclude, because, strict=True))
+    result = loaded.run(readings, exclude=reasons, suspects=suspects)
+    if as_json:
+        click.echo(json.dumps(result.to_dict(), indent=2, ensure_ascii=False))
+    else:
+        click.echo(render(result, snapshot=None if snapshot is None else snapshot - 1, ascii_only=ascii_only()))
+        if exclude:
+            from ..report.compare import render_comparison
+
+            click.echo(render_comparison(loaded.run(readings), result))
+    if out is not None:
+        files = write(result, out, formats=("csv", "parquet") if parquet else ("csv",))
+        click.echo(f"Wrote {len(files)} files to {out}.", err=as_json)
+    return FAULTS_FOUND if strict and result.suspicious.any() else DONE
