@@ -71,7 +71,7 @@ def mixups_of(result: Result, index: int) -> tuple[Mixup, ...]:
     """
     if not result.suspicious[index]:
         return ()
-    trials = list(_trials(result, index))
+    trials = [t for t in _trials(result, index) if _possible(result, t)]
     group = result.group(index)
     if group.equations.is_linear and not result.model.has_relative:
         left = _by_parity(result, index, trials)
@@ -120,6 +120,25 @@ def _trials(result: Result, index: int) -> Iterator[Trial]:
                 f"{tag} is {factor:g} times too large: another unit than {unit[j]}?",
                 {j: read[j] / factor},
             )
+
+
+def _possible(result: Result, trial: Trial) -> bool:
+    """Whether the readings put right are possible values: a flow may run against its arrow, a concentration may not."""
+    model = result.model
+    linear = model.system.equations.linear
+    for j, value in trial[3].items():
+        reading = model.readings[int(model.meters[j])]
+        if len(reading.reads) != 1:
+            continue
+        name, coefficient = reading.reads[0]
+        column = model.system.column(name)
+        meant = (value * reading.factor + reading.offset) / coefficient
+        if meant > model.upper[column]:
+            return False
+        has_arrow = not np.isfinite(model.upper[column]) and linear[:, [column]].nnz > 0
+        if meant < model.lower[column] and not (has_arrow and model.lower[column] == 0.0):
+            return False
+    return True
 
 
 def _by_parity(result: Result, index: int, trials: list[Trial]) -> Array:

@@ -18,7 +18,17 @@ if TYPE_CHECKING:
     from .figures import FigureValue
     from .results import Result
 
-__all__ = ["Decision", "Granted", "decide", "figures_if", "grant", "problem_of"]
+__all__ = [
+    "Decision",
+    "Granted",
+    "Smeared",
+    "decide",
+    "figures_if",
+    "grant",
+    "granted_all",
+    "problem_of",
+    "smeared",
+]
 
 Array = npt.NDArray[np.float64]
 
@@ -116,7 +126,7 @@ def decide(result: Result, policy: Literal["exclude", "compensate"]) -> Result:
         )
         verb = "excluded" if policy == "exclude" else "compensated for"
         decisions[int(i)] = Decision(policy, alternative, granted, f"{verb} {named}")
-    return replace(result, decisions=decisions, _explainers={}, _looked_at={})
+    return replace(result, decisions=decisions, _explainers={}, _looked_at={}, _granted={})
 
 
 def grant(result: Result, index: int, alternative: Alternative) -> Granted | None:
@@ -164,13 +174,14 @@ def grant(result: Result, index: int, alternative: Alternative) -> Granted | Non
         labels=(f"{result.labels[index]} granting {' and '.join(sorted(names))}",),
         _explainers={},
         _looked_at={},
+        _granted={},
     )
     left = float((group.parity**2).sum())
     return Granted(group, left, group.checks, granted)
 
 
-def figures_if(result: Result, index: int, limit: int = 4) -> list[tuple[Alternative, tuple[FigureValue, ...]]]:
-    """Evaluate the figures of a case anew for every standing explanation of a snapshot.
+def granted_all(result: Result, index: int, limit: int = 4) -> tuple[tuple[Alternative, Granted], ...]:
+    """Solve one snapshot again for every alternative of its standing explanations; kept with the result.
 
     Parameters
     ----------
@@ -182,15 +193,77 @@ def figures_if(result: Result, index: int, limit: int = 4) -> list[tuple[Alterna
 
     Returns
     -------
-    list of (Alternative, figures)
+    tuple of (Alternative, Granted)
+        Empty where the readings agree; alternatives without a consistent answer are left out.
     """
     accounts = result.snapshot(index).accounts
-    if accounts is None or not result.suspicious[index] or not result.figures:
+    if accounts is None or not result.suspicious[index]:
+        return ()
+    if index not in result._granted:
+        solved = (
+            (alternative, grant(result, index, alternative))
+            for account in accounts.standing[:limit]
+            for alternative in account.alternatives
+        )
+        result._granted[index] = tuple((a, g) for a, g in solved if g is not None)
+    return result._granted[index]
+
+
+def figures_if(result: Result, index: int) -> list[tuple[Alternative, tuple[FigureValue, ...]]]:
+    """Evaluate the figures of a case anew for every standing explanation of a snapshot.
+
+    Parameters
+    ----------
+    result : Result
+    index : int
+        Snapshot, counted from 0.
+
+    Returns
+    -------
+    list of (Alternative, figures)
+    """
+    if not result.figures:
         return []
-    out = []
-    for account in accounts.standing[:limit]:
-        for alternative in account.alternatives:
-            granted = grant(result, index, alternative)
-            if granted is not None:
-                out.append((alternative, granted.result.figure_values(0)))
-    return out
+    return [(a, granted.result.figure_values(0)) for a, granted in granted_all(result, index)]
+
+
+@dataclass(frozen=True)
+class Smeared:
+    """An adjusted value that an unseen fault pulls along.
+
+    Attributes
+    ----------
+    variable, unit : str
+    off : float
+        Adjusted value as exported, less what it would be with the explanation granted.
+    sigma : float
+        Standard uncertainty of the adjusted value as exported.
+    """
+
+    variable: str
+    unit: str
+    off: float
+    sigma: float
+
+
+def smeared(result: Result, index: int, granted: Granted) -> tuple[Smeared, ...]:
+    """Return which adjusted values would be off if an explanation holds, the most wrong first.
+
+    Parameters
+    ----------
+    result : Result
+    index : int
+        Snapshot, counted from 0.
+    granted : Granted
+
+    Returns
+    -------
+    tuple of Smeared
+        Variables that would be off by more than their own standard uncertainty.
+    """
+    off = result.adjusted[index] - granted.result.adjusted[0]
+    sigma = result.sigmas[index]
+    with np.errstate(invalid="ignore"):
+        chosen = [int(i) for i in np.flatnonzero(np.abs(off) > np.maximum(sigma, 1e-300))]
+    chosen.sort(key=lambda i: -abs(off[i]) / max(sigma[i], 1e-300))
+    return tuple(Smeared(result.variables[i], result.units[i], float(off[i]), float(sigma[i])) for i in chosen)

@@ -18,10 +18,11 @@ from .model import Model
 if TYPE_CHECKING:
     import pandas as pd
 
+    from .accounts import Alternative
     from .case.spec import CaseSpec
     from .diagnose.explain import Explainer
     from .figures import FigureValue
-    from .refit import Decision
+    from .refit import Decision, Granted
     from .snapshot import Snapshot
 
 __all__ = ["CLASSES", "Result", "word_of_evidence"]
@@ -98,6 +99,9 @@ class Result:
     provenance: Mapping[str, Any] = field(default_factory=dict)
     _explainers: dict[tuple[int, int | None], Explainer | None] = field(default_factory=dict, repr=False, compare=False)
     _looked_at: dict[int, Snapshot] = field(default_factory=dict, repr=False, compare=False)
+    _granted: dict[int, tuple[tuple[Alternative, Granted], ...]] = field(
+        default_factory=dict, repr=False, compare=False
+    )
 
     # ------------------------------------------------------------------ arrays
 
@@ -181,9 +185,7 @@ class Result:
         """Word of evidence of each snapshot; one that a corrected test of a reading names does not agree."""
         words = [word_of_evidence(int(c), p) for c, p in zip(self.checks, self.p_value, strict=True)]
         for i in [i for i, w in enumerate(words) if w == "watch"]:
-            tests = self.snapshot(i).meter_tests
-            if np.nanmax(np.abs(tests.z), initial=0.0) > tests.limit:
-                words[i] = "does not agree"
+            words[i] = self.snapshot(i).word
         return tuple(words)
 
     @cached_property

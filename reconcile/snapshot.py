@@ -226,6 +226,15 @@ class Snapshot:
     dependent: tuple[str, ...]
     steps: int
 
+    @property
+    def word(self) -> str:
+        """Word of evidence; one to watch does not agree where the corrected test of a reading names one."""
+        from .results import word_of_evidence
+
+        word = word_of_evidence(self.test.checks, self.test.p)
+        named = np.nanmax(np.abs(self.meter_tests.z), initial=0.0) > self.meter_tests.limit
+        return "does not agree" if word == "watch" and named else word
+
     def reading(self, tag: str) -> ReadingLine:
         """Line of a meter by its tag."""
         return next(r for r in self.readings if r.tag == tag)

@@ -10,10 +10,19 @@ from ..mixups import mixups_of
 from ..refit import figures_if
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
-from .words import MARKS, explanations_in_words, percent, remarks_on_explanations, verdict_line, verdict_sentences
+from .words import (
+    MARKS,
+    alternative_name,
+    explanations_in_words,
+    p_value,
+    percent,
+    remarks_on_explanations,
+    smearing_in_words,
+    verdict_line,
+    verdict_sentences,
+)
 
 if TYPE_CHECKING:
-    from ..accounts import Alternative
     from ..figures import FigureValue
     from ..results import Result
     from ..snapshot import Snapshot, VariableLine
@@ -41,9 +50,9 @@ def render(result: Result, *, snapshot: int | None = None, ascii_only: bool = Fa
     parts = [result.title, ""]
     if result.size > 1 and snapshot is None:
         parts += [wrap(verdict_line(result), ""), "", _many(result)]
-        shown = next((i for i in range(result.size) if i not in result.table.failed and result.suspicious[i]), None)
+        shown, why = _shown_of_many(result)
         if shown is not None:
-            parts += ["", f"The first that does not agree, {result.labels[shown]}:", "", *_detail(result, shown)]
+            parts += ["", f"{why}, {result.labels[shown]}:", "", *_detail(result, shown)]
     else:
         index = snapshot or 0
         if index in result.table.failed:
@@ -53,6 +62,15 @@ def render(result: Result, *, snapshot: int | None = None, ascii_only: bool = Fa
     parts += _closing(result)
     text = "\n".join(parts).rstrip() + "\n"
     return to_ascii(text) if ascii_only else text
+
+
+def _shown_of_many(result: Result) -> tuple[int | None, str]:
+    """The snapshot of many that is shown in detail, and why that one."""
+    for word, why in (("does not agree", "The first that does not agree"), ("watch", "The first to watch")):
+        found = [i for i, w in enumerate(result.words) if w == word and i not in result.table.failed]
+        if found:
+            return found[0], why
+    return None, ""
 
 
 def _many(result: Result) -> str:
@@ -68,7 +86,7 @@ def _many(result: Result) -> str:
                 f"{result.objective[i]:.2f}",
                 str(result.checks[i]),
                 plain(result.limit[i], 0.01),
-                f"{result.p_value[i]:.3f}" if math.isfinite(result.p_value[i]) else "-",
+                p_value(result.p_value[i]),
                 f"{MARKS[word]} {word}",
             )
         )
@@ -87,8 +105,8 @@ def _detail(result: Result, index: int) -> list[str]:
     out += ["", _readings(s)]
     out.append(
         wrap(
-            f"z is compared with {s.meter_tests.limit:.2f}, exact for the {s.meter_tests.distinct} different tests of "
-            "this network. A large adjustment alone is no evidence against a meter: what moves most has the largest sigma."
+            f"z is compared with {s.meter_tests.limit:.2f}, exact for {_different(s.meter_tests.distinct)}. "
+            "A large adjustment alone is no evidence against a meter: what moves most has the largest sigma."
         )
         if s.meter_tests.worst >= 0
         else ""
@@ -107,23 +125,31 @@ def _detail(result: Result, index: int) -> list[str]:
             out.append(wrap(lines[0], "     ").replace("     ", f"  {i}. ", 1))
             out += [wrap(line, "     ") for line in lines[1:]]
         out += [wrap(remark) for remark in remarks_on_explanations(s)]
+        out += [wrap(sentence) for sentence in smearing_in_words(result, index)]
     figures = result.figure_values(index)
     if figures:
         out += ["", _figures(figures)]
-        granted = figures_if(result, index)
+        granted = _figures_granted(result, index)
         if granted:
-            rows = [
-                (f.name, plain(f.value, f.sigma), plain(f.sigma, f.sigma), _granted_name(alternative))
-                for alternative, values in granted
-                for f in values
-            ]
             out.append(wrap("These hold if nothing is wrong. Granting an explanation instead:"))
-            out.append(table(("FIGURE", "value", "±", "granting"), rows, left=(0, 3)))
+            out.append(table(("FIGURE", "value", "±", "granting"), granted, left=(0, 3)))
     return out
 
 
-def _granted_name(alternative: Alternative) -> str:
-    return " and ".join(f.candidate.name for f in alternative.faults)
+def _figures_granted(result: Result, index: int) -> list[tuple[str, str, str, str]]:
+    """Figures with each explanation granted; explanations that give the same are told in one line."""
+    told: dict[tuple[str, str, str], list[str]] = {}
+    for alternative, values in figures_if(result, index):
+        for f in values:
+            key = (f.name, plain(f.value, f.sigma), plain(f.sigma, f.sigma))
+            told.setdefault(key, []).append(alternative_name(alternative))
+    order = list(result.figures)
+    rows = sorted(told.items(), key=lambda row: order.index(row[0][0]))
+    return [(*key, " or ".join(names)) for key, names in rows]
+
+
+def _different(tests: int) -> str:
+    return "one test" if tests == 1 else f"the {tests} different tests of this network"
 
 
 def _tested(count: int) -> str:

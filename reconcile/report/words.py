@@ -18,12 +18,16 @@ if TYPE_CHECKING:
 __all__ = [
     "MARKS",
     "Suspect",
+    "alternative_name",
     "explanation_sentences",
     "explanations_in_words",
     "fault_phrase",
+    "p_value",
     "percent",
     "remarks_on_explanations",
     "short_name",
+    "shown_explanations",
+    "smearing_in_words",
     "suspects_of",
     "test_phrase",
     "verdict_line",
@@ -127,10 +131,13 @@ def test_phrase(snapshot: Snapshot) -> str:
     t = snapshot.test
     if t.checks == 0:
         return "no check possible"
-    return f"χ² {t.objective:.2f}, limit {t.limit:.2f} at {100 * t.level:g} %, p {_p(t.p)}"
+    return f"χ² {t.objective:.2f}, limit {t.limit:.2f} at {100 * t.level:g} %, p {p_value(t.p)}"
 
 
-def _p(p: float) -> str:
+def p_value(p: float) -> str:
+    """A p-value, small ones by their size."""
+    if not math.isfinite(p):
+        return "-"
     return f"{p:.1g}" if p < 0.001 else f"{p:.4f}" if p < 0.01 else f"{p:.3f}"
 
 
@@ -174,7 +181,8 @@ def verdict_sentences(snapshot: Snapshot) -> list[str]:
         ]
     out = []
     if t.status == "disagrees":
-        out.append(head + f"do not agree ({test_phrase(snapshot)}).")
+        verb = "to watch" if snapshot.word == "watch" else "do not agree"
+        out.append(head + f"{verb} ({test_phrase(snapshot)}).")
         out.extend(_named(snapshot.accounts))
     elif t.status == "suspiciously good":
         out.append(
@@ -187,6 +195,17 @@ def verdict_sentences(snapshot: Snapshot) -> list[str]:
         tags = ", ".join(r.tag for r in unchecked)
         out.append(f"Not checked by anything: {tags}.")
     return out
+
+
+def _standing_in_short(a: Accounts, limit: int = 3) -> str:
+    """The first explanations with their probabilities, most probable first."""
+    told = sorted(a.standing, key=lambda x: -x.probability)[:limit]
+    rest = len(a.standing) - len(told)
+    text = "; ".join(
+        f"{' or '.join(alternative_phrase(s) for s in plausible_alternatives(x)[0])} ({percent(x.probability)})"
+        for x in told
+    )
+    return text + (f"; {rest} more are not excluded" if rest else "")
 
 
 def _count(n: int, noun: str) -> str:
@@ -207,6 +226,11 @@ def _named(a: Accounts | None) -> list[str]:
         ]
     best = a.standing[0]
     first = best.alternatives[0]
+    if a.nothing_wrong > best.probability:
+        return [
+            f"Most likely chance, and nothing is wrong (probability {percent(a.nothing_wrong)}).",
+            f"If something is: {_standing_in_short(a)}.",
+        ]
     if a.conclusion is Conclusion.ONE:
         return [f"Most likely {alternative_phrase(first)} (probability {percent(first.probability)})."]
     least = f"At least {a.at_least} faults. " if a.at_least and a.at_least > 1 else ""
@@ -246,7 +270,12 @@ def explanations_in_words(snapshot: Snapshot, limit: int = 6) -> list[list[str]]
     a = snapshot.accounts
     if a is None or snapshot.test.status != "disagrees":
         return []
-    return [_told(account) for account in a.standing[:limit]]
+    return [_told(account) for account in shown_explanations(a, limit)]
+
+
+def shown_explanations(a: Accounts, limit: int = 6) -> tuple[Account, ...]:
+    """Standing explanations worth a paragraph: the first three, and others that are not quite improbable."""
+    return tuple(x for i, x in enumerate(a.standing) if i < 3 or x.probability >= 0.01)[:limit]
 
 
 def remarks_on_explanations(snapshot: Snapshot, limit: int = 6) -> list[str]:
@@ -255,8 +284,10 @@ def remarks_on_explanations(snapshot: Snapshot, limit: int = 6) -> list[str]:
     if a is None or snapshot.test.status != "disagrees":
         return []
     out = []
-    if len(a.standing) > limit:
-        out.append(f"{len(a.standing) - limit} further explanations are not excluded, each less probable.")
+    hidden = len(a.standing) - len(shown_explanations(a, limit))
+    if hidden:
+        further = "1 further explanation is" if hidden == 1 else f"{hidden} further explanations are"
+        out.append(f"{further} not excluded, but less probable.")
     rejected = [x for x in a.ranked if not x.survives and x.count == 1][:3]
     if rejected and a.standing:
         out.append(
@@ -266,7 +297,9 @@ def remarks_on_explanations(snapshot: Snapshot, limit: int = 6) -> list[str]:
         )
     by_sign = [x for x in a.ranked if x.excluded_by_sign and not x.alternatives and x.left <= x.limit]
     if by_sign:
-        out.append(f"Excluded because their sign is impossible: {', '.join(_names(x) for x in by_sign[:4])}.")
+        names = [alternative_name(s) for x in by_sign for s in x.excluded_by_sign]
+        more = f" and {len(names) - 4} more" if len(names) > 4 else ""
+        out.append(f"Excluded because their sign is impossible: {', '.join(names[:4])}{more}.")
     tests = separating_tests(a)
     if tests:
         out.append("To separate: " + "; ".join(tests) + ".")
@@ -278,6 +311,43 @@ def explanation_sentences(snapshot: Snapshot, limit: int = 6) -> list[str]:
     return [" ".join(lines) for lines in explanations_in_words(snapshot, limit)] + remarks_on_explanations(
         snapshot, limit
     )
+
+
+def alternative_name(alternative: Alternative) -> str:
+    """Names of the faults of one set."""
+    return " and ".join(f.candidate.name for f in alternative.faults)
+
+
+def smearing_in_words(result: Result, index: int, limit: int = 3) -> list[str]:
+    """What the adjusted values hide if an explanation holds: they close all the same.
+
+    Parameters
+    ----------
+    result : Result
+    index : int
+        Snapshot, counted from 0.
+    limit : int
+        At most so many explanations, and so many values of each.
+
+    Returns
+    -------
+    list of str
+        Empty where the readings agree, or where a decision has already put the values right.
+    """
+    from ..refit import granted_all, smeared
+
+    if index in result.decisions:
+        return []
+    told = []
+    for alternative, granted in granted_all(result, index)[:limit]:
+        off = smeared(result, index, granted)[:limit]
+        if off:
+            values = ", ".join(f"{v.variable} by {signed(v.off, v.sigma)} {v.unit}" for v in off)
+            told.append(f"if {alternative_name(alternative)}, {values}")
+    if not told:
+        return []
+    proves = "All balances close after adjustment whatever is wrong, so that proves nothing."
+    return [f"{proves} The adjusted values above would be off: {'; '.join(told)}."]
 
 
 def _names(account: Account) -> str:
@@ -297,7 +367,7 @@ def _told(account: Account) -> list[str]:
     plausible, others = plausible_alternatives(account)
     for i, s in enumerate(plausible):
         told = " and ".join(f"{fault_phrase(f)} ({_spread(f, len(s.faults) == 1)})" for f in s.faults)
-        exact = f", refitted χ² {account.refitted[i]:.2f}" if account.refitted else ""
+        exact = _refitted(account.refitted[i]) if account.refitted else ""
         lines.append(f"{'or ' if i else ''}{told}{exact}")
     lines[-1] += "."
     tied = "No reading here can tell these apart. " if len(lines) > 1 else ""
@@ -313,6 +383,10 @@ def _told(account: Account) -> list[str]:
         f"probability {percent(account.probability)}."
     )
     return lines
+
+
+def _refitted(left: float) -> str:
+    return f", refitted χ² {left:.2f}" if math.isfinite(left) else ", not refitted: no consistent answer found"
 
 
 def _spread(f: SizedFault, interval: bool) -> str:
