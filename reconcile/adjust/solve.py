@@ -209,16 +209,26 @@ class _Linearised:
                 code="not-finite",
                 hint="check units and expected values",
             )
-        known = jacobian @ x - closure - jacobian[:, problem.fixed] @ x[problem.fixed]
-        adjuster = prepare(jacobian[:, self.measured], jacobian[:, free], sigma[self.present])
-        adjusted, parity = adjuster.adjust(self.y[None], known)
+        try:
+            adjuster = prepare(jacobian[:, self.measured], jacobian[:, free], sigma[self.present])
+        except (ValueError, np.linalg.LinAlgError) as error:
+            raise SolveError(
+                "the balances lose their meaning on the way to an answer: coefficients vanish or grow without end",
+                code="no-convergence",
+                hint="check units and values, or state expected values under design:",
+            ) from error
         target = x.copy()
-        target[self.measured] = adjusted[0]
         if equations.is_linear:
+            known = jacobian @ x - closure - jacobian[:, problem.fixed] @ x[problem.fixed]
+            adjusted, parity = adjuster.adjust(self.y[None], known)
+            target[self.measured] = adjusted[0]
             target[free] = adjuster.unmeasured(adjusted, known)[0]
         else:
-            # Undetermined directions stay where they are instead of jumping to zero.
-            target[free] += adjuster.unmeasured(adjusted, known - jacobian[:, free] @ x[free])[0]
+            # In steps, not in values: a coefficient that fades at the solution then counts for nothing, and undetermined
+            # directions stay where they are.
+            moved, parity = adjuster.adjust((self.y - x[self.measured])[None], -closure)
+            target[self.measured] += moved[0]
+            target[free] += adjuster.unmeasured(moved, -closure)[0]
         return _Pass(x, target, parity[0], adjuster, jacobian, equations, sigma, self)
 
 
