@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -13,6 +13,7 @@ from .adjust.table import Group, adjust_table
 from .diagnose.critical import smallest_detectable
 from .diagnose.familywise import familywise_limit
 from .diagnose.lookalike import classes, near_parallel
+from .diagnose.rehearse import rehearse
 from .errors import InputError, Location, Problem
 from .snapshot import checks_in_words, dependent_in_words, signatures
 
@@ -23,6 +24,10 @@ if TYPE_CHECKING:
 __all__ = ["Coverage", "CoverageLine", "LookAlike", "UnreadLine", "coverage_of"]
 
 Array = npt.NDArray[np.float64]
+
+DRAWS, SEED = 1000, 1
+MOST_DRAWN = 200
+"""Chances of naming a fault right are drawn where there are no more candidates than this."""
 
 
 @dataclass(frozen=True)
@@ -44,6 +49,9 @@ class CoverageLine:
         The same with the correction for asking for all of its kind at once.
     needs : tuple of tuple of str
         For an unchecked reading: smallest sets of variables that would make it checked if they were read.
+    named : float
+        Chance that a fault of the smallest size is ranked first, it or one that looks exactly like it: a share of
+        seeded draws; nan where nothing would notice it, or where there are too many candidates to draw each.
     """
 
     name: str
@@ -57,6 +65,7 @@ class CoverageLine:
     smallest: float
     smallest_of_all: float
     needs: tuple[tuple[str, ...], ...] = ()
+    named: float = np.nan
 
 
 @dataclass(frozen=True)
@@ -172,6 +181,8 @@ def coverage_of(case: Case) -> Coverage:
             familywise_limit(own[:, live], settings.level).limit if live.any() and group.checks else np.nan
         )
     lines = _lines(model, group, settings, norms, limit_ratio)
+    chances = _chances(shifts, norms, lines, settings)
+    lines = tuple(replace(line, named=chances.get(i, np.nan)) for i, line in enumerate(lines))
     alike = classes(shifts, scale=norms) if group.checks else None
     pairs = near_parallel(shifts, scale=norms) if group.checks else None
     names = [c.name for c in model.candidates]
@@ -197,6 +208,16 @@ def coverage_of(case: Case) -> Coverage:
         level=settings.level,
         power=settings.power,
     )
+
+
+def _chances(shifts: Array, norms: Array, lines: tuple[CoverageLine, ...], settings: Any) -> dict[int, float]:
+    """Chance of naming each fault right at its smallest detectable size, drawn with a fixed seed."""
+    noticed = [i for i, line in enumerate(lines) if np.isfinite(line.smallest)]
+    if not noticed or len(noticed) > MOST_DRAWN:
+        return {}
+    sizes = [{i: smallest_detectable(float(norms[i]), settings.level, settings.power)} for i in noticed]
+    found = rehearse(shifts, sizes, trials=DRAWS, rng=SEED, level=settings.level, scale=norms)
+    return {i: rate.value for i, rate in zip(noticed, found.in_class, strict=True)}
 
 
 def expected_group(case: Case) -> Group:

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 from .layout import table, to_ascii, wrap
 from .numbers import plain
+from .words import percent
 
 if TYPE_CHECKING:
     from ..coverage import Coverage, CoverageLine
@@ -42,12 +43,13 @@ def render_coverage(found: Coverage, *, ascii_only: bool = False) -> str:
     out.append(
         wrap(
             f"smallest: bias that is noticed with {100 * found.power:g} % chance when {100 * found.level:g} % false "
-            "alarms are taken and only this reading is asked for; of all: the same when every reading is asked for."
+            "alarms are taken and only this reading is asked for; of all: the same when every reading is asked for; "
+            "named: chance that a fault of the smallest size is ranked first, it or one that looks exactly like it."
         )
     )
     if faults:
-        rows = [(x.name, x.unit, _size(x.smallest), _size(x.smallest_of_all)) for x in faults]
-        out += ["", table(("POSSIBLE FAULT", "unit", "smallest", "of all"), rows, left=(0, 1))]
+        rows = [(x.name, x.unit, _size(x.smallest), _size(x.smallest_of_all), _chance(x.named)) for x in faults]
+        out += ["", table(("POSSIBLE FAULT", "unit", "smallest", "of all", "named"), rows, left=(0, 1))]
     if found.unread:
         rows = [
             (x.name, x.unit, plain(x.sigma, x.sigma), x.klass + (f": {x.reason}" if x.reason else ""))
@@ -75,15 +77,23 @@ def _readings(lines: list[CoverageLine]) -> str:
                 _size(x.smallest),
                 relative,
                 _size(x.smallest_of_all),
+                _chance(x.named),
                 "checked" if x.share > 0 else "not checked",
             )
         )
-    header = ("READING", "unit", "±before", "±after", "checked", "smallest", "of value", "of all", "")
-    return table(header, rows, left=(0, 1, 8))
+    header = ("READING", "unit", "±before", "±after", "checked", "smallest", "of value", "of all", "named", "")
+    return table(header, rows, left=(0, 1, 9))
 
 
 def _size(value: float) -> str:
-    return f"{value:.3g}" if math.isfinite(value) else "never"
+    if not math.isfinite(value):
+        return "never"
+    text = f"{value:#.3g}"
+    return f"{value:.3g}" if "e" in text else text.removesuffix(".")
+
+
+def _chance(named: float) -> str:
+    return percent(named) if math.isfinite(named) else "-"
 
 
 def _notes(found: Coverage, readings: list[CoverageLine]) -> list[str]:
