@@ -13,6 +13,7 @@ to the form ``K x = k``; ``B = (K diag(sigma))'`` (n x r) with rows sorted by fa
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import cached_property
 
@@ -20,12 +21,16 @@ import numpy as np
 import numpy.typing as npt
 from scipy.linalg import qr, solve_triangular
 
-from .eliminate import Elimination, balanced_scales, eliminate, independent_form
+from .eliminate import Elimination, balanced_scales, cleaned, eliminate, independent_form
+from .sharp import SharpForm
 
 __all__ = ["Adjuster", "prepare"]
 
 Array = npt.NDArray[np.float64]
 Bools = npt.NDArray[np.bool_]
+
+LARGE_MULTIPLIER = 1e3
+"""Balances of comparable size that are multiplied by more than this cancel each other: more digits are needed."""
 
 
 @dataclass(frozen=True)
@@ -54,8 +59,14 @@ class Adjuster:
         Whether anything would notice an error of the reading.
     freed : ndarray of int
         Readings that are treated as absent (unknown bias).
-    undetermined : ndarray of bool, shape (n,)
-        Measured variables that an absent reading leaves undetermined.
+    through : ndarray, shape (n_u, n)
+        ``u = offset - through @ x``, not using the pivots: large spreads would cancel only to rounding.
+    drift : ndarray, shape (n, d)
+        Directions in which absent readings leave the measured variables undetermined.
+    turn, gain : ndarray
+        Parity space and spread that absent readings leave.
+    sharp : callable or None
+        From right-hand sides of the original rows, (m,), offset and target where `transform` would lose digits.
     """
 
     sigma: Array
@@ -70,9 +81,11 @@ class Adjuster:
     measured: Array
     redundant: Bools
     freed: npt.NDArray[np.int64]
-    undetermined: Bools
+    through: Array
+    drift: Array
     turn: Array
     gain: Array
+    sharp: Callable[[Array], tuple[Array, Array]] | None = None
 
     @property
     def checks(self) -> int:
@@ -121,12 +134,7 @@ class Adjuster:
     @cached_property
     def cover_unmeasured(self) -> Array:
         """Factor of the covariance of the unmeasured variables, shape (n_u, q), same columns as `cover`."""
-        # Variables known worst are put in terms of the others first: their large spreads would cancel only to rounding.
-        parts = self.elimination.recover @ self.measured
-        whole = np.abs(parts).max(axis=1, initial=0.0, keepdims=True)
-        parts = parts - parts[:, self.pivots] @ self.form
-        parts[np.abs(parts) < 1e-14 * whole] = 0.0
-        return -parts @ self.cover
+        return -self.through @ self.cover
 
     # ------------------------------------------------------------------ adjustment
 
@@ -148,7 +156,7 @@ class Adjuster:
         y = np.array(readings, dtype=float, ndmin=2)
         if self.freed.size:
             y[:, self.freed] = np.where(np.isfinite(y[:, self.freed]), y[:, self.freed], 0.0)
-        target = self.transform @ rhs
+        _, target = self._constants(rhs)
         t = self._parity(y, target)
         if self.freed.size:
             # An absent reading is a reading with an unknown bias: remove the bias that the checks ask for.
@@ -164,18 +172,30 @@ class Adjuster:
         residual = self.form @ y.T - target[:, None]
         return solve_triangular(self.triangle, residual[self.order], trans="T")
 
+    def _constants(self, rhs: Array) -> tuple[Array, Array]:
+        """Offset of the unmeasured variables, shape (n_u,), and right-hand side of `form`, shape (r,)."""
+        if self.sharp is not None:
+            return self.sharp(rhs)
+        target = self.transform @ rhs
+        recover = self.elimination.recover
+        return recover @ rhs - (recover @ self.measured[:, self.pivots]) @ target, target
+
     def unmeasured(self, adjusted: Array, rhs: Array) -> Array:
         """Values of the unmeasured variables, shape (N, n_u); undetermined directions are set to zero."""
-        return (self.elimination.recover @ (rhs[:, None] - self.measured @ np.atleast_2d(adjusted).T)).T
+        offset, _ = self._constants(rhs)
+        return offset - np.atleast_2d(adjusted) @ self.through.T
+
+    @property
+    def undetermined(self) -> Bools:
+        """Measured variables that an absent reading leaves undetermined, shape (n,)."""
+        return np.any(np.abs(self.drift) > 1e-7 * self.sigma[:, None], axis=1)
 
     @cached_property
     def observable(self) -> Bools:
         """Whether each unmeasured variable is determined, absent readings considered, shape (n_u,)."""
-        out = self.elimination.observable.copy()
-        if self.undetermined.any():
-            reach = np.abs(self.elimination.recover @ self.measured[:, self.undetermined])
-            out &= ~np.any(reach > 1e-9 * max(1.0, reach.max(initial=0.0)), axis=1)
-        return out
+        reach = np.abs(self.through @ self.drift)
+        terms = np.abs(self.through) @ np.abs(self.drift)
+        return self.elimination.observable & ~np.any(reach > 1e-9 * terms, axis=1)
 
     # ------------------------------------------------------------------ readings that are not there
 
@@ -211,13 +231,12 @@ class Adjuster:
         # Directions of bias that no check sees leave everything that depends on them undetermined.
         lost = u[:, rank:] / np.where(seen, norm, 1.0)[:, None]
         lost /= np.linalg.norm(lost, axis=0)
-        moved = np.abs(self.q2 @ (self.q2[index].T @ lost))
-        undetermined = np.any(moved > 1e-7, axis=1)
+        drift = self.sigma[:, None] * (self.q2 @ (self.q2[index].T @ lost))
         left = np.linalg.norm(self.q1 @ turn, axis=1) ** 2
         whole = np.linalg.norm(self.q1, axis=1) ** 2
         redundant = self.redundant & (left > 1e-10 * whole)
         redundant[index] = False
-        return replace(self, redundant=redundant, freed=index, undetermined=undetermined, turn=turn, gain=gain)
+        return replace(self, redundant=redundant, freed=index, drift=drift, turn=turn, gain=gain)
 
 
 def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
@@ -257,9 +276,29 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
     projected[:, np.linalg.norm(projected, axis=0) <= 1e-10 * whole] = 0.0
     projected[np.linalg.norm(projected, axis=1) <= 1e-10] = 0.0
     form, transform, pivots = independent_form(projected, sigma / unit)
+    transform = transform @ elimination.keep
+    sharp = None
+    if max(np.abs(transform).max(initial=0.0), np.abs(elimination.recover).max(initial=0.0)) > LARGE_MULTIPLIER:
+        exact = SharpForm.of(a_u, elimination.pivots, a_m, pivots)
+        elimination = exact.elimination(elimination)
+        through, form = exact.apply(a_m)
+        transform = exact.apply(np.eye(len(a_m)))[1]
+        form = cleaned(form, pivots)
+        whole = np.abs(through).max(axis=1, initial=0.0, keepdims=True)
+
+        def sharp(rhs: Array) -> tuple[Array, Array]:
+            offset, target = exact.apply((rows * rhs)[:, None])
+            return unit_u * offset[:, 0], unit[pivots] * target[:, 0]
+
+    else:
+        through = elimination.recover @ a_m
+        whole = np.abs(through).max(axis=1, initial=0.0, keepdims=True)
+        through = through - through[:, pivots] @ form
+    through[np.abs(through) < 1e-14 * whole] = 0.0
     redundant = np.any(form != 0, axis=0)
     form = unit[pivots, None] * form / unit
-    transform = unit[pivots, None] * (transform @ elimination.keep) * rows
+    transform = unit[pivots, None] * transform * rows
+    through = unit_u[:, None] * through / unit
     elimination = replace(
         elimination,
         keep=elimination.keep * rows,
@@ -284,7 +323,9 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
         measured=measured,
         redundant=redundant,
         freed=np.zeros(0, dtype=np.int64),
-        undetermined=np.zeros(n, dtype=bool),
+        through=through,
+        drift=np.zeros((n, 0)),
         turn=np.eye(r),
         gain=np.zeros((n - r, 0)),
+        sharp=sharp,
     )

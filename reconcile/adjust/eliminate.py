@@ -13,7 +13,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.linalg import lu, qr, solve_triangular
 
-__all__ = ["Elimination", "balanced_scales", "dependent_rows", "eliminate", "independent_form"]
+__all__ = ["Elimination", "balanced_scales", "cleaned", "dependent_rows", "eliminate", "independent_form"]
 
 Array = npt.NDArray[np.float64]
 
@@ -35,14 +35,20 @@ class Elimination:
         Basis of the null space of ``A_u``: directions that no balance determines.
     observable : ndarray of bool, shape (n_u,)
         Whether the balances and readings determine the variable.
-    rank : int
+    pivots : ndarray of int, shape (rank,)
+        Unmeasured variables that the balances are solved for; the others span the null space.
     """
 
     keep: Array
     recover: Array
     null: Array
     observable: npt.NDArray[np.bool_]
-    rank: int
+    pivots: npt.NDArray[np.int64]
+
+    @property
+    def rank(self) -> int:
+        """How many balances the unmeasured variables use up."""
+        return self.pivots.size
 
 
 def balanced_scales(matrix: Array) -> tuple[Array, Array]:
@@ -71,7 +77,9 @@ def balanced_scales(matrix: Array) -> tuple[Array, Array]:
     column = np.round(column)
     largest = np.full(m, -np.inf)
     np.maximum.at(largest, i, size + column[j])
-    return 2.0 ** -np.round(np.where(np.isfinite(largest), largest, 0.0)), 2.0**column
+    exponent = -np.round(np.where(np.isfinite(largest), largest, 0.0))
+    rows, columns = (np.ldexp(np.ones(e.size), e.astype(np.int64)) for e in (exponent, column))
+    return np.asarray(rows, dtype=float), np.asarray(columns, dtype=float)
 
 
 def eliminate(unmeasured: Array) -> Elimination:
@@ -93,7 +101,7 @@ def eliminate(unmeasured: Array) -> Elimination:
     touched = np.flatnonzero(np.any(unmeasured != 0, axis=1))
     alone = np.flatnonzero(np.all(unmeasured == 0, axis=1))
     if touched.size == 0:
-        return Elimination(np.eye(m), np.zeros((n, m)), np.eye(n), np.zeros(n, dtype=bool), 0)
+        return Elimination(np.eye(m), np.zeros((n, m)), np.eye(n), np.zeros(n, dtype=bool), np.zeros(0, dtype=np.int64))
     q, r, order = qr(unmeasured[touched] / scale, pivoting=True)
     rank = _rank(np.abs(np.diag(r)))
     top, rest = order[:rank], order[rank:]
@@ -111,7 +119,7 @@ def eliminate(unmeasured: Array) -> Elimination:
     keep[np.arange(alone.size), alone] = 1.0
     mixed = q[:, rank:].T
     keep[alone.size :, touched] = np.where(np.abs(mixed) < 1e-15, 0.0, mixed)
-    return Elimination(keep, recover, null, ~np.any(null != 0, axis=1), rank)
+    return Elimination(keep, recover, null, ~np.any(null != 0, axis=1), top.astype(np.int64))
 
 
 def _rank(diagonal: Array) -> int:
@@ -160,14 +168,21 @@ def independent_form(rows: Array, sigma: Array) -> tuple[Array, Array, npt.NDArr
         rest = rest[np.linalg.norm(rest, axis=1) > RANK_TOLERANCE]
     lead, rest = u[:rank, :rank], u[:rank, rank:]
     step = solve_triangular(lower[:rank, :rank], p.T[:rank], lower=True, unit_diagonal=True)
+    pivots = order[:rank].astype(np.int64)
     form = np.zeros((rank, n))
-    form[:, order[:rank]] = np.eye(rank)
-    tail = solve_triangular(lead, rest) if rest.size else rest
-    tail[np.abs(tail) < 1e-14 * np.abs(tail).max(initial=0.0)] = 0.0
-    form[:, order[rank:]] = tail
+    form[:, order[rank:]] = solve_triangular(lead, rest) if rest.size else rest
     transform = np.zeros((rank, m))
     transform[:, live] = solve_triangular(lead, step) / length[live]
-    return form, transform, order[:rank].astype(np.int64)
+    return cleaned(form, pivots), transform, pivots
+
+
+def cleaned(form: Array, pivots: npt.NDArray[np.int64]) -> Array:
+    """The form with its identity block exact, and zero where there is only rounding."""
+    tail = form.copy()
+    tail[:, pivots] = 0.0
+    tail[np.abs(tail) < 1e-14 * np.abs(tail).max(initial=0.0)] = 0.0
+    tail[:, pivots] = np.eye(pivots.size)
+    return tail
 
 
 def dependent_rows(rows: Array) -> Array:

@@ -85,7 +85,7 @@ class Group:
         measured = (a.sigma[:, None] * a.q2) @ (inner / a.sigma)
         out = np.zeros((self.x.shape[1], self.columns.size))
         out[np.ix_(self.columns[self.present], self.present)] = measured
-        out[np.ix_(self.free, self.present)] = -a.elimination.recover @ (a.measured @ measured)
+        out[np.ix_(self.free, self.present)] = -a.through @ measured
         out[:, self.absent] = 0.0
         return out
 

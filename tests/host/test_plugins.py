@@ -64,7 +64,7 @@ def test_a_misspelt_hook_is_refused_with_the_nearest_name():
         return []
 
     module.reconcile_domain = reconcile_domain
-    with pytest.raises(reconcile.PluginError, match="reconcile_domain.*did you mean 'reconcile_domains'"):
+    with pytest.raises(reconcile.PluginError, match=r"reconcile_domain.*did you mean 'reconcile_domains'"):
         load_plugins(modules=[module])
 
 
@@ -186,7 +186,7 @@ def test_a_hook_that_raises_is_named():
     def reconcile_faults(network, system):
         raise KeyError("lost")
 
-    with pytest.raises(reconcile.PluginError, match="guest.*reconcile_faults"):
+    with pytest.raises(reconcile.PluginError, match=r"guest.*reconcile_faults"):
         build(domain("counts", simple), reconcile_faults=reconcile_faults)
 
 

@@ -66,7 +66,7 @@ def test_asking_without_a_goal_is_refused(case):
 
 
 def test_unknown_names_are_refused_with_the_nearest(case):
-    with pytest.raises(reconcile.InputError, match="did you mean 'feed.flow'"):
+    with pytest.raises(reconcile.InputError, match=r"did you mean 'feed\.flow'"):
         place_meters(case, narrow="fed.flow")
     with pytest.raises(reconcile.InputError, match="unknown-fault"):
         place_meters(case, find="Q")
