@@ -42,6 +42,9 @@ Ints = npt.NDArray[np.int64]
 DETERMINED = 1e-9
 """Relative size below which a combination does not depend on what is undetermined."""
 
+SAME = 1e-9
+"""Measures of a goal that differ by this fraction or less differ by rounding alone."""
+
 
 # ---------------------------------------------------------------------- before any reading
 
@@ -375,7 +378,13 @@ def place(plan: Plan, offered: Sequence[NewMeter], goal: Goal | None, *, count: 
         for i in which:
             grown = grown.with_meter(offered[i].row, offered[i].sigma)
         after = goal.measure(grown)
-        same = after == before or (np.isfinite(before) and abs(after - before) <= 1e-9 * abs(before))
+        same = after == before or (np.isfinite(before) and abs(after - before) <= SAME * abs(before))
         price = sum(offered[i].price for i in which)
         placements.append(Placement(which, before, after, not same, price, grown.signatures.shape[0]))
-    return tuple(sorted(placements, key=lambda p: (float(f"{p.after:.9e}"), p.price, p.meters)))
+    # What is equal but for the rounding of its sums shares a place: that of the smallest of them.
+    after = np.array([p.after for p in placements])
+    order = np.argsort(after, kind="stable")
+    rank = np.empty(after.size, dtype=np.int64)
+    rank[order] = np.cumsum(after[order] > np.append(-np.inf, after[order][:-1] * (1 + SAME)))
+    ranked = sorted(zip(rank, placements, strict=True), key=lambda p: (p[0], p[1].price, p[1].meters))
+    return tuple(p for _, p in ranked)

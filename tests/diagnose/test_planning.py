@@ -1,5 +1,7 @@
 """Planning: figures of the skid, the closed forms against a network that is built again, and refusals."""
 
+import itertools
+
 import numpy as np
 import pytest
 from diagnose_networks import BYPASS, SKID, Net
@@ -147,7 +149,29 @@ def test_two_meters_together():
         i, j = p.meters
         again = build(SKID, [(EYE[m], SKID.sigma[m]) for m in (0, 3, i, j)])[0]
         assert goal.measure(again) == pytest.approx(p.after, rel=1e-9)
-    assert [p.after for p in pairs] == sorted(p.after for p in pairs)
+    # The best first; what is equal but for the rounding of its sums, in the order offered.
+    for left, right in itertools.pairwise(pairs):
+        equal = left.after == pytest.approx(right.after, rel=1e-9)
+        assert left.meters < right.meters if equal else left.after < right.after
+
+
+class Given:
+    """A goal whose measures are given: the first for the plan as it is, then one for each offer."""
+
+    def __init__(self, *values):
+        self.values = iter(values)
+
+    def measure(self, plan):
+        return next(self.values)
+
+
+def test_equal_but_for_rounding_is_equal_wherever_it_rounds():
+    near = 1.2345678905  # between two numbers of ten digits
+    values = [near * (1 + d * 1e-15) for d in (3, -4, 2, -3, 1)] + [near * (1 - 1e-6)]
+    ranked = place(rig([0, 3]), OFFERED, Given(2.0, *values))
+    assert [p.meters for p in ranked] == [(5,), (0,), (1,), (2,), (3,), (4,)]
+    ranked = place(rig([0, 3]), OFFERED, Given(np.inf, 5.0, np.inf, 0.0, np.inf, 1e-300, 5.0))
+    assert [p.meters for p in ranked] == [(2,), (4,), (0,), (5,), (1,), (3,)]
 
 
 def test_breaking_a_tie():

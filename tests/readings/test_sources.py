@@ -2,6 +2,7 @@
 
 import sqlite3
 import sys
+import zipfile
 
 import numpy as np
 import pandas as pd
@@ -27,6 +28,39 @@ def refusal(*arguments, **options):
     return caught.value
 
 
+def save_open_document(frame, path):
+    """A minimal spreadsheet in the OpenDocument format (ISO/IEC 26300), so that no library is needed to write one."""
+
+    def cell(value):
+        if isinstance(value, str):
+            return f'<table:table-cell office:value-type="string"><text:p>{value}</text:p></table:table-cell>'
+        if pd.isna(value):
+            return "<table:table-cell/>"
+        if isinstance(value, pd.Timestamp):
+            return f'<table:table-cell office:value-type="date" office:date-value="{value.isoformat()}"/>'
+        return f'<table:table-cell office:value-type="float" office:value="{value!r}"/>'
+
+    rows = [list(frame.columns), *frame.astype(object).to_numpy().tolist()]
+    body = "".join(f"<table:table-row>{''.join(map(cell, row))}</table:table-row>" for row in rows)
+    space = "urn:oasis:names:tc:opendocument:xmlns"
+    names = "".join(f' xmlns:{n}="{space}:{n}:1.0"' for n in ("office", "table", "text"))
+    kind = "application/vnd.oasis.opendocument.spreadsheet"
+    entry = '<m:file-entry m:full-path="{}" m:media-type="{}"/>'
+    with zipfile.ZipFile(path, "w") as archive:
+        archive.writestr("mimetype", kind)
+        archive.writestr(
+            "META-INF/manifest.xml",
+            f'<m:manifest xmlns:m="{space}:manifest:1.0">{entry.format("/", kind)}'
+            f"{entry.format('content.xml', 'text/xml')}</m:manifest>",
+        )
+        archive.writestr(
+            "content.xml",
+            f'<office:document-content{names} office:version="1.2"><office:body><office:spreadsheet>'
+            f'<table:table table:name="log">{body}</table:table>'
+            "</office:spreadsheet></office:body></office:document-content>",
+        )
+
+
 def save(frame, path):
     suffix = path.suffix
     if suffix == ".parquet":
@@ -35,7 +69,7 @@ def save(frame, path):
         with pd.ExcelWriter(path, engine="xlsxwriter") as writer:
             frame.to_excel(writer, index=False)
     elif suffix == ".ods":
-        frame.to_excel(path, index=False, engine="odf")
+        save_open_document(frame, path)
     elif suffix == ".sqlite":
         with sqlite3.connect(path) as connection:
             frame.assign(time=frame["time"].astype(str)).to_sql("log", connection, index=False)
