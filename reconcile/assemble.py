@@ -9,10 +9,13 @@ from pathlib import Path
 import numpy as np
 
 from . import units
+from .bounds import refuse_conflicts
 from .case.load import read_what_stands
 from .case.references import check_references
 from .case.spec import CaseSpec, DomainModels, KnownSpec, MeterSpec, SharedErrorSpec
+from .case.trajectory import TrajectorySpec, check_rates
 from .domains import Plugins
+from .doubts import doubts_of_case
 from .errors import InputError, Notice, Problems
 from .model import Model, Reading, SharedError, build_model
 from .network import Network
@@ -85,9 +88,12 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
     except InputError as refused:
         problems.extend(refused.problems)
         problems.raise_if_any()
+    if spec.trajectory is not None:
+        _inventories(spec, spec.trajectory, system, problems)
     check_references(spec, system.units(), problems)
     problems.raise_if_any()
-    shared = [cause for s in spec.shared_errors.values() for cause in _causes(s)]
+    stays = spec.trajectory.constant_errors if spec.trajectory else ()
+    shared = [cause for s in (*spec.shared_errors.values(), *stays) for cause in _causes(s)]
     readings = [_meter(m, system) for m in spec.meters.values()]
     readings += [_prior(k, system) for k in spec.known.values() if k.sigma is not None]
     fixed = {
@@ -95,6 +101,8 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
     }
     design = {name: _to_variable(value, unit, name, system) for name, (value, unit) in spec.design.items()}
     model = build_model(system, readings, fixed=fixed, shared=shared, design=design)
+    refuse_conflicts(model, spec, problems)
+    problems.raise_if_any()
     chosen = [plugins.domains[d].domain for d in spec.domains]
     return Assembled(
         spec,
@@ -102,7 +110,7 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
         system,
         model,
         tuple(d.caution for d in chosen if d.caution),
-        (*plugins.notices, *_doubts(spec)),
+        (*plugins.notices, *doubts_of_case(spec)),
     )
 
 
@@ -112,6 +120,16 @@ def option_models(plugins: Plugins) -> dict[str, DomainModels]:
         name: DomainModels(i.domain.options, i.domain.stream_options, i.domain.node_options, i.domain.needs_streams)
         for name, i in plugins.domains.items()
     }
+
+
+def _inventories(spec: CaseSpec, trajectory: TrajectorySpec, system: System, problems: Problems) -> None:
+    """Declare the inventories that tie windows; one window alone says nothing of them but their reading."""
+    check_rates(trajectory, system.units(), spec.where, problems)
+    problems.raise_if_any()
+    with system.written_by("trajectory"):
+        for inventory in trajectory.inventories.values():
+            item, _, quantity = inventory.name.partition(".")
+            system.variables(quantity, [item], unit=inventory.unit)
 
 
 def _to_variable(value: float, unit: str, name: str, system: System) -> float:
@@ -166,22 +184,4 @@ def _causes(spec: SharedErrorSpec) -> list[SharedError]:
             shape = np.sqrt(value) * vector
             name = f"{spec.name} {len(out) + 1}"
             out.append(SharedError(name, spec.meters, tuple(shape * part[0]), tuple(shape * part[1])))
-    return out
-
-
-def _doubts(spec: CaseSpec) -> list[Notice]:
-    """Things that are allowed and yet deserve a second look."""
-    out = []
-    laws = {tuple((p.kind, p.value) for p in m.sigma.components) for m in spec.meters.values()}
-    if len(spec.meters) > 2 and laws == {(("absolute", 1.0),)}:
-        out.append(
-            Notice(
-                "same-sigma", f"All {len(spec.meters)} sigmas are 1. The weights then depend on the units. Intended?"
-            )
-        )
-    guessed = [m.tag for m in spec.meters.values() if m.sigma.marked_guess]
-    if guessed:
-        out.append(
-            Notice("guessed-sigma", f"The sigma of {', '.join(guessed)} is a guess that the case marks as such.")
-        )
     return out

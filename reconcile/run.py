@@ -20,8 +20,10 @@ from .adjust.eliminate import dependent_rows
 from .adjust.solve import Problem as Snapshot
 from .adjust.table import Table, adjust_table
 from .assemble import Assembled, assemble
+from .bounds import bound_notices
 from .domains import Plugins, load_plugins
-from .errors import InputError, Location, Notice, Problem, Problems, did_you_mean
+from .doubts import doubts_of_readings
+from .errors import InputError, Location, Problem, Problems, did_you_mean
 from .readings.table import ReadingsTable
 from .refit import decide, problem_of
 from .results import Result
@@ -171,7 +173,12 @@ class Case:
             },
             figures=spec.figures,
             cautions=self.parts.cautions,
-            notices=(*self.parts.notices, *table.notices, *self._bound_notices(adjusted)),
+            notices=(
+                *self.parts.notices,
+                *table.notices,
+                *doubts_of_readings(self.model, self.parts.network, picked),
+                *bound_notices(adjusted, self.model, spec),
+            ),
             provenance=self._provenance(table, chosen, suspects),
         )
         return result if suspects == "flag" else decide(result, suspects)
@@ -292,56 +299,6 @@ class Case:
                     "give one of the constants a sigma, or correct it",
                 )
             problems.raise_if_any()
-
-    def _bound_notices(self, table: Table) -> list[Notice]:
-        """Report violated bounds, stated or physical; a value outside is never exported without saying so."""
-        model = self.model
-        limits = self._bounds()
-        counts: dict[tuple[int, str], list[float]] = {}
-        for group in table.groups:
-            spread = np.linalg.norm(np.nan_to_num(group.cover), axis=1)
-            for column, (low, high) in limits.items():
-                if not group.determined[column]:
-                    continue
-                x, slack = group.x[:, column], 1e-9 * (1.0 + spread[column])
-                for word, beyond in (("below", x[x < low - slack]), ("above", x[x > high + slack])):
-                    if beyond.size:
-                        counts.setdefault((column, word), []).extend(beyond.tolist())
-        out = []
-        for (column, word), values in counts.items():
-            bound = limits[column][0 if word == "below" else 1]
-            worst = min(values) if word == "below" else max(values)
-            many = f" in {len(values)} snapshots" if table.size > 1 else ""
-            out.append(
-                Notice(
-                    "bound-violated",
-                    f"{model.names[column]} comes out {word} its bound of {bound:g} {model.units[column]}{many} "
-                    f"(worst {worst:.6g}). Reverse flow, zero offset, or a fault? The value is exported as it came out.",
-                )
-            )
-        return out
-
-    def _bounds(self) -> dict[int, tuple[float, float]]:
-        from .units import factor_offset
-
-        model = self.model
-        out = {
-            int(c): (float(model.lower[c]), float(model.upper[c]))
-            for c in model.shown
-            if np.isfinite(model.lower[c]) or np.isfinite(model.upper[c])
-        }
-        for name, bound in self.parts.spec.bounds.items():
-            column = model.system.column(name)
-            low, high = out.get(column, (-np.inf, np.inf))
-            ends = []
-            for stated, default in ((bound.lower, low), (bound.upper, high)):
-                if stated is None:
-                    ends.append(default)
-                else:
-                    factor, offset = factor_offset(stated[1], model.units[column])
-                    ends.append(factor * stated[0] + offset)
-            out[column] = (ends[0], ends[1])
-        return out
 
     def _provenance(self, table: ReadingsTable, settings: Any, suspects: str) -> dict[str, Any]:
         spec = self.parts.spec

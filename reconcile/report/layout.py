@@ -34,7 +34,14 @@ def wrap(text: str, indent: str = "  ", width: int = WIDTH) -> str:
     """Break a paragraph into lines."""
     import textwrap
 
-    return textwrap.fill(text, width=width, initial_indent=indent, subsequent_indent=indent, break_long_words=False)
+    return textwrap.fill(
+        text,
+        width=width,
+        initial_indent=indent,
+        subsequent_indent=indent,
+        break_long_words=False,
+        break_on_hyphens=False,
+    )
 
 
 def table(header: Sequence[str], rows: Sequence[Sequence[str]], *, left: Sequence[int] = (0,), keep: int = 3) -> str:
