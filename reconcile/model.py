@@ -354,8 +354,8 @@ class Model:
 
 
 def _second_way(unit: str) -> str:
-    """How a reading is checked by hand; flows can be caught in a bucket."""
-    of_flow = unit.endswith(("/s", "/min", "/h", "/d"))
+    """How a reading is checked by hand; flows can be caught in a bucket, amounts and rates per litre cannot."""
+    of_flow = unit.endswith(("/s", "/min", "/h", "/d")) and unit.count("/") == 1 and "mol" not in unit
     return "take a second reading of {item}" + (
         " (bucket and stopwatch, a second meter)" if of_flow else " by another method"
     )
