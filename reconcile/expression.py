@@ -14,6 +14,8 @@ import numpy as np
 import numpy.typing as npt
 import scipy.sparse as sp
 
+from .errors import PluginError
+
 __all__ = ["Balance", "Call", "Expression", "stack"]
 
 Array = npt.NDArray[np.float64]
@@ -54,17 +56,33 @@ class Call:
 
     def value(self, x: Array) -> Array:
         """Values at x, shape (k,)."""
-        out = np.asarray(self.function(*self.arguments(x)), dtype=float)
-        return np.broadcast_to(out, (self.size,))
+        return self._ask(self.function, x, lambda out: np.broadcast_to(np.asarray(out, dtype=float), (self.size,)))
 
     def jacobian(self, x: Array) -> sp.csr_array:
         """Derivatives with respect to x, shape (k, n)."""
-        parts = self.derivatives(*self.arguments(x))
+
+        def slopes(parts: Any) -> list[Array]:
+            each = [np.broadcast_to(np.asarray(p, dtype=float), (self.size,)) for p in parts]
+            if len(each) != len(self.matrices):
+                raise ValueError(f"{len(each)} derivatives for {len(self.matrices)} arguments")
+            return each
+
         total = sp.csr_array((self.size, x.size))
-        for part, matrix in zip(parts, self.matrices, strict=True):
-            slope = np.broadcast_to(np.asarray(part, dtype=float), (self.size,))
+        for slope, matrix in zip(self._ask(self.derivatives, x, slopes), self.matrices, strict=True):
             total = total + sp.diags_array(slope) @ _widen(matrix, x.size)
         return sp.csr_array(total)
+
+    def _ask(self, function: Callable[..., Any], x: Array, shaped: Callable[[Any], Any]) -> Any:
+        """Call a function of the domain; whatever goes wrong in there is reported under the domain's name."""
+        try:
+            return shaped(function(*self.arguments(x)))
+        except Exception as error:
+            raise PluginError(
+                self.writer,
+                f"its function {getattr(function, '__name__', 'without a name')!r} failed: "
+                f"{type(error).__name__}: {error}",
+                hint="the arguments may be outside its range: check the readings, or state expected values under design:",
+            ) from error
 
 
 def _widen(matrix: sp.csr_array, columns: int) -> sp.csr_array:

@@ -27,12 +27,14 @@ from .errors import InputError, Location, Problem, Problems, did_you_mean
 from .readings.table import ReadingsTable
 from .refit import decide, problem_of
 from .results import Result
+from .rivals import rival_notices
 
 if TYPE_CHECKING:
     import pandas as pd
 
     from .coverage import Coverage
     from .model import Model
+    from .trajectory import Trajectory
 
 __all__ = ["Case", "load_case"]
 
@@ -159,12 +161,13 @@ class Case:
         chosen = replace(spec.settings, **settings) if settings else spec.settings
         adjusted = adjust_table(self.problem(chosen), base, names=self.name_of_column, row_names=self.name_of_row)
         self._refuse_contradictions(adjusted)
+        labels = tuple(table.label(i) for i in range(len(table)))
         result = Result(
             title=self.title,
             model=self.model,
             table=adjusted,
             readings=values[:, [column[t] for t in self.tags]],
-            labels=tuple(table.label(i) for i in range(len(table))),
+            labels=labels,
             settings=chosen,
             spec=spec,
             excluded=left_out,
@@ -178,10 +181,17 @@ class Case:
                 *table.notices,
                 *doubts_of_readings(self.model, self.parts.network, picked),
                 *bound_notices(adjusted, self.model, spec),
+                *rival_notices(adjusted, self.model, labels),
             ),
             provenance=self._provenance(table, chosen, suspects),
         )
         return result if suspects == "flag" else decide(result, suspects)
+
+    def run_trajectory(self, readings: Any = None, *, exclude: Mapping[str, str] | None = None) -> Trajectory:
+        """Adjust windows that inventories tie, as one system; see `reconcile.trajectory.run_trajectory`."""
+        from .trajectory import run_trajectory
+
+        return run_trajectory(self, readings, exclude=exclude)
 
     def read(self, readings: Any = None) -> ReadingsTable:
         """Read readings and check that their columns fit the meters; see `run`."""

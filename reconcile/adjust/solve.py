@@ -13,12 +13,12 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from ..errors import SolveError
+from ..errors import PluginError, SolveError
 from ..system import Equations
 from .accelerate import Acceleration
 from .dense import Adjuster, prepare
 
-__all__ = ["Problem", "Solution", "solve"]
+__all__ = ["Problem", "Rival", "Solution", "solve"]
 
 Array = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
@@ -66,6 +66,25 @@ class Problem:
 
 
 @dataclass(frozen=True)
+class Rival:
+    """Another answer that closes the same balances.
+
+    Attributes
+    ----------
+    objective : float
+        What it leaves; compare with the square of the parity vector.
+    column : int
+        Where it differs most, in sigmas.
+    value : float
+        Its value there.
+    """
+
+    objective: float
+    column: int
+    value: float
+
+
+@dataclass(frozen=True)
 class Solution:
     """An adjusted snapshot.
 
@@ -87,6 +106,8 @@ class Solution:
         Sigma of every reading as it was used.
     steps : int
         Linearisations that were needed.
+    rival : Rival or None
+        Another answer, where one was looked for and found.
     """
 
     x: Array
@@ -98,9 +119,12 @@ class Solution:
     jacobian: Array
     sigma: Array
     steps: int
+    rival: Rival | None = None
 
 
-def solve(problem: Problem, *, names: Callable[[int], str], row_names: Callable[[int], str]) -> Solution:
+def solve(
+    problem: Problem, *, names: Callable[[int], str], row_names: Callable[[int], str], start: Array | None = None
+) -> Solution:
     """Adjust one snapshot.
 
     Parameters
@@ -108,6 +132,8 @@ def solve(problem: Problem, *, names: Callable[[int], str], row_names: Callable[
     problem : Problem
     names, row_names : callable
         Give the name of a column and of a row, for messages.
+    start : ndarray, shape (n,), optional
+        Where to start products and functions from; computed from the readings when left out.
 
     Returns
     -------
@@ -124,12 +150,14 @@ def solve(problem: Problem, *, names: Callable[[int], str], row_names: Callable[
     taken[problem.columns[present]] = True
     taken[problem.fixed] = True
     free = np.flatnonzero(~taken)
-    x = _start(problem, present, free)
+    x = _start(problem, present, free) if start is None else start
     # Sigmas start at the readings; absent ones do not count, so any value serves.
     values = np.where(np.isfinite(problem.readings), problem.readings, 0.0)
     step = _Linearised(problem, present, free, names, row_names)
     if not problem.value_dependent and problem.equations(values).is_linear:
         return step.at(np.where(np.isfinite(x), x, 0.0), values).solution(1)
+    if start is None and not problem.equations(values).is_linear:
+        x = _close_unmeasured(problem.equations(values), x, free)
     return _iterate(step, x, values)
 
 
@@ -235,11 +263,8 @@ class _Linearised:
 def _iterate(step: _Linearised, x: Array, values: Array) -> Solution:
     """Repeat the linearised solution until balances, values and sigmas have settled."""
     problem, measured, free = step.problem, step.measured, step.free
-    equations = problem.equations(values)
-    if not equations.is_linear:
-        x = _close_unmeasured(equations, x, free)
     x = np.where(np.isfinite(x), x, 0.0)
-    penalty = np.zeros(equations.shape[0])
+    penalty = np.zeros(problem.equations(values).shape[0])
     size = np.zeros(x.size)
     size[measured], size[free] = problem.sigma(values)[step.present], np.maximum(np.abs(x[free]), 1e-6)
     memory = Acceleration(size)
@@ -321,7 +346,11 @@ class _Merit:
     def __call__(self, z: Array) -> float:
         with np.errstate(all="ignore"):
             off = (self.now.step.y - z[self.now.step.measured]) / self.s
-            value = 0.5 * (off**2).sum() + (self.penalty * np.abs(self.now.equations.closure(z))).sum()
+            try:
+                closure = self.now.equations.closure(z)
+            except PluginError:  # a function of a domain does not reach that far: the step is too long
+                return np.inf
+            value = 0.5 * (off**2).sum() + (self.penalty * np.abs(closure)).sum()
         return float(value) if np.isfinite(value) else np.inf
 
     def search(self, direction: Array) -> float:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from functools import cached_property
 
@@ -11,8 +11,9 @@ import numpy.typing as npt
 
 from ..errors import SolveError
 from ..system import Equations
+from .answers import solve_and_check
 from .dense import Adjuster
-from .solve import Problem, Solution, solve
+from .solve import Problem, Rival, Solution, solve
 
 __all__ = ["Group", "Table", "adjust_table"]
 
@@ -47,6 +48,8 @@ class Group:
         Sigma of every reading as used.
     steps : int
         Linearisations that were needed.
+    rival : Rival or None
+        Another answer that closes the balances of these snapshots, where a second start found one.
     """
 
     rows: Ints
@@ -61,6 +64,7 @@ class Group:
     jacobian: Array
     sigma: Array
     steps: int
+    rival: Rival | None = None
 
     @property
     def checks(self) -> int:
@@ -135,6 +139,12 @@ class Table:
     failed: dict[int, SolveError]
     size: int
 
+    def placed(self, rows: Ints, size: int, failed: Mapping[int, SolveError] | None = None) -> Table:
+        """Return the same snapshots as those rows of a larger table, beside others that were not adjusted."""
+        groups = tuple(replace(g, rows=rows[g.rows]) for g in self.groups)
+        moved = {int(rows[i]): error for i, error in self.failed.items()}
+        return Table(groups, {**moved, **(failed or {})}, size)
+
     @cached_property
     def group_of(self) -> Ints:
         """Group of each snapshot, -1 where it failed."""
@@ -150,6 +160,8 @@ def adjust_table(
     *,
     names: Callable[[int], str],
     row_names: Callable[[int], str],
+    sigmas: Array | None = None,
+    scatter: Array | None = None,
 ) -> Table:
     """Adjust every row of a table of readings.
 
@@ -161,11 +173,17 @@ def adjust_table(
         nan where a reading is absent.
     names, row_names : callable
         For messages.
+    sigmas : ndarray, shape (N, k), optional
+        Standard uncertainty of single cells that have their own; nan where the problem's law holds.
+    scatter : ndarray, shape (N, k), optional
+        What adds to that law in quadrature; 0 where nothing does.
 
     Returns
     -------
     Table
     """
+    if sigmas is not None or scatter is not None:
+        return _by_sigma(problem, readings, sigmas, scatter, names, row_names)
     present = np.isfinite(readings)
     everything = problem.equations(np.nan_to_num(readings[0])) if len(readings) else None
     if everything is not None and everything.is_linear and not problem.value_dependent:
@@ -173,7 +191,7 @@ def adjust_table(
     groups, failed = [], {}
     for i in range(len(readings)):
         try:
-            solution = solve(replace(problem, readings=readings[i]), names=names, row_names=row_names)
+            solution = solve_and_check(replace(problem, readings=readings[i]), names=names, row_names=row_names)
         except SolveError as error:
             failed[i] = error
             continue
@@ -181,10 +199,56 @@ def adjust_table(
     return Table(tuple(groups), failed, len(readings))
 
 
+def _by_sigma(
+    problem: Problem,
+    readings: Array,
+    sigmas: Array | None,
+    scatter: Array | None,
+    names: Callable[[int], str],
+    row_names: Callable[[int], str],
+) -> Table:
+    """Rows with the same sigmas of their own share everything else, too."""
+    own = np.full(readings.shape, np.nan) if sigmas is None else sigmas
+    more = np.zeros(readings.shape) if scatter is None else np.nan_to_num(scatter)
+    # What an absent reading would have had does not keep rows apart.
+    absent = ~np.isfinite(readings)
+    own, more = np.where(absent, np.nan, own), np.where(absent, 0.0, more)
+    kinds, which = np.unique(np.hstack([np.nan_to_num(own, nan=-1.0), more]), axis=0, return_inverse=True)
+    which = which.ravel()
+    groups: list[Group] = []
+    failed: dict[int, SolveError] = {}
+    for kind in range(len(kinds)):
+        rows = np.flatnonzero(which == kind)
+        part = adjust_table(
+            with_sigmas(problem, own[rows[0]], more[rows[0]]), readings[rows], names=names, row_names=row_names
+        )
+        part = part.placed(rows, len(readings))
+        groups.extend(part.groups)
+        failed.update(part.failed)
+    return Table(tuple(groups), failed, len(readings))
+
+
+def with_sigmas(problem: Problem, own: Array, more: Array) -> Problem:
+    """Return a problem with other sigmas.
+
+    Parameters
+    ----------
+    problem : Problem
+    own : ndarray, shape (k,)
+        Sigmas that replace its law; nan where that holds.
+    more : ndarray, shape (k,)
+        What adds to the law in quadrature.
+    """
+    law, stated = problem.sigma, np.isfinite(own)
+    if not stated.any() and not more.any():
+        return problem
+    return replace(problem, sigma=lambda values: np.where(stated, own, np.hypot(law(values), more)))
+
+
 def _single(row: int, s: Solution, columns: Ints, absent: Ints) -> Group:
     return Group(
         np.array([row]), s.x[None], s.parity[None], s.adjuster, s.present, absent, columns, s.free,
-        s.equations, s.jacobian, s.sigma, s.steps,
+        s.equations, s.jacobian, s.sigma, s.steps, s.rival,
     )  # fmt: skip
 
 
