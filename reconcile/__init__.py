@@ -15,6 +15,7 @@ if TYPE_CHECKING:
     from .results import Result
     from .run import Case, load_case
     from .system import System, stack
+    from .trajectory import Trajectory
 
 # The numeric rooms are loaded when they are first asked for, so that `reconcile --help` starts at once.
 _LAZY = {
@@ -25,6 +26,7 @@ _LAZY = {
     "stack": "system",
     "Case": "run",
     "Result": "results",
+    "Trajectory": "trajectory",
     "load_case": "run",
     "load_corrected": "export",
 }
@@ -44,6 +46,7 @@ __all__ = [
     "Section",
     "SolveError",
     "System",
+    "Trajectory",
     "__version__",
     "did_you_mean",
     "hookimpl",

@@ -132,7 +132,12 @@ class Accounts:
 
 
 def explainer_of(
-    model: Model, signatures: Array, settings: Settings, spec: CaseSpec | None, most: int | None = None
+    model: Model,
+    signatures: Array,
+    settings: Settings,
+    spec: CaseSpec | None,
+    most: int | None = None,
+    candidates: Sequence[Candidate] | None = None,
 ) -> Explainer | None:
     """Prepare the search for explanations in one linearisation.
 
@@ -147,6 +152,8 @@ def explainer_of(
         For fault rates of single meters.
     most : int, optional
         Replaces `max_faults`.
+    candidates : sequence of Candidate, optional
+        What the columns of `signatures` are; those of the model when left out.
 
     Returns
     -------
@@ -166,11 +173,12 @@ def explainer_of(
     saturated = checks == 1 and most in (None, 1)
     if most is None:
         most = min(DEFAULT_FAULTS, max(checks - 1, 1))
-    rate, size = _priors(model, settings, spec)
+    chosen = model.candidates if candidates is None else candidates
+    rate, size = _priors(model, settings, spec, chosen)
     try:
         return Explainer(
             signatures,
-            sides=[c.side for c in model.candidates],
+            sides=[c.side for c in chosen],
             fault_rate=rate,
             size_prior=size,
             max_faults=most,
@@ -181,7 +189,9 @@ def explainer_of(
         raise InputError(Problem(refusal.code, refusal.message, refusal.hint)) from None
 
 
-def _priors(model: Model, settings: Settings, spec: CaseSpec | None) -> tuple[Array, Array]:
+def _priors(
+    model: Model, settings: Settings, spec: CaseSpec | None, candidates: Sequence[Candidate]
+) -> tuple[Array, Array]:
     """Probability of each candidate, and the spread of its size in its unit."""
     own_rate = {t: m.options.get("fault_rate") for t, m in spec.meters.items()} if spec else {}
     sigma = _typical_sigma(model)
@@ -190,10 +200,10 @@ def _priors(model: Model, settings: Settings, spec: CaseSpec | None) -> tuple[Ar
         by_unit.setdefault(model.units[model.columns[i]], []).append(sigma[i] * abs(model.factor[i]))
     everything = [s for v in by_unit.values() for s in v]
     rates, sizes = [], []
-    for c in model.candidates:
+    for c in candidates:
         if c.reading >= 0:
             r = model.readings[c.reading]
-            stated = own_rate.get(r.tag)
+            stated = own_rate.get(r.tag) if c.rate is None else c.rate
             rates.append(settings.fault_rate if stated is None else float(stated))
             sizes.append(SHARE_OF_SPAN * r.span if np.isfinite(r.span) else SIGMAS_OF_A_FAULT * sigma[c.reading])
         else:
@@ -215,7 +225,9 @@ def _typical_sigma(model: Model) -> Array:
     return np.maximum(model.total_sigma(value) / np.abs(model.factor), 1e-300)
 
 
-def explain(explainer: Explainer, parity: Array, model: Model, level: float) -> Accounts:
+def explain(
+    explainer: Explainer, parity: Array, model: Model, level: float, candidates: Sequence[Candidate] | None = None
+) -> Accounts:
     """Explain one parity vector.
 
     Parameters
@@ -224,6 +236,8 @@ def explain(explainer: Explainer, parity: Array, model: Model, level: float) -> 
     parity : ndarray, shape (r,)
     model : Model
     level : float
+    candidates : sequence of Candidate, optional
+        What the explainer was prepared for; those of the model when left out.
 
     Returns
     -------
@@ -231,7 +245,8 @@ def explain(explainer: Explainer, parity: Array, model: Model, level: float) -> 
     """
     found: Explanations = explainer.explain(parity, level=level)
     said = verdict(found)
-    named = {id(e): _account(e, model.candidates) for e in (*found.listed, *said.rivals)}
+    chosen = model.candidates if candidates is None else candidates
+    named = {id(e): _account(e, chosen) for e in (*found.listed, *said.rivals)}
     return Accounts(
         conclusion=said.conclusion,
         reasons=said.reasons,

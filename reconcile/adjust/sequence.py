@@ -280,7 +280,8 @@ class _Work:
         active = [j for j, push in enumerate(self.pushes) if push.first <= t < push.stop]
         for j in active:
             if self.pushes[j].column >= 0:
-                constant[rest, 1 + j] = balances.of_fault(self.pushes[j].column)
+                # The fault moves what is read; to balances that do not know of it, that is a move the other way.
+                constant[rest, 1 + j] = -balances.of_fault(self.pushes[j].column)
         # The state before the window from the state it is written in, and the other way round.
         q = chain.inventories.size
         change = np.zeros((c, n))
@@ -325,7 +326,7 @@ class _Work:
         fixed = problem.fixed
         known = jacobian @ at - closure - jacobian[:, fixed] @ problem.start[fixed]
         spread = np.full(problem.start.size, np.nan)
-        spread[problem.columns] = sigma
+        spread[problem.columns] = np.where(sigma > 0, sigma, np.nan)
         found = solve_balances(jacobian, known, self.rest, self.state, spread)
         if found.tied.size:
             raise SolveError(
@@ -345,7 +346,8 @@ class _Work:
         problem = self.chain.window
         move = np.abs(now.x - x)
         scale = 0.1 * np.maximum(np.abs(now.x), 1e-9)
-        scale[:, problem.columns] = now.sigma
+        read = scale[:, problem.columns]
+        scale[:, problem.columns] = np.where(np.isfinite(self.readings), now.sigma, read)
         largest = float(np.max(np.where(now.determined, move / scale, 0.0), initial=0.0))
         return largest, self.worst(now.x, values)[2]
 

@@ -16,6 +16,7 @@ from .sigma import read_sigma
 from .spec import CaseSpec, DomainModels, KnownSpec, MeterSpec, Settings
 from .streams import OptionReader, read_nodes, read_streams
 from .tables import read_table
+from .trajectory import read_trajectory
 from .validate import keys_of, validated
 from .yaml_source import read_yaml
 
@@ -146,6 +147,9 @@ class _CaseReader:
         figures = self._figures()
         readings = self._readings()
         settings = self._settings()
+        trajectory = read_trajectory(
+            self.data.get("trajectory"), meters, tuple(raw_meters), known, self.places, self.problems
+        )
         if not sound:
             return None
         return CaseSpec(
@@ -163,6 +167,7 @@ class _CaseReader:
             readings=readings,
             settings=settings,
             where=self.places.where,
+            trajectory=trajectory,
         )
 
     def _block(self, section: str) -> dict[str, Any]:

@@ -119,4 +119,7 @@ class CaseModel(_Model):
     design: dict[str, Any] | None = Field(None, description="Expected values, for planning before any reading")
     figures: dict[str, Any] | None = Field(None, description="Derived values as formulas of variables")
     readings: Any = Field(None, description="File of the readings, or a block that says how to read it")
+    trajectory: dict[str, Any] | None = Field(
+        None, description="Windows that follow one another, tied by inventories: inventories, read_at, step, ..."
+    )
     settings: Any = Field(None, description="How the case is to be judged")

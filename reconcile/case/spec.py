@@ -13,6 +13,8 @@ from ..errors import Location
 if TYPE_CHECKING:
     from pydantic import BaseModel
 
+    from .trajectory import TrajectorySpec
+
 __all__ = [
     "BoundSpec",
     "CaseSpec",
@@ -224,6 +226,8 @@ class CaseSpec:
     settings : Settings
     where : callable
         ``where(path) -> Location``, e.g. of ``("meters", "FT-1", "sigma")``.
+    trajectory : TrajectorySpec or None
+        How windows are tied by inventories, where they are.
     """
 
     title: str
@@ -240,3 +244,4 @@ class CaseSpec:
     readings: str | dict[str, Any] | None
     settings: Settings
     where: Callable[..., Location]
+    trajectory: TrajectorySpec | None = None

@@ -22,6 +22,7 @@ __all__ = [
     "explanation_sentences",
     "explanations_in_words",
     "fault_phrase",
+    "named_in_short",
     "p_value",
     "percent",
     "remarks_on_explanations",
@@ -183,7 +184,7 @@ def verdict_sentences(snapshot: Snapshot) -> list[str]:
     if t.status == "disagrees":
         verb = "to watch" if snapshot.word == "watch" else "do not agree"
         out.append(head + f"{verb} ({test_phrase(snapshot)}).")
-        out.extend(_named(snapshot.accounts))
+        out.extend(named_in_short(snapshot.accounts))
     elif t.status == "suspiciously good":
         out.append(
             head + f"agree suspiciously well ({test_phrase(snapshot)}): the sigmas are probably too large, "
@@ -212,7 +213,8 @@ def _count(n: int, noun: str) -> str:
     return f"{n} {noun}" if n == 1 else f"{n} {noun}s"
 
 
-def _named(a: Accounts | None) -> list[str]:
+def named_in_short(a: Accounts | None) -> list[str]:
+    """Who is suspected, in a sentence or two."""
     if a is None:
         return []
     if not a.standing:

@@ -1,0 +1,120 @@
+"""A sequence of windows for a terminal: verdict, inventories, explanations."""
+
+from __future__ import annotations
+
+import math
+from types import SimpleNamespace
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from .layout import table, to_ascii, wrap
+from .numbers import plain, signed
+from .words import MARKS, explanations_in_words, named_in_short, remarks_on_explanations, test_phrase
+
+if TYPE_CHECKING:
+    from ..trajectory import Trajectory
+
+__all__ = ["render_trajectory", "verdict_of_trajectory"]
+
+MANY = 14
+
+
+def _told(found: Trajectory) -> Any:
+    """What the sentences of a snapshot read, for the whole sequence."""
+    return SimpleNamespace(accounts=found.accounts, test=found.test)
+
+
+def verdict_of_trajectory(found: Trajectory) -> str:
+    """One paragraph: how many windows, readings and checks, whether they agree, and who is suspected."""
+    given = int(np.isfinite(found.base[:, found.model.meters]).sum())
+    head = f"{found.size} windows, {given} readings, {found.checks} checks: "
+    if found.checks == 0:
+        return head + "no check possible, since balances and inventories leave nothing to compare."
+    if found.test.status == "disagrees":
+        verb = "to watch" if found.word == "watch" else "do not agree"
+        return " ".join([head + f"{verb} ({test_phrase(_told(found))}).", *named_in_short(found.accounts)])
+    if found.test.status == "suspiciously good":
+        return head + f"agree suspiciously well ({test_phrase(_told(found))}): the sigmas are probably too large."
+    return head + f"agree within their sigmas ({test_phrase(_told(found))})."
+
+
+def render_trajectory(found: Trajectory, *, ascii_only: bool = False) -> str:
+    """Render a sequence as text of at most 100 columns.
+
+    Parameters
+    ----------
+    found : Trajectory
+    ascii_only : bool
+        For terminals that cannot show more.
+
+    Returns
+    -------
+    str
+    """
+    out = [found.title, "", wrap(f"{MARKS.get(found.word, '')} {verdict_of_trajectory(found)}".strip(), "")]
+    at = "end" if found.trajectory.at_end else "start"
+    out += ["", f"  Inventories at the {at} of each window:", "", _inventories(found)]
+    if found.outer:
+        beyond = "before the first window" if found.trajectory.at_end else "behind the last window"
+        unit = {i.name: i.unit for i in found.trajectory.inventories.values()}
+        text = ", ".join(f"{n} {plain(v, s)} ± {plain(s, s)} {unit[n]}" for n, (v, s) in found.outer.items())
+        out += ["", wrap(f"{beyond}: {text}")]
+    if found.test.status == "disagrees":
+        told = explanations_in_words(_told(found))
+        if told:
+            out += ["", "  EXPLANATIONS", *(wrap(line, "    ") for lines in told for line in lines)]
+        out += [wrap(line) for line in remarks_on_explanations(_told(found))]
+    unchecked = [
+        tag
+        for tag, i in zip(found.tags, found.model.meters, strict=True)
+        if np.isfinite(found.base[:, i]).any() and not (found.share[:, i] > 0).any()
+    ]
+    if unchecked:
+        out += ["", wrap(f"Not checked by anything in any window: {', '.join(unchecked)}.")]
+    priors = [r.tag.removeprefix("known:") for r in found.model.readings if r.kind == "prior"]
+    stays = [n for n in priors if n not in found.trajectory.varying]
+    if stays:
+        out += ["", wrap(f"Taken as the same in all windows: {', '.join(stays)}.")]
+    if not found.model.shared:
+        out += ["", wrap(
+            "Errors are taken as independent from window to window. What stays the same, such as a calibration, belongs "
+            "under trajectory: constant_errors."
+        )]  # fmt: skip
+    out += [wrap(f"{tag} was left out: {why}.") for tag, why in found.excluded.items()]
+    out += [wrap(str(n)) for n in found.notices]
+    out += [wrap(c) for c in found.cautions]
+    text = "\n".join(out) + "\n"
+    return to_ascii(text) if ascii_only else text
+
+
+def _inventories(found: Trajectory) -> str:
+    """Each inventory of the first and last windows: read (where one meter reads it), adjusted, sigma, test value."""
+    meter_of = {}
+    for j, i in enumerate(found.model.meters):
+        reads = found.model.readings[i].reads
+        if len(reads) == 1:
+            meter_of.setdefault(reads[0][0], (j, i))
+    shown = range(found.size)
+    first = [*shown] if found.size <= MANY else [*shown][: MANY // 2]
+    last = [] if found.size <= MANY else [*shown][-MANY // 2 :]
+    rows = []
+    for inventory in found.trajectory.inventories.values():
+        place = found.variables.index(inventory.name)
+        for t in (*first, None, *last) if last else first:
+            if t is None:
+                rows.append(("...", "", "", "", "", "", ""))
+                continue
+            value, sigma = float(found.adjusted[t, place]), float(found.sigmas[t, place])
+            read, z = math.nan, math.nan
+            if inventory.name in meter_of:
+                j, i = meter_of[inventory.name]
+                stated = found.base[t, i]
+                read, z = float(stated), float(found.z[t, i])
+            rows.append(
+                (
+                    found.labels[t], inventory.name, inventory.unit, plain(read, sigma), plain(value, sigma),
+                    plain(sigma, sigma), signed(z, 0.05),
+                )
+            )  # fmt: skip
+    return table(("WINDOW", "inventory", "unit", "read", "adjusted", "sigma", "z"), rows, left=(0, 1, 2))

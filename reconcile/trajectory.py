@@ -1,0 +1,498 @@
+"""Windows that follow one another, tied by what nodes hold: one answer and one body of evidence for all of them.
+
+The inventory of a node at the start (or end) of each window is a variable; from one window to the next it changes by
+the length of the window times the node's rate of accumulation, which the domain's own balance gives. What holds of one
+snapshot holds of the whole sequence: parity vector, signatures, tests, explanations.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from .accounts import Accounts, explain, explainer_of
+from .adjust.sequence import Chain, Push, Sequence, solve_sequence
+from .adjust.table import adjust_table
+from .case.trajectory import TrajectorySpec, change_factor
+from .diagnose.critical import chi2_limit, chi2_p
+from .diagnose.sidak import sidak_limit
+from .diagnose.tests_of_readings import global_test
+from .errors import InputError, Location, Notice, Problem
+from .model import Candidate, Model
+from .refit import problem_of
+from .results import word_of_evidence
+from .units import difference_factor
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from .case.spec import CaseSpec
+    from .diagnose.tests_of_readings import GlobalTest
+    from .readings.table import ReadingsTable
+    from .run import Case
+
+__all__ = ["Trajectory", "run_trajectory"]
+
+Array = npt.NDArray[np.float64]
+Bools = npt.NDArray[np.bool_]
+
+MOST_SINGLE = 8
+"""Single readings with the largest test values beyond the limit that are candidates beside lasting faults."""
+
+
+@dataclass(frozen=True)
+class Trajectory:
+    """What a run over a sequence of windows found.
+
+    Attributes
+    ----------
+    title : str
+    model : Model
+        Of one window.
+    solution : Sequence
+        All windows as arrays, base units.
+    candidates : tuple of Candidate
+        Lasting faults of meters and nodes, then single readings that stand out; columns of `solution.signatures`.
+    readings : ndarray, shape (N, number of meters)
+        In the unit of each meter; nan where absent.
+    base : ndarray, shape (N, k)
+        What took part, base units.
+    labels : tuple of str
+    lengths : ndarray, shape (N,)
+        Seconds.
+    outer_known : bool
+        Whether the length of the window at the open end is known, and with it the inventory beyond it.
+    settings, spec, excluded, statuses, cautions, notices, provenance
+        As in `Result`.
+    """
+
+    title: str
+    model: Model
+    solution: Sequence
+    candidates: tuple[Candidate, ...]
+    readings: Array
+    base: Array
+    labels: tuple[str, ...]
+    lengths: Array
+    outer_known: bool
+    settings: Any
+    spec: CaseSpec
+    excluded: Mapping[str, str] = field(default_factory=dict)
+    statuses: Mapping[tuple[int, str], str] = field(default_factory=dict)
+    cautions: tuple[str, ...] = ()
+    notices: tuple[Notice, ...] = ()
+    provenance: Mapping[str, Any] = field(default_factory=dict)
+
+    # ------------------------------------------------------------------ values
+
+    @property
+    def size(self) -> int:
+        """Number of windows."""
+        return len(self.labels)
+
+    @property
+    def trajectory(self) -> TrajectorySpec:
+        """What the case says of the sequence."""
+        assert self.spec.trajectory is not None
+        return self.spec.trajectory
+
+    @cached_property
+    def tags(self) -> tuple[str, ...]:
+        """Tags of the meters, in the order of the case."""
+        return tuple(self.model.readings[i].tag for i in self.model.meters)
+
+    @cached_property
+    def variables(self) -> tuple[str, ...]:
+        """Names of the variables of a window, inventories among them."""
+        return tuple(self.model.names[c] for c in self.model.shown)
+
+    @cached_property
+    def units(self) -> tuple[str, ...]:
+        """Unit of each variable."""
+        return tuple(self.model.units[c] for c in self.model.shown)
+
+    @cached_property
+    def adjusted(self) -> Array:
+        """Adjusted values, shape (N, v); nan where they cannot be calculated."""
+        shown = self.model.shown
+        return np.where(self.solution.determined[:, shown], self.solution.x[:, shown], np.nan)
+
+    @cached_property
+    def sigmas(self) -> Array:
+        """Their standard uncertainties, all readings of the sequence considered, shape (N, v)."""
+        shown = self.model.shown
+        spread = np.array([np.linalg.norm(c[shown], axis=1) for c in self.solution.covers])
+        return np.where(self.solution.determined[:, shown], spread, np.nan)
+
+    def inventory(self, node: str) -> tuple[Array, Array]:
+        """Adjusted inventory of a node (or variable) in each window and its standard uncertainty, shapes (N,)."""
+        found = self.trajectory.inventories.get(node)
+        j = self.variables.index(node if found is None else found.name)
+        return self.adjusted[:, j], self.sigmas[:, j]
+
+    @cached_property
+    def outer(self) -> dict[str, tuple[float, float]]:
+        """Inventories behind the last window, or before the first where they are read at the end: value and sigma."""
+        s = self.solution
+        spread = np.linalg.norm(s.outer_cover, axis=1)
+        return {
+            i.name: (float(s.outer[j]), float(spread[j]))
+            for j, i in enumerate(self.trajectory.inventories.values())
+            if self.outer_known and s.outer_determined[j]
+        }
+
+    def factor(self, window: int) -> Array:
+        """Factor F of the covariance of the shown variables of one window, nan where undetermined: cov = F F'."""
+        out = self.solution.covers[window][self.model.shown].copy()
+        out[~self.solution.determined[window, self.model.shown]] = np.nan
+        return out
+
+    def covariance(self, window: int = 0) -> Array:
+        """Full covariance of the variables of one window, shape (v, v)."""
+        cover = self.factor(window)
+        return cover @ cover.T
+
+    # ------------------------------------------------------------------ evidence
+
+    @cached_property
+    def test(self) -> GlobalTest:
+        """Test of all readings of the sequence together."""
+        return global_test(self.solution.parity, self.settings.level)
+
+    @property
+    def objective(self) -> float:
+        """Sum of squares of the parity vector of the sequence."""
+        return self.test.objective
+
+    @property
+    def checks(self) -> int:
+        """Independent checks in the whole sequence."""
+        return self.test.checks
+
+    @cached_property
+    def share(self) -> Array:
+        """Share of an error of each reading that would show, shape (N, k); 0 where it is absent or not checked."""
+        columns, sigma = self.model.columns, self.solution.sigma
+        spread = np.array([np.linalg.norm(c[columns], axis=1) for c in self.solution.covers])
+        out = np.where(np.isfinite(self.base), 1.0 - (spread / sigma) ** 2, 0.0)
+        return np.where(out > 1e-9, out, 0.0)
+
+    @cached_property
+    def z(self) -> Array:
+        """Test value of each reading in its window, shape (N, k); nan where nothing checks it."""
+        off = self.base - self.solution.x[:, self.model.columns]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return np.where(self.share > 0, off / (self.solution.sigma * np.sqrt(self.share)), np.nan)
+
+    @cached_property
+    def z_limit(self) -> float:
+        """Limit for the largest of all those test values (Šidák); nan without one."""
+        count = int(np.isfinite(self.z[:, self.model.meters]).sum())
+        return sidak_limit(self.settings.level, count) if count else float("nan")
+
+    @cached_property
+    def word(self) -> str:
+        """Word of evidence of the sequence; one to watch does not agree where a single reading stands out."""
+        word = word_of_evidence(self.checks, self.test.p)
+        worst = np.nanmax(np.abs(self.z[:, self.model.meters]), initial=0.0)
+        return "does not agree" if word == "watch" and worst > self.z_limit else word
+
+    @cached_property
+    def accounts(self) -> Accounts | None:
+        """Explanations of the whole sequence; None without checks."""
+        f, p = self.solution.signatures, self.solution.parity
+        explainer = explainer_of(self.model, f, self.settings, self.spec, candidates=self.candidates)
+        return None if explainer is None else explain(explainer, p, self.model, self.settings.level, self.candidates)
+
+    @cached_property
+    def by_window(self) -> tuple[Array, npt.NDArray[np.int64], Array]:
+        """What the checks that each window completed add to the objective, their number, and its p-value, each (N,)."""
+        s = self.solution
+        objective = np.bincount(s.window_of, s.parity**2, minlength=self.size)
+        checks = np.bincount(s.window_of, minlength=self.size)
+        p = np.array([chi2_p(o, int(c)) if c else np.nan for o, c in zip(objective, checks, strict=True)])
+        return objective, checks, p
+
+    @cached_property
+    def limit(self) -> float:
+        """Limit of the objective at the level of the case; nan without checks."""
+        return chi2_limit(self.settings.level, self.checks) if self.checks else float("nan")
+
+    # ------------------------------------------------------------------ words and tables
+
+    def to_frame(self) -> pd.DataFrame:
+        """One tidy table: a row per window and reading, in the unit of the meter.
+
+        Returns
+        -------
+        pandas.DataFrame
+            Columns snapshot, meter, reads, unit, reading, sigma_before, adjusted, sigma, adjustment, share_checked, z.
+        """
+        import pandas as pd
+
+        model, s = self.model, self.solution
+        parts = []
+        for j, i in enumerate(model.meters):
+            r, column = model.readings[i], model.columns[i]
+            scale = abs(r.factor)
+            value = (s.x[:, column] - r.offset) / r.factor
+            value = np.where(s.determined[:, column], value, np.nan)
+            spread = np.array([np.linalg.norm(c[column]) for c in s.covers]) / scale
+            given = np.where(np.isfinite(self.base[:, i]), self.readings[:, j], np.nan)
+            parts.append(
+                pd.DataFrame(
+                    {
+                        "window": np.arange(self.size),
+                        "snapshot": list(self.labels),
+                        "meter": r.tag,
+                        "reads": " + ".join(n for n, _ in r.reads),
+                        "unit": r.unit,
+                        "reading": given,
+                        "sigma_before": s.sigma[:, i] / scale,
+                        "adjusted": value,
+                        "sigma": np.where(np.isfinite(value), spread, np.nan),
+                        "adjustment": value - given,
+                        "share_checked": self.share[:, i],
+                        "z": self.z[:, i],
+                    }
+                )
+            )
+        if not parts:
+            return pd.DataFrame()
+        frame = pd.concat(parts, ignore_index=True).sort_values("window", kind="stable", ignore_index=True)
+        return frame.drop(columns="window")
+
+    def summary(self) -> str:
+        """Return the verdict and the tables as text."""
+        from .report.trajectory import render_trajectory
+
+        return render_trajectory(self)
+
+    def __str__(self) -> str:
+        return self.summary()
+
+
+# ------------------------------------------------------------------ the run
+
+
+def run_trajectory(case: Case, readings: Any = None, *, exclude: Mapping[str, str] | None = None) -> Trajectory:
+    """Adjust a sequence of windows as one system.
+
+    Parameters
+    ----------
+    case : Case
+        With a block ``trajectory:``.
+    readings : see `Case.run`
+        A row a window, in order of time.
+    exclude : mapping of tag to reason, optional
+
+    Returns
+    -------
+    Trajectory
+
+    Raises
+    ------
+    InputError
+        If the case has no trajectory, or the readings or their stamps do not fit.
+    SolveError
+        If no consistent answer was found.
+    """
+    spec, model = case.parts.spec, case.model
+    tied = spec.trajectory
+    if tied is None:
+        raise InputError(
+            Problem(
+                "no-trajectory",
+                "the case does not say which inventories tie its windows",
+                "add e.g. trajectory: {inventories: {tank: kg}, read_at: start}",
+                Location(file=str(spec.path)),
+            )
+        )
+    table = case.read(readings)
+    left_out = case._excluded(exclude or {})
+    values = np.where(table.usable, table.values, np.nan)[:, [table.columns.index(t) for t in case.tags]]
+    picked = values.copy()
+    picked[:, [case.tags.index(t) for t in left_out]] = np.nan
+    lengths, outer_known, notices = _lengths(table, tied, spec)
+    chain, base = _chain(model, tied, spec, picked, lengths)
+    names = {"names": case.name_of_column, "row_names": case.name_of_row}
+    start = None
+    if not model.equations.is_linear:
+        alone = adjust_table(problem_of(model, spec.settings), model.to_base(picked), **names)
+        start = np.full((len(base), model.size), np.nan)
+        for group in alone.groups:
+            start[group.rows] = group.x
+        start = _filled(start, problem_of(model, spec.settings).start)
+    lasting, pushes = _lasting(model, len(base))
+    solution = solve_sequence(chain, base, start=start, pushes=pushes, **names)
+    found = Trajectory(
+        title=case.title,
+        model=model,
+        solution=_scaled(solution, lasting),
+        candidates=lasting,
+        readings=values,
+        base=base,
+        labels=tuple(table.label(i) for i in range(len(table))),
+        lengths=lengths,
+        outer_known=outer_known,
+        settings=spec.settings,
+        spec=spec,
+        excluded=left_out,
+        statuses={(i, table.columns[j]): table.reason(i, j) for i, j in zip(*np.nonzero(~table.usable), strict=True)},
+        cautions=case.parts.cautions,
+        notices=(*case.parts.notices, *table.notices, *notices),
+        provenance=case._provenance(table, spec.settings, "flag"),
+    )
+    singles, more = _singles(found)
+    if not singles:
+        return found
+    again = solve_sequence(chain, base, start=solution.x, pushes=(*pushes, *more), **names)
+    candidates = (*lasting, *singles)
+    return replace(found, solution=_scaled(again, candidates), candidates=candidates)
+
+
+def _lengths(table: ReadingsTable, tied: TrajectorySpec, spec: CaseSpec) -> tuple[Array, bool, tuple[Notice, ...]]:
+    """Length of every window in seconds; a stamp is the instant at which the inventories were read."""
+    where = spec.where(("trajectory", "step"))
+    count = len(table)
+    seconds = None
+    if table.time is not None:
+        from .readings.time_order import seconds_of
+
+        seconds = np.asarray(seconds_of(table.time), dtype=float)
+    if tied.step is not None:
+        length = tied.step[0] * difference_factor(tied.step[1], "s")
+        if seconds is not None and count > 1:
+            off = np.flatnonzero(np.abs(np.diff(seconds) - length) > 1e-3 * length)
+            if off.size:
+                i = int(off[0])
+                raise InputError(
+                    Problem(
+                        "step-differs",
+                        f"the case says windows of {length:g} s, but {np.diff(seconds)[i]:g} s pass from row {i + 1} to "
+                        f"row {i + 2} of the readings" + (f"; {off.size} such gaps in all" if off.size > 1 else ""),
+                        "write step: from stamps, or put in the missing rows, empty where nothing was read",
+                        where,
+                    )
+                )
+        return np.full(count, length), True, ()
+    if seconds is None:
+        raise InputError(
+            Problem(
+                "no-step",
+                "the readings have no time column, and the trajectory states no step",
+                "write e.g. step: 10 min under trajectory:",
+                where,
+            )
+        )
+    gaps = np.diff(seconds)
+    if np.any(gaps <= 0):
+        i = int(np.flatnonzero(gaps <= 0)[0])
+        raise InputError(
+            Problem(
+                "not-rising",
+                f"the stamp of row {i + 2} is not after that of row {i + 1}",
+                "sort the readings",
+                Location(file=table.sources[0] if table.sources else None, row=i + 2),
+            )  # fmt: skip
+        )
+    typical = float(np.median(gaps)) if gaps.size else 1.0
+    lengths = np.concatenate([[typical], gaps]) if tied.at_end else np.concatenate([gaps, [typical]])
+    notices = []
+    odd = int(np.sum(np.abs(gaps - typical) > 0.5 * typical))
+    if odd:
+        notices.append(
+            Notice(
+                "windows-of-different-length",
+                f"{odd} windows are much longer or shorter than the usual {typical:g} s; each flow is taken as the mean "
+                "over its own window. Put in the missing rows, empty, where nothing was read.",
+            )
+        )
+    return lengths, False, tuple(notices)
+
+
+def _chain(model: Model, tied: TrajectorySpec, spec: CaseSpec, picked: Array, lengths: Array) -> tuple[Chain, Array]:
+    """Put the windows of a sequence together; what is known once is read once."""
+    system = model.system
+    inventories = [system.column(i.name) for i in tied.inventories.values()]
+    problems = [i.name for i, c in zip(tied.inventories.values(), inventories, strict=True) if c in model.fixed]
+    if problems:
+        raise InputError(
+            Problem(
+                "inventory-exact",
+                f"{', '.join(problems)} is stated as exactly known, in every window",
+                "state it with a sigma, or read it",
+                spec.where(("known", problems[0])),
+            )  # fmt: skip
+        )
+    rates = [system.column(i.rate) for i in tied.inventories.values()]
+    per_second = [change_factor(i, system.unit(c)) for i, c in zip(tied.inventories.values(), rates, strict=True)]
+    once = [
+        i
+        for i, r in enumerate(model.readings)
+        if r.kind == "cause" or (r.kind == "prior" and r.reads[0][0] not in tied.varying)
+    ]
+    base = model.to_base(picked)
+    base[1:, once] = np.nan
+    constants = np.setdiff1d(model.columns[once], inventories)
+    chain = Chain(
+        problem_of(model, spec.settings),
+        np.array(inventories, dtype=np.int64),
+        np.array(rates, dtype=np.int64),
+        lengths[:, None] * np.array(per_second),
+        constants,
+        tied.at_end,
+    )
+    return chain, base
+
+
+def _filled(start: Array, typical: Array) -> Array:
+    """Fill windows that could not be solved alone from their neighbours, then from typical values."""
+    good = np.flatnonzero(np.isfinite(start).all(axis=1))
+    if good.size:
+        nearest = good[np.abs(np.arange(len(start))[:, None] - good).argmin(axis=1)]
+        return np.asarray(start[nearest])
+    return np.tile(np.nan_to_num(typical, nan=1.0), (len(start), 1))
+
+
+def _lasting(model: Model, windows: int) -> tuple[tuple[Candidate, ...], tuple[Push, ...]]:
+    """Every fault of a window as one that lasts throughout the sequence."""
+    candidates = tuple(
+        replace(c, says=f"{c.says} throughout") if c.kind not in ("constant", "shared error") else c
+        for c in model.candidates
+    )
+    return candidates, tuple(Push(c.reading, c.column, 0, windows) for c in candidates)
+
+
+def _singles(found: Trajectory) -> tuple[tuple[Candidate, ...], tuple[Push, ...]]:
+    """Single readings that stand out, as candidates; all readings of a sequence would be too many to combine."""
+    if found.word == "agrees" or not found.checks:
+        return (), ()
+    meters = found.model.meters
+    size = np.abs(np.nan_to_num(found.z[:, meters]))
+    order = np.argsort(-size, axis=None, kind="stable")[:MOST_SINGLE]
+    candidates, pushes = [], []
+    for place in order:
+        t, j = np.unravel_index(place, size.shape)
+        if not size[t, j] > found.z_limit:
+            continue
+        i = int(meters[j])
+        lasting = found.model.candidates[i]
+        rate = found.settings.fault_rate / found.size
+        label = found.labels[int(t)]
+        label = f"window {label}" if label.isdigit() else label
+        candidates.append(
+            replace(lasting, name=f"{lasting.name} at {label}", says=f"{lasting.says} at {label} alone", rate=rate)
+        )
+        pushes.append(Push(i, -1, int(t), int(t) + 1))
+    return tuple(candidates), tuple(pushes)
+
+
+def _scaled(solution: Sequence, candidates: tuple[Candidate, ...]) -> Sequence:
+    """Signatures per unit of the candidates instead of base units."""
+    return replace(solution, signatures=solution.signatures * np.array([c.scale for c in candidates]))
