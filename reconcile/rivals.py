@@ -23,13 +23,15 @@ def rival_notices(table: Table, model: Model, labels: Sequence[str]) -> list[Not
     rival = first.rival
     assert rival is not None
     name, unit = model.names[rival.column], model.units[rival.column]
-    where = "" if table.size == 1 else f" in {len(found)} snapshots, the first {labels[int(first.rows[0])]}"
+    where = (
+        "" if table.size == 1 else f" in {len(found)} of {table.size} snapshots, the first {labels[int(first.rows[0])]}"
+    )
     given, left = float(first.x[0, rival.column]), float((first.parity[0] ** 2).sum())
     return [
         Notice(
             "two-answers",
-            f"two answers close the balances{where}: the one given has {name} at {given:.6g} {unit} and leaves {left:.4g} of "
-            f"χ², the other {rival.value:.6g} {unit} and {rival.objective:.4g}. If the other is meant, state an expected "
-            f"value of {name} under design:",
+            f"two answers close the balances{where}: {name} at {given:.6g} {unit}, as given here, with χ² {left:.4g}; or at "
+            f"{rival.value:.6g} {unit}, with χ² {rival.objective:.4g}. If the other is meant, state its value under design: "
+            "or a bound that excludes this one",
         )
     ]

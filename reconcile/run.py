@@ -14,16 +14,16 @@ from typing import TYPE_CHECKING, Any, Literal
 import numpy as np
 import numpy.typing as npt
 
-from . import units
 from ._version import __version__
 from .adjust.eliminate import dependent_rows
 from .adjust.solve import Problem as Snapshot
-from .adjust.table import Table, adjust_table
+from .adjust.table import Table
 from .assemble import Assembled, assemble
-from .bounds import bound_notices
+from .bounds import bound_notices, limits_of
+from .campaign.adjusted import adjust_prepared
 from .domains import Plugins, load_plugins
 from .doubts import doubts_of_readings
-from .errors import InputError, Location, Problem, Problems, did_you_mean
+from .errors import Problems, did_you_mean
 from .readings.table import ReadingsTable
 from .refit import decide, problem_of
 from .results import Result
@@ -32,6 +32,7 @@ from .rivals import rival_notices
 if TYPE_CHECKING:
     import pandas as pd
 
+    from .campaign.prepare import Prepared
     from .coverage import Coverage
     from .model import Model
     from .trajectory import Trajectory
@@ -69,17 +70,6 @@ def load_case(path: str | Path, *, plugins: Sequence[str | Path] = (), modules: 
     if file.is_dir():
         file = file / "case.yaml"
     return Case(assemble(file, loaded), loaded)
-
-
-def same_unit(a: str, b: str) -> bool:
-    """Whether two spellings mean the same unit."""
-    if a.strip() == b.strip():
-        return True
-    try:
-        factor, offset = units.factor_offset(a, b)
-    except ValueError:
-        return False
-    return abs(factor - 1.0) < 1e-12 and offset == 0.0
 
 
 @dataclass(frozen=True)
@@ -150,7 +140,8 @@ class Case:
         InputError
             If the readings do not fit the case.
         """
-        table = self.read(readings)
+        prepared = self.prepare(readings)
+        table = prepared.table
         left_out = self._excluded(exclude or {})
         values = np.where(table.usable, table.values, np.nan)
         column = {t: i for i, t in enumerate(table.columns)}
@@ -159,7 +150,7 @@ class Case:
         base = self.model.to_base(picked)
         spec = self.parts.spec
         chosen = replace(spec.settings, **settings) if settings else spec.settings
-        adjusted = adjust_table(self.problem(chosen), base, names=self.name_of_column, row_names=self.name_of_row)
+        adjusted = adjust_prepared(self, prepared, base, chosen)
         self._refuse_contradictions(adjusted)
         labels = tuple(table.label(i) for i in range(len(table)))
         result = Result(
@@ -184,6 +175,7 @@ class Case:
                 *rival_notices(adjusted, self.model, labels),
             ),
             provenance=self._provenance(table, chosen, suspects),
+            prepared=prepared,
         )
         return result if suspects == "flag" else decide(result, suspects)
 
@@ -194,63 +186,23 @@ class Case:
         return run_trajectory(self, readings, exclude=exclude)
 
     def read(self, readings: Any = None) -> ReadingsTable:
-        """Read readings and check that their columns fit the meters; see `run`."""
-        from .readings.values import from_values
+        """Read the log as it stands, and check that its columns fit the meters; see `run`."""
+        from .campaign.source import read_log
 
-        if isinstance(readings, ReadingsTable):
-            table = readings
-        elif readings is None or isinstance(readings, (str, Path)):
-            path = self.readings_path() if readings is None else Path(readings)
-            if path is None:
-                raise InputError(
-                    Problem(
-                        "no-readings",
-                        "the case names no readings, and none were given",
-                        "add a line 'readings: readings.csv' to the case, or name the file with --readings",
-                        Location(file=str(self.parts.spec.path)),
-                    )
-                )
-            from .readings.sources import read_readings
+        return read_log(self.parts.spec, readings, self._readers())
 
-            options = self.parts.spec.readings if isinstance(self.parts.spec.readings, dict) else {}
-            given = {k: v for k, v in options.items() if k != "file"}
-            table = read_readings(path, readers=self._readers(), expected=self.tags, **given)
-        else:
-            table = from_values(readings)
-        self._check_columns(table)
-        return table
+    def prepare(self, readings: Any = None) -> Prepared:
+        """Turn the log into snapshots as the case says: windows, counters, levels, laboratory values; see `run`."""
+        from .campaign.prepare import prepare
+        from .campaign.source import plan_of, read_samples
+
+        spec, table = self.parts.spec, self.read(readings)
+        samples = read_samples(spec, table, self._readers())
+        return prepare(plan_of(spec), table, self.tags, lab=samples, file=str(spec.path))
 
     def _readers(self) -> dict[str, Any]:
         """Readers of measured data that plugins offer, by suffix or scheme."""
         return {k: v for _, offered in self.plugins.each("reconcile_sources") for k, v in offered.items()}
-
-    def _check_columns(self, table: ReadingsTable) -> None:
-        problems = Problems(None)
-        for tag in self.tags:
-            if tag not in table.columns:
-                problems.add(
-                    "no-column",
-                    f"meter {tag!r} has no column in the readings",
-                    did_you_mean(tag, [c for c in table.columns if c not in self.tags])
-                    or "add the column, empty where there is no reading",
-                )
-        for tag in table.columns:
-            if tag not in self.tags:
-                problems.add(
-                    "unknown-column",
-                    f"column {tag!r} matches no meter of the case",
-                    did_you_mean(tag, self.tags) or "declare the meter, or remove the column",
-                )
-        for tag, stated in table.units.items():
-            meter = self.parts.spec.meters.get(tag)
-            if meter is not None and not same_unit(stated, meter.unit):
-                problems.add(
-                    "unit-differs",
-                    f"the readings give {tag} in {stated}, the case in {meter.unit}",
-                    "state the unit of the file in the case; the program converts from there",
-                    Location(file=table.sources[0] if table.sources else None, tag=tag),
-                )
-        problems.raise_if_any()
 
     def _excluded(self, exclude: Mapping[str, str]) -> dict[str, str]:
         problems = Problems(str(self.parts.spec.path))
@@ -270,7 +222,11 @@ class Case:
 
     def problem(self, settings: Any = None) -> Snapshot:
         """Return what all snapshots share, as arrays."""
-        return problem_of(self.model, settings or self.parts.spec.settings)
+        problem = problem_of(self.model, settings or self.parts.spec.settings)
+        lower, upper = problem.lower.copy(), problem.upper.copy()
+        for column, (low, high) in limits_of(self.model, self.parts.spec).items():
+            lower[column], upper[column] = low, high
+        return replace(problem, lower=lower, upper=upper)
 
     def name_of_column(self, column: int) -> str:
         """Return the name of a column."""

@@ -201,6 +201,13 @@ class _Pass:
     sigma: Array
     step: _Linearised
 
+    def spread_of_terms(self) -> Array:
+        """Largest spread of a term of each row: the size of a row in which every value is zero, as of what is absent."""
+        spread = np.zeros(self.x.size)
+        spread[self.step.measured] = np.linalg.norm(self.adjuster.cover, axis=1)
+        spread[self.step.free] = np.nan_to_num(np.linalg.norm(self.adjuster.cover_unmeasured, axis=1))
+        return (np.abs(self.jacobian) * spread).max(axis=1, initial=0.0)
+
     def solution(self, steps: int) -> Solution:
         s = self.step
         return Solution(
@@ -273,8 +280,11 @@ def _iterate(step: _Linearised, x: Array, values: Array) -> Solution:
             now = step.at(x, values)
         s = now.sigma[step.present]
         direction = now.target - x
-        closure = np.abs(now.equations.closure(x)) / np.maximum(now.equations.largest_term(x), 1e-300)
         in_sigma = np.abs(direction[measured] / s).max(initial=0.0)
+        terms = now.equations.largest_term(x)
+        if in_sigma < 1e-5:
+            terms = np.maximum(terms, now.spread_of_terms())
+        closure = np.abs(now.equations.closure(x)) / np.maximum(terms, 1e-300)
         relative = np.abs(direction[free]) / np.maximum(np.abs(x[free]), 1e-9)
         settled = in_sigma < 1e-7 and relative[now.adjuster.observable].max(initial=0.0) < 1e-8
         if count > 1 and settled and closure.max(initial=0.0) < 1e-11:
@@ -322,9 +332,12 @@ def _close_unmeasured(equations: Equations, x: Array, free: Ints) -> Array:
     for rows in (np.flatnonzero(~products), *([np.arange(equations.shape[0])] * 5)):
         if not rows.size or not free.size:
             continue
-        with np.errstate(all="ignore"):
-            closure = equations.closure(x)
-            jacobian = equations.jacobian(x)[rows][:, free].toarray()
+        try:
+            with np.errstate(all="ignore"):
+                closure = equations.closure(x)
+                jacobian = equations.jacobian(x)[rows][:, free].toarray()
+        except PluginError:
+            return x
         if not np.all(np.isfinite(closure)) or not np.all(np.isfinite(jacobian)):
             return x
         size = np.maximum(np.abs(x[free]), 1e-3)

@@ -9,7 +9,7 @@ from functools import cached_property
 import numpy as np
 import numpy.typing as npt
 
-from ..errors import SolveError
+from ..errors import PluginError, ReconcileError, SolveError
 from ..system import Equations
 from .answers import solve_and_check
 from .dense import Adjuster
@@ -129,17 +129,17 @@ class Table:
     Attributes
     ----------
     groups : tuple of Group
-    failed : dict of int to SolveError
+    failed : dict of int to ReconcileError
         Snapshots for which no consistent answer was found, and why.
     size : int
         Number of snapshots.
     """
 
     groups: tuple[Group, ...]
-    failed: dict[int, SolveError]
+    failed: Mapping[int, ReconcileError]
     size: int
 
-    def placed(self, rows: Ints, size: int, failed: Mapping[int, SolveError] | None = None) -> Table:
+    def placed(self, rows: Ints, size: int, failed: Mapping[int, ReconcileError] | None = None) -> Table:
         """Return the same snapshots as those rows of a larger table, beside others that were not adjusted."""
         groups = tuple(replace(g, rows=rows[g.rows]) for g in self.groups)
         moved = {int(rows[i]): error for i, error in self.failed.items()}
@@ -192,7 +192,7 @@ def adjust_table(
     for i in range(len(readings)):
         try:
             solution = solve_and_check(replace(problem, readings=readings[i]), names=names, row_names=row_names)
-        except SolveError as error:
+        except (SolveError, PluginError) as error:
             failed[i] = error
             continue
         groups.append(_single(i, solution, problem.columns, np.flatnonzero(~present[i])))
@@ -216,7 +216,7 @@ def _by_sigma(
     kinds, which = np.unique(np.hstack([np.nan_to_num(own, nan=-1.0), more]), axis=0, return_inverse=True)
     which = which.ravel()
     groups: list[Group] = []
-    failed: dict[int, SolveError] = {}
+    failed: dict[int, ReconcileError] = {}
     for kind in range(len(kinds)):
         rows = np.flatnonzero(which == kind)
         part = adjust_table(

@@ -8,7 +8,7 @@ from typing import Literal
 
 import click
 
-from ..errors import InputError, Problem
+from ..errors import InputError, PluginError, Problem, SolveError
 from .common import DONE, FAULTS_FOUND, ascii_only, case_argument, errors_to_exit_codes, plugin_option
 
 __all__ = ["run"]
@@ -70,6 +70,13 @@ def run(
             from ..report.compare import render_comparison
 
             click.echo(render_comparison(loaded.run(readings), result))
+    if len(result.table.failed) == result.size:
+        broken = [e for e in result.table.failed.values() if isinstance(e, PluginError)]
+        raise (
+            broken[0]
+            if broken
+            else SolveError("no snapshot could be solved; nothing is exported", code="nothing-solved")
+        )
     if out is not None:
         files = write(result, out, formats=("csv", "parquet") if parquet else ("csv",))
         click.echo(f"Wrote {len(files)} files to {out}.", err=as_json)
