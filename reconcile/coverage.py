@@ -260,7 +260,7 @@ def _from_readings(case: Case, values: Array) -> Array:
     path = case.readings_path()
     if path is None or not path.is_file():
         return values
-    table = case.read(None)
+    table = case.prepare().table
     out = values.copy()
     base = case.model.to_base(
         np.where(table.usable, table.values, np.nan)[:, [table.columns.index(t) for t in case.tags]]

@@ -252,7 +252,7 @@ def evaluate(name: str, text: str, result: Result, index: int) -> FigureValue:
 
 def _from_raw(figure: Figure, result: Result, index: int, group: object) -> tuple[float, float]:
     """Value and uncertainty from the raw readings, with their full covariance."""
-    model = result.model
+    model = result.model_of(index)
     base = model.to_base(result.readings[index : index + 1])[0]
     direct = {
         r.reads[0][0]: i

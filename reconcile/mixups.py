@@ -135,7 +135,8 @@ def _possible(result: Result, trial: Trial) -> bool:
         meant = (value * reading.factor + reading.offset) / coefficient
         if meant > model.upper[column]:
             return False
-        has_arrow = not np.isfinite(model.upper[column]) and linear[:, [column]].nnz > 0
+        stream = result.spec is None or name.partition(".")[0] in result.spec.streams
+        has_arrow = stream and not np.isfinite(model.upper[column]) and linear[:, [column]].nnz > 0
         if meant < model.lower[column] and not (has_arrow and model.lower[column] == 0.0):
             return False
     return True
@@ -156,7 +157,7 @@ def _by_parity(result: Result, index: int, trials: list[Trial]) -> Array:
 
 
 def _solved(result: Result, index: int, trials: list[Trial]) -> Array:
-    model = result.model
+    model = result.model_of(index)
     if not trials:
         return np.zeros(0)
     rows = np.tile(result.readings[index], (len(trials), 1))

@@ -9,7 +9,7 @@ Such a reading has a row of its own, ``reading - sum(c x) - a * cause = 0``, and
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 
 import numpy as np
@@ -275,6 +275,26 @@ class Model:
         """Full covariance of the readings at these values, shape (k, k), base units; causes left as they are."""
         part = self.shared_part(base)
         return np.diag(self.sigma(base) ** 2) + part @ part.T
+
+    def with_sigmas(self, own: Array, more: Array, closed: Mapping[int, float] | None = None) -> Model:
+        """Return the same model for a snapshot whose meters have other sigmas, or whose line-up closes streams.
+
+        Parameters
+        ----------
+        own : ndarray, shape (number of meters,)
+            Sigmas that replace the law of a meter, in its unit; nan where that holds.
+        more : ndarray, shape (number of meters,)
+            What adds to the law in quadrature.
+        closed : mapping of column to value, optional
+            Columns that are exactly known there.
+        """
+        readings = list(self.readings)
+        for i, s, m in zip(self.meters.tolist(), own, more, strict=True):
+            if np.isfinite(s):
+                readings[i] = replace(readings[i], relative=0.0, absolute=float(s))
+            elif m > 0:
+                readings[i] = replace(readings[i], absolute=float(np.hypot(readings[i].absolute, m)))
+        return replace(self, readings=tuple(readings), fixed={**self.fixed, **(closed or {})})
 
     # ------------------------------------------------------------------ rows
 

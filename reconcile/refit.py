@@ -144,7 +144,7 @@ def grant(result: Result, index: int, alternative: Alternative) -> Granted | Non
     Granted or None
         None where no consistent answer is found.
     """
-    model = result.model
+    model = result.model_of(index)
     names = {f.candidate.name for f in alternative.faults}
     free = {f.candidate.column for f in alternative.faults if f.candidate.column >= 0}
     tags = {f.candidate.name for f in alternative.faults if f.candidate.reading >= 0}
@@ -169,6 +169,7 @@ def grant(result: Result, index: int, alternative: Alternative) -> Granted | Non
     granted = replace(
         result,
         model=opened,
+        prepared=None,
         table=table,
         readings=readings,
         labels=(f"{result.labels[index]} granting {' and '.join(sorted(names))}",),

@@ -19,6 +19,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from .accounts import Alternative
+    from .campaign.prepare import Prepared
     from .case.spec import CaseSpec
     from .diagnose.explain import Explainer
     from .figures import FigureValue
@@ -81,6 +82,8 @@ class Result:
         What has to be said with the result.
     provenance : mapping
         Versions, options and hashes of the inputs.
+    prepared : Prepared or None
+        How the log became these snapshots; None for readings that were solved again under another assumption.
     """
 
     title: str
@@ -97,11 +100,23 @@ class Result:
     cautions: tuple[str, ...] = ()
     notices: tuple[Notice, ...] = ()
     provenance: Mapping[str, Any] = field(default_factory=dict)
+    prepared: Prepared | None = None
     _explainers: dict[tuple[int, int | None], Explainer | None] = field(default_factory=dict, repr=False, compare=False)
+    _models: dict[int, Model] = field(default_factory=dict, repr=False, compare=False)
     _looked_at: dict[int, Snapshot] = field(default_factory=dict, repr=False, compare=False)
     _granted: dict[int, tuple[tuple[Alternative, Granted], ...]] = field(
         default_factory=dict, repr=False, compare=False
     )
+
+    def model_of(self, index: int) -> Model:
+        """Model of one snapshot: its meters with the sigmas that they have there, its line-up."""
+        if self.prepared is None:
+            return self.model
+        if index not in self._models:
+            from .campaign.adjusted import model_of
+
+            self._models[index] = model_of(self.model, self.prepared, index)
+        return self._models[index]
 
     # ------------------------------------------------------------------ arrays
 

@@ -307,7 +307,7 @@ def look(result: Result, index: int) -> Snapshot:
     SolveError
         If no consistent answer was found for this snapshot.
     """
-    model, group, settings = result.model, result.group(index), result.settings
+    model, group, settings = result.model_of(index), result.group(index), result.settings
     parity, shifts, candidates = evidence(result, index)
     x = group.x[int(np.flatnonzero(group.rows == index)[0])]
     test = global_test(parity, settings.level)
@@ -346,7 +346,7 @@ def _accounts(result: Result, index: int, parity: Array, test: GlobalTest) -> Ac
         explainer = result.explainer(index, most)
         if explainer is None:
             return None
-        found = explain(explainer, parity, result.model, result.settings.level)
+        found = explain(explainer, parity, result.model_of(index), result.settings.level)
         more = explainer.max_faults + 1
         stuck = found.conclusion is Conclusion.NOT_FOUND and result.settings.max_faults is None
         if not stuck or more > min(MOST_FAULTS, test.checks - 1):
@@ -378,7 +378,7 @@ def _readings(
     shifts: Array,
     accounts: Accounts | None,
 ) -> tuple[ReadingLine, ...]:
-    model, settings = result.model, result.settings
+    model, settings = result.model_of(index), result.settings
     base = model.to_base(result.readings[index : index + 1])[0]
     absent = set(group.absent.tolist())
     value_at = x[model.columns]
@@ -527,7 +527,7 @@ def _balances(
     rows : ndarray of int
         Balances that can be tested alone: formed from readings only, and not implied by others.
     """
-    model, e = result.model, group.equations
+    model, e = result.model_of(index), group.equations
     base = model.to_base(result.readings[index : index + 1])[0]
     base[group.absent] = np.nan
     raw = np.full(model.size, np.nan)

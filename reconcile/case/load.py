@@ -4,9 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from pathlib import Path as FilePath
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError, Location, Problem, Problems, did_you_mean
+from .calibrations import read_calibrations
 from .models import CaseModel, KnownModel, MeterModel, SettingsModel
 from .places import Places
 from .quantities import Refusal, read_bound, read_quantity, read_span, read_unit
@@ -17,8 +18,12 @@ from .spec import CaseSpec, DomainModels, KnownSpec, MeterSpec, Settings
 from .streams import OptionReader, read_nodes, read_streams
 from .tables import read_table
 from .trajectory import read_trajectory
+from .unfilled import refuse_unfilled
 from .validate import keys_of, validated
 from .yaml_source import read_yaml
+
+if TYPE_CHECKING:
+    from ..campaign.spec import CampaignSpec
 
 __all__ = ["read_case", "read_what_stands"]
 
@@ -81,6 +86,7 @@ def read_what_stands(
             places.where(()),
         )
         problems.raise_if_any()
+    refuse_unfilled(data, places, problems)
     _version(data, places, problems)
     if "reconcile" not in data:
         # Told above in its own words.
@@ -147,6 +153,7 @@ class _CaseReader:
         figures = self._figures()
         readings = self._readings()
         settings = self._settings()
+        campaign = self._campaign(meters, tuple(raw_meters), tuple(raw_streams))
         trajectory = read_trajectory(
             self.data.get("trajectory"), meters, tuple(raw_meters), known, self.places, self.problems
         )
@@ -167,6 +174,7 @@ class _CaseReader:
             readings=readings,
             settings=settings,
             where=self.places.where,
+            campaign=campaign,
             trajectory=trajectory,
         )
 
@@ -280,6 +288,10 @@ class _CaseReader:
         if model is None or reads is None or sigma is None or not span_ok:
             return None
         options = {k: v for k in _METER_OPTIONS if (v := getattr(model, k)) is not None}
+        if "reading" in options:
+            options["reading"] = value["reading"]
+        if value.get("calibrated") is not None:
+            options["calibrated"] = read_calibrations(value["calibrated"], tag, self.places, self.problems)
         return MeterSpec(tag, reads, unit, sigma, span, options)
 
     def _known(self, name: str, value: Any) -> KnownSpec | None:
@@ -352,6 +364,12 @@ class _CaseReader:
             self.places.where(("readings",)),
         )
         return None
+
+    def _campaign(self, meters: Mapping[str, MeterSpec], tags: tuple[str, ...], streams: tuple[str, ...]) -> CampaignSpec:
+        # That room reads quantities with the help of this one, so it is loaded when this one is complete.
+        from ..campaign.read import read_campaign
+
+        return read_campaign(self.data, meters, tags, streams, self.places, self.problems)
 
     def _settings(self) -> Settings:
         value = self.data.get("settings")

@@ -10,6 +10,8 @@ from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, ConfigDict, Field
 
+from ..campaign.options import ReadingModel
+
 __all__ = ["CaseModel", "KnownModel", "MeterModel", "SettingsModel", "SharedErrorModel", "StreamModel"]
 
 Text = Annotated[str, Field(min_length=1)]
@@ -63,7 +65,12 @@ class MeterModel(SigmaModel):
     fault_rate: float | None = Field(
         None, gt=0, lt=1, description="Probability that this meter is at fault before any reading is seen"
     )
-    reading: dict[str, Any] | None = Field(None, description="How its column is read; checked with the readings")
+    calibrated: Any = Field(
+        None,
+        description="Dates on which it was calibrated or exchanged, e.g. [2024-03-01]; its track begins anew there",
+        json_schema_extra={"anyOf": [{"type": "string"}, {"type": "array", "minItems": 1}]},
+    )
+    reading: ReadingModel | None = Field(None, description="How its column is read")
 
 
 class KnownModel(SigmaModel):
@@ -119,6 +126,9 @@ class CaseModel(_Model):
     design: dict[str, Any] | None = Field(None, description="Expected values, for planning before any reading")
     figures: dict[str, Any] | None = Field(None, description="Derived values as formulas of variables")
     readings: Any = Field(None, description="File of the readings, or a block that says how to read it")
+    windows: Any = Field(None, description="How a log is cut into snapshots")
+    lab: Any = Field(None, description="File of laboratory samples, set beside the plant's readings")
+    line_ups: dict[str, Any] | None = Field(None, description="Streams that are closed in some windows, by name")
     trajectory: dict[str, Any] | None = Field(
         None, description="Windows that follow one another, tied by inventories: inventories, read_at, step, ..."
     )

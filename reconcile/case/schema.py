@@ -7,6 +7,7 @@ from typing import Any, Literal
 
 from pydantic import BaseModel
 
+from ..campaign.options import LabModel, LineUpModel, WindowsModel
 from .models import CaseModel, KnownModel, MeterModel, SettingsModel, SharedErrorModel
 from .spec import DomainModels
 
@@ -49,7 +50,10 @@ def json_schema(option_models: Mapping[str, DomainModels] | None = None) -> dict
     top["design"] = _section(top["design"], {"type": ["string", "number"]})
     top["figures"] = _section(top["figures"], {"type": ["string", "number"]})
     top["readings"] = {**top["readings"], "type": ["string", "object", "null"]}
-    top["settings"] = {"description": top["settings"]["description"], "anyOf": [settings, {"type": "null"}]}
+    windows, lab = _model(WindowsModel, definitions), _model(LabModel, definitions)
+    for key, kinds in (("settings", [settings]), ("windows", [windows]), ("lab", [lab, {"type": "string"}])):
+        top[key] = {"description": top[key]["description"], "anyOf": [*kinds, {"type": "null"}]}
+    top["line_ups"] = _section(top["line_ups"], _model(LineUpModel, definitions))
     return {
         "$schema": "https://json-schema.org/draft/2020-12/schema",
         **{k: v for k, v in schema.items() if k not in ("$defs", "title")},

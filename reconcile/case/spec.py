@@ -13,6 +13,7 @@ from ..errors import Location
 if TYPE_CHECKING:
     from pydantic import BaseModel
 
+    from ..campaign.spec import CampaignSpec
     from .trajectory import TrajectorySpec
 
 __all__ = [
@@ -129,7 +130,7 @@ class MeterSpec:
     span : (float, float) or None
         Lower and upper end of its range, in its unit.
     options : mapping
-        ``description``, ``fault_rate`` and ``reading`` where the user gave them.
+        ``description``, ``fault_rate`` and ``reading`` where the user gave them; ``calibrated`` as datetimes.
     """
 
     tag: str
@@ -226,6 +227,8 @@ class CaseSpec:
     settings : Settings
     where : callable
         ``where(path) -> Location``, e.g. of ``("meters", "FT-1", "sigma")``.
+    campaign : CampaignSpec or None
+        How the log becomes snapshots; None where the file was not read that far.
     trajectory : TrajectorySpec or None
         How windows are tied by inventories, where they are.
     """
@@ -244,4 +247,5 @@ class CaseSpec:
     readings: str | dict[str, Any] | None
     settings: Settings
     where: Callable[..., Location]
+    campaign: CampaignSpec | None = None
     trajectory: TrajectorySpec | None = None

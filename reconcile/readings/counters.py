@@ -7,7 +7,7 @@ somebody says which. Nothing is assumed.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -69,6 +69,8 @@ class CounterStep:
         What else it could have been, and what that would have given.
     before, after : float
         The two readings.
+    otherwise : float
+        Amount that the alternative would have given; NaN where it gives none.
     """
 
     row: int
@@ -78,6 +80,7 @@ class CounterStep:
     alternative: str
     before: float
     after: float
+    otherwise: float = np.nan
 
 
 @dataclass(frozen=True)
@@ -251,7 +254,9 @@ def _recovery(work: _Work, steps: list[tuple[int, int]], k: int) -> int | None:
         span = "" if work.seconds is None else f" in {work.seconds[b] - work.seconds[last]:g} s"
         words = f"the step back, {back:.6g}{span}, was not counted; at most {usual:.6g} can have passed"
         name = "drop-and-recover" if drop else "spike"
-        work.log.append(CounterStep(odd, name, amount, float(work.sigmas[b - 1]), words, before, there))
+        # Counted as read, a drop would be a restart and the way back up an amount; a leap up would stand.
+        otherwise = (float(values[b]) if drop else there - before) * rule.pulse
+        work.log.append(CounterStep(odd, name, amount, float(work.sigmas[b - 1]), words, before, there, otherwise))
         return b
     return None
 
@@ -273,20 +278,23 @@ def _one_step(work: _Work, a: int, b: int, tag: str, where: Callable[[int], Loca
         else:
             span = "" if work.seconds is None else f" in {work.seconds[b] - work.seconds[a]:g} s"
             words = f"{rise:.6g}{span}, but max_rate allows {limit:.6g}; counted as read, it would be {rise:.6g}"
-            _leave_open(work, a, b, "too-fast", words)
+            _leave_open(work, a, b, "too-fast", words, rise)
         return
     if rule.modulus is not None:
         wrapped = (rule.modulus - before + after) * rule.pulse
         if before < rule.modulus and 0 <= wrapped <= limit and (wrapped <= 0.5 * rule.modulus * rule.pulse):
             work.amounts[b - 1] = wrapped
             words = f"as a restart it would be at least {after * rule.pulse:.6g}"
-            work.log.append(CounterStep(b, "rollover", wrapped, float(work.sigmas[b - 1]), words, before, after))
+            step = CounterStep(
+                b, "rollover", wrapped, float(work.sigmas[b - 1]), words, before, after, after * rule.pulse
+            )
+            work.log.append(step)
             return
     if rule.restart and after >= 0:
         words = (
             f"at least {after * rule.pulse:.6g} passed; counted as that, the interval would be {after * rule.pulse:.6g}"
         )
-        _leave_open(work, a, b, "restart", words)
+        _leave_open(work, a, b, "restart", words, after * rule.pulse)
         return
     declared = ""
     if rule.modulus is not None:
@@ -304,10 +312,11 @@ def _next_power(value: float) -> str:
     return f"{10 ** max(1, int(np.ceil(np.log10(max(abs(value), 1.0) + 1.0)))):d}"
 
 
-def _leave_open(work: _Work, a: int, b: int, rule: str, alternative: str) -> None:
+def _leave_open(work: _Work, a: int, b: int, rule: str, alternative: str, otherwise: float) -> None:
     work.unknown.append((a, b, rule))
     work.amounts[b - 1] = np.nan
-    work.log.append(CounterStep(b, rule, np.nan, np.nan, alternative, float(work.values[a]), float(work.values[b])))
+    before, after = float(work.values[a]), float(work.values[b])
+    work.log.append(CounterStep(b, rule, np.nan, np.nan, alternative, before, after, otherwise))
 
 
 def _estimate(work: _Work) -> None:
@@ -332,7 +341,7 @@ def _estimate(work: _Work) -> None:
         work.amounts[b - 1], work.sigmas[b - 1] = amount, sigma
         for i, step in enumerate(work.log):
             if step.row == b and step.rule == rule:
-                work.log[i] = CounterStep(b, rule, amount, sigma, step.alternative, step.before, step.after)
+                work.log[i] = replace(step, amount=amount, sigma=sigma)
 
 
 def _length(work: _Work, a: int, b: int) -> float:

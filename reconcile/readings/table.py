@@ -80,6 +80,11 @@ class ReadingsTable:
         Words for cells that are not plainly good; counted from 0. A cell without an entry has the words of its status.
     lower, upper : (N, k) float64, optional
         Interval of censored and saturated cells, NaN elsewhere; None when there is no such cell.
+    sigma : (N, k) float64, optional
+        Standard uncertainty of a cell's own, in the unit of its reading, where the law of its meter does not hold;
+        NaN elsewhere.
+    scatter : (N, k) float64, optional
+        What adds to the meter's law in quadrature (scatter of a mean, an estimated interval); 0 where nothing does.
     units : mapping of str to str
         Unit of a tag as the source wrote it; only the tags for which it did.
     extra : mapping of str to array of length N
@@ -106,6 +111,8 @@ class ReadingsTable:
     reasons: Mapping[tuple[int, int], str] = field(default_factory=dict)
     lower: npt.NDArray[np.float64] | None = None
     upper: npt.NDArray[np.float64] | None = None
+    sigma: npt.NDArray[np.float64] | None = None
+    scatter: npt.NDArray[np.float64] | None = None
     units: Mapping[str, str] = field(default_factory=dict)
     extra: Mapping[str, npt.NDArray[Any]] = field(default_factory=dict)
     echo: tuple[str, ...] = ()
@@ -128,7 +135,7 @@ class ReadingsTable:
                 raise ValueError(f"{name} has {len(entry)} entries for {values.shape[0]} rows")
         object.__setattr__(self, "values", _frozen(values))
         object.__setattr__(self, "status", _frozen(status))
-        for name in ("lower", "upper", "lines", "source_of"):
+        for name in ("lower", "upper", "sigma", "scatter", "lines", "source_of"):
             entry = getattr(self, name)
             if entry is not None:
                 object.__setattr__(self, name, _frozen(np.asarray(entry)))
@@ -233,6 +240,8 @@ class ReadingsTable:
             reasons=reasons,
             lower=None if self.lower is None else self.lower[chosen],
             upper=None if self.upper is None else self.upper[chosen],
+            sigma=None if self.sigma is None else self.sigma[chosen],
+            scatter=None if self.scatter is None else self.scatter[chosen],
             extra={name: column[chosen] for name, column in self.extra.items()},
             source_of=None if self.source_of is None else self.source_of[chosen],
             lines=None if self.lines is None else self.lines[chosen],
@@ -250,6 +259,8 @@ class ReadingsTable:
             reasons={(i, position[j]): words for (i, j), words in self.reasons.items() if j in position},
             lower=None if self.lower is None else self.lower[:, chosen],
             upper=None if self.upper is None else self.upper[:, chosen],
+            sigma=None if self.sigma is None else self.sigma[:, chosen],
+            scatter=None if self.scatter is None else self.scatter[:, chosen],
             units={tag: self.units[tag] for tag in tags if tag in self.units},
         )
 
@@ -263,11 +274,13 @@ class ReadingsTable:
         return pd.DataFrame(self.values, index=index, columns=list(self.columns))
 
 
-def _stack_optional(parts: Sequence[ReadingsTable], name: str) -> npt.NDArray[np.float64] | None:
+def _stack_optional(
+    parts: Sequence[ReadingsTable], name: str, empty: float = np.nan
+) -> npt.NDArray[np.float64] | None:
     arrays = [getattr(p, name) for p in parts]
     if all(a is None for a in arrays):
         return None
-    return np.vstack([np.full(p.values.shape, np.nan) if a is None else a for a, p in zip(arrays, parts, strict=True)])
+    return np.vstack([np.full(p.values.shape, empty) if a is None else a for a, p in zip(arrays, parts, strict=True)])
 
 
 def join_rows(parts: Sequence[ReadingsTable], source_hash: str) -> ReadingsTable:
@@ -313,6 +326,8 @@ def join_rows(parts: Sequence[ReadingsTable], source_hash: str) -> ReadingsTable
         reasons=reasons,
         lower=_stack_optional(parts, "lower"),
         upper=_stack_optional(parts, "upper"),
+        sigma=_stack_optional(parts, "sigma"),
+        scatter=_stack_optional(parts, "scatter", 0.0),
         units=units,
         extra={name: np.concatenate([p.extra[name] for p in parts]) for name in shared},
         echo=tuple(line for p in parts for line in p.echo),

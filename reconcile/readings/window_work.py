@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Mapping
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
@@ -33,6 +34,7 @@ class WindowWork:
         self.values = np.full(shape, np.nan)
         self.sigma = np.full(shape, np.nan)
         self.effective = np.full(shape, np.nan)
+        self.guessed = np.zeros(shape)
         self.status = np.full(shape, int(Status.MISSING), dtype=np.int8)
         self.lower = np.full(shape, np.nan)
         self.upper = np.full(shape, np.nan)
@@ -120,9 +122,10 @@ class WindowWork:
         if not np.isfinite(amount):
             self.reasons[w, j] = "what the counter missed cannot be estimated"
             return
-        scale = self._per(a, last)
+        scale = self._per(tag, a, last)
         self.values[w, j], self.sigma[w, j] = amount * scale, sigma * scale
         estimated = bool(found.estimated[a:last].any())
+        self.guessed[w, j] = scale * float(np.linalg.norm(found.sigmas[a:last][found.estimated[a:last]]))
         self.status[w, j] = int(Status.ESTIMATED if estimated else Status.GOOD)
         if estimated:
             self.reasons[w, j] = "an interval of the counter is estimated from its neighbours"
@@ -135,14 +138,15 @@ class WindowWork:
         x = self.table.values[[a, last], j]
         sigma = self.rules.level_sigma.get(tag, 0.0)
         change, s = inventory_change(float(x[0]), float(x[1]), self.rules.levels[tag], sigma)
-        scale = self._per(a, last)
+        scale = self._per(tag, a, last)
         self.values[w, j], self.sigma[w, j] = change * scale, s * scale
         self.status[w, j] = int(Status.GOOD)
 
-    def _per(self, a: int, last: int) -> float:
-        if self.rules.per is None or self.seconds is None:
+    def _per(self, tag: str, a: int, last: int) -> float:
+        per = self.rules.per.get(tag) if isinstance(self.rules.per, Mapping) else self.rules.per
+        if per is None or self.seconds is None:
             return 1.0
-        return float(self.rules.per / (self.seconds[last] - self.seconds[a]))
+        return float(per / (self.seconds[last] - self.seconds[a]))
 
     # ---------------------------------------------------------------- judgement
 
@@ -155,7 +159,7 @@ class WindowWork:
         if state == "mixed":
             self._leave(w, "switched", "the plant was switched on or off in it")
             return
-        if self.rules.column is None and b - a < 0.5 * self.usual_rows:
+        if self.rules.column is None and self.rules.spans is None and b - a < 0.5 * self.usual_rows:
             self._leave(w, "short", f"only {b - a} rows of the usual {self.usual_rows:g}")
             return
         for tag in self.rules.required:
@@ -250,8 +254,9 @@ class WindowWork:
             source_of=None if self.table.source_of is None else self.table.source_of[first],
         )
         return Windows(
-            table, used, self.sigma, self.effective, self.bounds, tuple(self.left_out), tuple(self.zeros), segments
-        )
+            table, used, self.sigma, self.effective, self.bounds, tuple(self.left_out), tuple(self.zeros), segments,
+            self.guessed, {tag: found.log for tag, found in self.counters.items()},
+        )  # fmt: skip
 
     def _middle(self) -> Any:
         time = self.table.time

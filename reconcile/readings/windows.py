@@ -8,8 +8,8 @@ from dataclasses import dataclass, field
 import numpy as np
 import numpy.typing as npt
 
-from ..errors import InputError, Problem, did_you_mean
-from .counters import CounterRule
+from ..errors import InputError, Problem, Problems, did_you_mean
+from .counters import CounterRule, CounterStep
 from .levels import LevelTable
 from .table import ReadingsTable
 from .time_order import seconds_of
@@ -29,14 +29,16 @@ class WindowRules:
     count : int, optional
         Rows a window.
     column : str, optional
-        Kept column whose value names the window. Exactly one of the three is needed.
+        Kept column whose value names the window.
+    spans : sequence of (name, start, end), optional
+        Stamps of each window; its end is not part of it. Exactly one of the four is needed.
     counters : mapping of tag to CounterRule
         These become differences, not means.
     levels : mapping of tag to LevelTable
         These become changes of what the tank holds.
     level_sigma : mapping of tag to float
         Standard uncertainty of one reading of a level.
-    per : float, optional
+    per : float or mapping of tag to float, optional
         Seconds of the unit of time in which differences are given as rates (3600: per hour); None: amounts.
     steady : sequence of str, optional
         Tags that must be steady; None: all that are averaged.
@@ -61,10 +63,11 @@ class WindowRules:
     duration: float | None = None
     count: int | None = None
     column: str | None = None
+    spans: Sequence[tuple[str, str, str]] | None = None
     counters: Mapping[str, CounterRule] = field(default_factory=dict)
     levels: Mapping[str, LevelTable] = field(default_factory=dict)
     level_sigma: Mapping[str, float] = field(default_factory=dict)
-    per: float | None = None
+    per: float | Mapping[str, float] | None = None
     steady: Sequence[str] | None = None
     slope_level: float | None = 0.001
     r_level: float | None = None
@@ -118,6 +121,10 @@ class Windows:
     zero_checks : tuple of ZeroCheck
     segments : mapping of tag to (W,) int64
         Number of recalibrations before the window; windows of different segments are not one series.
+    guessed : (W, k) float64
+        The part of `sigma` that comes from intervals of a counter that were estimated; 0 elsewhere.
+    counter_steps : mapping of tag to tuple of CounterStep
+        Every decision about a counter.
     """
 
     table: ReadingsTable
@@ -128,6 +135,8 @@ class Windows:
     left_out: tuple[LeftOut, ...] = ()
     zero_checks: tuple[ZeroCheck, ...] = ()
     segments: Mapping[str, npt.NDArray[np.int64]] = field(default_factory=dict)
+    guessed: npt.NDArray[np.float64] = field(default_factory=lambda: np.zeros((0, 0)))
+    counter_steps: Mapping[str, tuple[CounterStep, ...]] = field(default_factory=dict)
 
     def kept(self) -> ReadingsTable:
         """Return the table of the windows that are used."""
@@ -178,13 +187,13 @@ def make_windows(table: ReadingsTable, rules: WindowRules, *, running: npt.NDArr
 
 
 def _check(table: ReadingsTable, rules: WindowRules) -> None:
-    ways = [n for n in ("duration", "count", "column") if getattr(rules, n) is not None]
+    ways = [n for n in ("duration", "count", "column", "spans") if getattr(rules, n) is not None]
     if len(ways) != 1:
-        words = f"windows are cut by duration, by count or by a column; {' and '.join(ways) or 'none'} given"
+        words = f"windows are cut by duration, by count, by a column or by spans; {' and '.join(ways) or 'none'} given"
         raise InputError(Problem("window-rule", words, "give exactly one"))
     if (rules.duration is not None and not rules.duration > 0) or (rules.count is not None and not rules.count > 0):
         raise InputError(Problem("window-rule", "a window must be longer than nothing", "give a positive number"))
-    if rules.duration is not None and table.time is None:
+    if (rules.duration is not None or rules.spans is not None) and table.time is None:
         words = "windows of a duration need stamps, and the rows have none"
         raise InputError(Problem("time-missing", words, "add a column of stamps, or cut by count"))
     if rules.column is not None and rules.column not in table.extra:
@@ -217,8 +226,10 @@ def _cut(table: ReadingsTable, rules: WindowRules) -> tuple[npt.NDArray[np.int64
         edges = np.append(np.arange(0, n, rules.count), n)
         return np.column_stack([edges[:-1], edges[1:]]), [str(i + 1) for i in range(edges.size - 1)]
     assert table.time is not None
-    assert rules.duration is not None
     seconds = seconds_of(table.time)
+    if rules.spans is not None:
+        return _spans(table, rules.spans, seconds)
+    assert rules.duration is not None
     # Round times of the user's own clock, where the duration divides the day.
     clock = table.time.tz_localize(None) if table.time.tz is not None else table.time
     origin = seconds[0] if n else 0.0
@@ -228,3 +239,33 @@ def _cut(table: ReadingsTable, rules: WindowRules) -> tuple[npt.NDArray[np.int64
     starts = np.flatnonzero(np.diff(number, prepend=number[0] - 1 if n else 0))
     edges = np.append(starts, n)
     return np.column_stack([edges[:-1], edges[1:]]), [str(table.time[i]) for i in starts.tolist()]
+
+
+def _spans(
+    table: ReadingsTable, spans: Sequence[tuple[str, str, str]], seconds: npt.NDArray[np.float64]
+) -> tuple[npt.NDArray[np.int64], list[str]]:
+    import pandas as pd
+
+    assert table.time is not None
+    problems = Problems(table.sources[0] if table.sources else None)
+    bounds = []
+    for name, *ends in spans:
+        stamps = []
+        for text in ends:
+            try:
+                stamp = pd.Timestamp(text)
+            except ValueError:
+                problems.add("stamp-unreadable", f"window {name}: {text!r} is no stamp", "write e.g. 2025-05-01 14:00")
+                continue
+            if (stamp.tzinfo is None) != (table.time.tz is None):
+                stamp = stamp.tz_localize(table.time.tz) if stamp.tzinfo is None else stamp.tz_localize(None)
+            stamps.append(stamp)
+        if len(stamps) < 2:
+            continue
+        first, last = np.searchsorted(seconds, seconds_of(pd.DatetimeIndex(stamps)) - 1e-6)
+        if last <= first:
+            words = f"window {name} ({ends[0]} to {ends[1]}) holds no row; the record runs {table.time[0]} to {table.time[-1]}"
+            problems.add("window-empty", words, "correct start and end")
+        bounds.append((int(first), int(last)))
+    problems.raise_if_any()
+    return np.array(bounds, dtype=np.int64), [name for name, _, _ in spans]

@@ -1,0 +1,78 @@
+"""Snapshots meet the balances: each with the sigmas of its own cells, its line-up, and without those left out."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from ..adjust.table import Table, adjust_table
+from ..errors import SolveError
+
+if TYPE_CHECKING:
+    from ..model import Model
+    from ..run import Case
+    from .prepare import Prepared
+
+__all__ = ["LEFT_OUT", "adjust_prepared", "model_of"]
+
+LEFT_OUT = "left-out"
+"""Code of a snapshot that was never to be solved."""
+
+Array = npt.NDArray[np.float64]
+
+
+def adjust_prepared(case: Case, prepared: Prepared, base: Array, settings: Any) -> Table:
+    """Adjust the snapshots that balances are made of.
+
+    Parameters
+    ----------
+    case : Case
+    prepared : Prepared
+    base : ndarray, shape (N, number of readings)
+        Readings in base units; nan where absent.
+    settings : object
+
+    Returns
+    -------
+    Table
+        Of all N snapshots; those left out are among the failed ones, with code `LEFT_OUT`.
+    """
+    rows = np.flatnonzero(prepared.used)
+    own, more = _of_all_readings(case.model, prepared)
+    table = adjust_table(
+        case.problem(settings),
+        base[rows],
+        names=case.name_of_column,
+        row_names=case.name_of_row,
+        sigmas=None if own is None else own[rows],
+        scatter=None if more is None else more[rows],
+    )
+    left = {i: SolveError(entry.reason, code=LEFT_OUT) for i, entry in prepared.left_out.items()}
+    return table.placed(rows, len(base), left)
+
+
+def _of_all_readings(model: Model, prepared: Prepared) -> tuple[Array | None, Array | None]:
+    """Sigmas of single cells over all readings of the model, base units; None where there are none."""
+    out: list[Array | None] = []
+    scale = np.abs(model.factor[model.meters])
+    for part, empty in ((prepared.table.sigma, np.nan), (prepared.table.scatter, 0.0)):
+        if part is None or not np.any(np.nan_to_num(part)):
+            out.append(None)
+            continue
+        whole = np.full((len(part), len(model.readings)), empty)
+        whole[:, model.meters] = part * scale
+        out.append(whole)
+    return out[0], out[1]
+
+
+def model_of(model: Model, prepared: Prepared, index: int, closed: Mapping[int, float] | None = None) -> Model:
+    """Model of one snapshot, with the sigmas of its cells and the streams that its line-up closes."""
+    count = len(model.meters)
+    own = np.full(count, np.nan) if prepared.table.sigma is None else prepared.table.sigma[index]
+    more = np.zeros(count) if prepared.table.scatter is None else np.nan_to_num(prepared.table.scatter[index])
+    if not np.isfinite(own).any() and not more.any() and not closed:
+        return model
+    return model.with_sigmas(own, more, closed)
