@@ -61,11 +61,14 @@ class Scatter:
         Sum of the outer products.
     signatures : ndarray, shape (r, k)
         Of one sigma of each reading.
+    snapshots : int
+        Number of vectors that went in.
     """
 
     count: int
     moment: Array
     signatures: Array
+    snapshots: int
 
 
 @dataclass(frozen=True)
@@ -88,6 +91,8 @@ class Audit:
         Factor on the sigma if it is the only one that is wrong, and its interval; nan where it cannot be audited.
     share : ndarray
         Share checked, averaged over the vectors.
+    seen : ndarray of int
+        Vectors that check the reading at all.
     limit : float
         For the largest gain, for the number of readings with any check (Bonferroni).
     best : int
@@ -109,6 +114,7 @@ class Audit:
     factor_low: Array
     factor_high: Array
     share: Array
+    seen: Ints
     limit: float
     best: int
     alike: tuple[tuple[int, ...], ...]
@@ -150,14 +156,14 @@ def scatter(parity: Array, signatures: Array, sigma: Array, *, about: str = "zer
     t = np.asarray(parity, dtype=float)
     own = signatures * sigma
     if about == "zero":
-        return Scatter(len(t), t.T @ t, own)
+        return Scatter(len(t), t.T @ t, own, len(t))
     if about == "mean":
         t = t - t.mean(axis=0) if len(t) else t
-        return Scatter(max(len(t) - 1, 0), t.T @ t, own)
+        return Scatter(max(len(t) - 1, 0), t.T @ t, own, len(t))
     if about == "pairs":
         even = len(t) // 2 * 2
         d = (t[1:even:2] - t[0:even:2]) / np.sqrt(2.0)
-        return Scatter(len(d), d.T @ d, own)
+        return Scatter(len(d), d.T @ d, own, len(t))
     raise Refusal("about-unknown", f"scatter is taken about zero, mean or pairs, not {about!r}")
 
 
@@ -195,7 +201,7 @@ def audit(parts: Sequence[Scatter], *, level: float = 0.05) -> Audit:
     squares = np.array([np.einsum("ri,rs,si->i", p.signatures, p.moment, p.signatures) for p in used])
     mean_share = counts @ share / counts.sum()
     count = int(counts.sum())
-    seen = counts @ (share > 0)
+    seen = np.array([p.snapshots for p in used]) @ (share > 0)
     can = (mean_share > 0) & (seen >= LEAST_SNAPSHOTS)
     alike = _alike(used, np.flatnonzero(can))
     for members in alike:
@@ -225,6 +231,7 @@ def audit(parts: Sequence[Scatter], *, level: float = 0.05) -> Audit:
         factor_low=lowest,
         factor_high=highest,
         share=np.clip(mean_share, 0.0, 1.0),
+        seen=seen.astype(np.int64),
         limit=limit,
         best=int(np.nanargmax(gain)) if np.isfinite(gain).any() else -1,
         alike=alike,

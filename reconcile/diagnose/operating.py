@@ -1,4 +1,4 @@
-"""One fault, several operating points: is it constant, or does it grow with the reading?
+"""One fault at several operating points: constant, or growing with the reading.
 
 A leak, an unmetered steady user and a zero offset are the same at every flow; an error of scale is proportional to the
 true value. Over snapshots each is one column of the stacked evidence, ``t_s = f_s b`` or ``t_s = f_s g v_s`` with the value

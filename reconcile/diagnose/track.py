@@ -1,4 +1,4 @@
-"""Track of a fault over snapshots in order: when did it begin, and does it grow?
+"""Track of a fault over snapshots in order: when it began, and whether it grows.
 
 The evidence for a fault in snapshot s is its score ``z_s = f_s't_s`` with information ``w_s = |f_s|^2``: without a fault
 ``z_s ~ N(0, w_s)``, with one of size b ``z_s ~ N(w_s b, w_s)``. A snapshot that does not check the fault has w = 0 and says

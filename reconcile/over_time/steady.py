@@ -1,0 +1,131 @@
+"""Faults that are the same in all snapshots: the pooled evidence, explained like that of one snapshot."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from ..accounts import Accounts, explain, explainer_of
+from ..diagnose.critical import smallest_detectable
+from .sequence import Sequence
+
+__all__ = ["Steady", "SteadyFault", "Stretch", "steady_of", "stretches_of"]
+
+LEAST_IN_A_STRETCH = 10
+MOST_STRETCHES = 6
+
+
+@dataclass(frozen=True)
+class SteadyFault:
+    """A fault taken alone, as steady over all snapshots; in the unit of its size.
+
+    Attributes
+    ----------
+    name, kind, item, unit : str
+    size, sigma, z : float
+    smallest : float
+        Smallest steady size that the pool notices at the level and power of the case.
+    sigmas : float
+        `size` in sigmas of the reading; nan for faults that are no readings.
+    """
+
+    name: str
+    kind: str
+    item: str
+    unit: str
+    size: float
+    sigma: float
+    z: float
+    smallest: float
+    sigmas: float
+
+
+@dataclass(frozen=True)
+class Stretch:
+    """Some consecutive snapshots pooled."""
+
+    first: str
+    last: str
+    count: int
+    objective: float
+    checks: int
+    limit: float
+    p: float
+
+
+@dataclass(frozen=True)
+class Steady:
+    """Pooled evidence.
+
+    Attributes
+    ----------
+    count : int
+        Snapshots with a check.
+    objective, limit, p : float
+        Square of the pooled parity vector, its limit at the level of the case, and its p-value.
+    checks : int
+    contrast, contrast_p : float
+        What snapshots with different readings absent say against each other that no steady fault accounts for.
+    contrast_checks : int
+    faults : tuple of SteadyFault
+        Every candidate that is checked.
+    accounts : Accounts or None
+        Explanations of the pool; None where it agrees.
+    """
+
+    count: int
+    objective: float
+    checks: int
+    limit: float
+    p: float
+    contrast: float
+    contrast_checks: int
+    contrast_p: float
+    faults: tuple[SteadyFault, ...]
+    accounts: Accounts | None
+
+    @property
+    def agrees(self) -> bool:
+        """Whether no steady fault shows."""
+        return not self.objective > self.limit
+
+
+def steady_of(sequence: Sequence) -> Steady:
+    """Pool all snapshots and explain what the pool says."""
+    result, pool = sequence.result, sequence.pooled
+    settings, model = result.settings, result.model
+    largest = sequence.parts[0].group.sigma
+    faults = []
+    for i, c in enumerate(model.candidates):
+        if not sequence.checked[i]:
+            continue
+        size, sigma = float(pool.size[i]), float(pool.sigma[i])
+        own = abs(size * c.scale) / float(largest[c.reading]) if c.reading >= 0 else float("nan")
+        faults.append(
+            SteadyFault(
+                c.name, c.kind, c.item, c.unit, size, sigma, size / sigma,
+                smallest_detectable(1.0 / sigma, settings.level, settings.power), own,
+            )
+        )  # fmt: skip
+    accounts = None
+    if pool.objective > pool.limit:
+        explainer = explainer_of(model, pool.signatures, settings, result.spec)
+        accounts = None if explainer is None else explain(explainer, pool.parity, model, settings.level)
+    return Steady(
+        pool.count, pool.objective, pool.checks, pool.limit, pool.p,
+        pool.contrast, pool.contrast_checks, pool.contrast_p, tuple(faults), accounts,
+    )  # fmt: skip
+
+
+def stretches_of(sequence: Sequence) -> tuple[Stretch, ...]:
+    """Pool consecutive snapshots in up to six stretches of at least ten; none where there are fewer than twenty."""
+    n = sequence.count
+    wanted = min(MOST_STRETCHES, n // LEAST_IN_A_STRETCH)
+    if wanted < 2:
+        return ()
+    out = []
+    for j in range(wanted):
+        first, last = (int(sequence.rows[k]) for k in (j * n // wanted, (j + 1) * n // wanted - 1))
+        pool = sequence.pool(first, last + 1)
+        labels = sequence.result.labels
+        out.append(Stretch(labels[first], labels[last], pool.count, pool.objective, pool.checks, pool.limit, pool.p))
+    return tuple(out)
