@@ -10,6 +10,7 @@ from ._version import __version__
 from .commands.look import check, domains, schema
 from .commands.plan import coverage, place, rehearse
 from .commands.run import run
+from .commands.start import start
 
 __all__ = ["main"]
 
@@ -28,5 +29,5 @@ def main() -> None:
             stream.reconfigure(errors="replace")
 
 
-for command in (run, check, coverage, place, rehearse, domains, schema):
+for command in (run, check, coverage, place, rehearse, domains, schema, start):
     main.add_command(command)

@@ -399,7 +399,7 @@ def _lengths(table: ReadingsTable, tied: TrajectorySpec, spec: CaseSpec) -> tupl
                 f"the stamp of row {i + 2} is not after that of row {i + 1}",
                 "sort the readings",
                 Location(file=table.sources[0] if table.sources else None, row=i + 2),
-            )  # fmt: skip
+            )
         )
     typical = float(np.median(gaps)) if gaps.size else 1.0
     lengths = np.concatenate([[typical], gaps]) if tied.at_end else np.concatenate([gaps, [typical]])
@@ -428,7 +428,7 @@ def _chain(model: Model, tied: TrajectorySpec, spec: CaseSpec, picked: Array, le
                 f"{', '.join(problems)} is stated as exactly known, in every window",
                 "state it with a sigma, or read it",
                 spec.where(("known", problems[0])),
-            )  # fmt: skip
+            )
         )
     rates = [system.column(i.rate) for i in tied.inventories.values()]
     per_second = [change_factor(i, system.unit(c)) for i, c in zip(tied.inventories.values(), rates, strict=True)]
