@@ -137,10 +137,11 @@ def _differs(stand: Stand, other: Stand, bench: Bench) -> list[str]:
     for kind, a, b in (
         ("variables", stand.system.names(), other.system.names()),
         ("balances", stand.system.row_names(), other.system.row_names()),
+        ("constants", _constants(stand), _constants(other)),
     ):
         if set(a) != set(b):
             odd = sorted(set(a) ^ set(b))
-            return [f"the {kind} depend on the order of streams, nodes or meters: {', '.join(odd[:4])}"]
+            return [f"the order of streams, nodes or meters changes the {kind}: {', '.join(odd[:4])}"]
     x = stand.near(bench.rng())
     own = {stand.system.row_names()[i]: i for i in stand.own_indices()}
     there = {n: i for i, n in enumerate(other.system.row_names())}
@@ -152,6 +153,10 @@ def _differs(stand: Stand, other: Stand, bench: Bench) -> list[str]:
         names = [list(own)[i] for i in wrong[:3]]
         return [f"the order of streams, nodes or meters changes balance {', '.join(names)}"]
     return same_outcome(stand, other, bench, "the order of streams, nodes or meters")
+
+
+def _constants(stand: Stand) -> list[str]:
+    return [f"{stand.system.name(c)} = {value:.12g}" for c, value in stand.system.fixed.items()]
 
 
 def _relative(stand: Stand, x: np.ndarray) -> np.ndarray:
@@ -180,7 +185,7 @@ def same_outcome(
     two = other.case.run({t: values[t] * (units or {}).get(t, 1.0) for t in other.case.tags})
     for result in (one, two):
         if result.table.failed:
-            return [str(result.table.failed[0])]
+            return [f"{what}: {result.table.failed[0]}"]
     out = []
     if abs(one.objective[0] - two.objective[0]) > 1e-9 * max(1.0, one.objective[0]):
         out.append(f"{what} changes chi-squared from {one.objective[0]:.12g} to {two.objective[0]:.12g}")

@@ -6,6 +6,7 @@ import itertools
 from collections.abc import Iterator
 
 import numpy as np
+import numpy.typing as npt
 
 from ..adjust.eliminate import dependent_rows
 from ..errors import ReconcileError, did_you_mean
@@ -14,6 +15,8 @@ from .bench import Bench, Check, Stand
 from .state import convert
 
 __all__ = ["CHECKS"]
+
+Array = npt.NDArray[np.float64]
 
 EXACT = 1e-12
 SLOPES = 1e-6
@@ -90,11 +93,25 @@ def _rebuilt(stand: Stand, change: dict[str, object], bench: Bench) -> list[str]
                 out.append(f"balance {name!r} with {told}: {problem}")
                 continue
             if abs(two[there] - factor * one[rows.start + k]) > REBUILT * size[there]:
+                odd = _odd_terms(stand, other, rows.start + k, there, factor, x, y)
                 out.append(
                     f"balance {name!r} mixes units: with {told} it is {two[there]:.6g} instead of "
-                    f"{factor * one[rows.start + k]:.6g} {other.system.rows_of(there).unit}"
+                    f"{factor * one[rows.start + k]:.6g} {other.system.rows_of(there).unit}; look at {odd}"
                 )
     return out[:SHOWN]
+
+
+def _odd_terms(stand: Stand, other: Stand, row: int, there: int, factor: float, x: Array, y: Array) -> str:
+    """Variables whose share of a balance does not follow the units."""
+    before = stand.equations.jacobian(x)[[row]].toarray()[0]
+    after = other.equations.jacobian(y)[[there]].toarray()[0]
+    share = []
+    for c, name in enumerate(stand.system.names()):
+        column = other.system.column(name)
+        told = after[column] * difference_factor(stand.system.unit(c), other.system.unit(column))
+        share.append(abs(told - factor * before[c]) * max(abs(x[c]), 1e-300))
+    odd = np.flatnonzero(np.array(share) > 1e-6 * max(share))
+    return ", ".join(stand.system.name(int(c)) for c in odd[:SHOWN])
 
 
 # ------------------------------------------------------------------ signs
