@@ -7,6 +7,7 @@ import sys
 import click
 
 from ._version import __version__
+from .commands.history import history
 from .commands.look import check, domains, schema
 from .commands.plan import coverage, place, rehearse
 from .commands.run import run
@@ -29,5 +30,5 @@ def main() -> None:
             stream.reconfigure(errors="replace")
 
 
-for command in (run, check, coverage, place, rehearse, domains, schema, start):
+for command in (run, check, coverage, place, rehearse, history, domains, schema, start):
     main.add_command(command)

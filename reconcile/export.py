@@ -248,6 +248,7 @@ def summary_of(result: Result) -> dict[str, Any]:
         "notices": [{"code": n.code, "message": n.message} for n in result.notices],
         "settings": _settings(result),
         "provenance": dict(result.provenance),
+        **({"history": result.history.to_dict()} if result.history.enough else {}),
     }
 
 

@@ -29,6 +29,7 @@ LEAST_FOR_A_SECTION = 20
 """From so many snapshots with checks on, the text of a run says what they say together."""
 
 LOSSES: tuple[Loss, ...] = ("huber", "welsch", "hampel")
+MANY = 20_000
 
 
 class History:
@@ -55,6 +56,21 @@ class History:
     def labels(self) -> tuple[str, ...]:
         """Names of all snapshots."""
         return self.result.labels
+
+    @property
+    def enough(self) -> bool:
+        """Whether there are so many snapshots with checks that a run says what they tell together."""
+        return self.count >= LEAST_FOR_A_SECTION
+
+    @property
+    def losses(self) -> tuple[Loss, ...]:
+        """Robust losses that are reported: of very many snapshots only Huber's, which is quickest."""
+        return LOSSES if self.count <= MANY else LOSSES[:1]
+
+    @property
+    def timed(self) -> bool:
+        """Whether the snapshots have times, so that calibration dates can be placed."""
+        return self._sequence.times is not None
 
     @cached_property
     def steady(self) -> Steady:
@@ -124,7 +140,7 @@ class History:
             "one_sided": [{**plain_data(o), "structural": o.structural} for o in self.one_sided],
             "drifts": [self._drift(d) for d in self.drifts],
             "sigmas": plain_data(self.audit),
-            "second_opinion": {loss: self._opinion(loss) for loss in LOSSES},
+            "second_opinion": {loss: self._opinion(loss) for loss in self.losses},
         }
 
     def _drift(self, d: Drift) -> dict[str, Any]:

@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from .case.spec import CaseSpec
     from .diagnose.explain import Explainer
     from .figures import FigureValue
+    from .history import History
     from .refit import Decision, Granted
     from .snapshot import Snapshot
 
@@ -280,6 +281,13 @@ class Result:
         decision = self.decisions.get(index)
         source, row = (self, index) if decision is None else (decision.granted.result, 0)
         return tuple(evaluate(name, text, source, row) for name, text in self.figures.items())
+
+    @cached_property
+    def history(self) -> History:
+        """What all snapshots say together."""
+        from .history import History
+
+        return History(self)
 
     def to_frame(self) -> pd.DataFrame:
         """One tidy table: a row per snapshot and reading, and per variable that is not read.

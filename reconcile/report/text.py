@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 from ..mixups import mixups_of
 from ..refit import figures_if
+from .history import history_section
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
 from .words import (
@@ -53,6 +54,7 @@ def render(result: Result, *, snapshot: int | None = None, ascii_only: bool = Fa
         shown, why = _shown_of_many(result)
         if shown is not None:
             parts += ["", f"{why}, {result.labels[shown]}:", "", *_detail(result, shown)]
+        parts += history_section(result.history) if result.history.enough else []
     else:
         index = snapshot or 0
         if index in result.table.failed:
