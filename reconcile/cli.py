@@ -9,6 +9,7 @@ import click
 from ._version import __version__
 from .commands.history import history
 from .commands.look import check, domains, schema
+from .commands.new_domain import check_domain, new_domain
 from .commands.plan import coverage, place, rehearse
 from .commands.run import run
 from .commands.start import start
@@ -30,5 +31,5 @@ def main() -> None:
             stream.reconfigure(errors="replace")
 
 
-for command in (run, check, coverage, place, rehearse, history, domains, schema, start):
+for command in (run, check, coverage, place, rehearse, history, domains, schema, start, new_domain, check_domain):
     main.add_command(command)

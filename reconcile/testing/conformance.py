@@ -8,13 +8,14 @@ from pathlib import Path
 from types import ModuleType
 from typing import Literal
 
+from ..domains import Plugins, load_plugins
 from ..errors import InputError, Problem, ReconcileError
 from ..hookspecs import Domain
 from . import building, of_balances, of_results, on_paper
 from .bench import Bench, Check, NotJudged
 from .trial import host, read_trial
 
-__all__ = ["CHECKS", "Conformance", "Finding", "check_domain", "prepare"]
+__all__ = ["CHECKS", "Conformance", "Finding", "check_domain", "conformance_of_files", "prepare"]
 
 Outcome = Literal["passes", "fails", "not judged"]
 
@@ -145,7 +146,19 @@ def prepare(
     runs: int = 2000,
 ) -> Bench:
     """Load a domain and its trials; see `check_domain`."""
-    plugins = host(domain, plugin)
+    return _bench(domain, trials, host(domain, plugin), seed, runs)
+
+
+def conformance_of_files(
+    trials: Sequence[str | Path], plugins: Sequence[str | Path] = (), *, seed: int = 1, runs: int = 2000
+) -> Conformance:
+    """Put the domain that conformance files name on trial; `plugins` are files to load beside the installed ones."""
+    loaded = load_plugins(plugins)
+    name = read_trial(trials[0], loaded).domain
+    return Conformance(_bench(type(loaded.domain(name)), trials, loaded, seed, runs))
+
+
+def _bench(domain: type[Domain], trials: Sequence[str | Path], plugins: Plugins, seed: int, runs: int) -> Bench:
     read = tuple(read_trial(t, plugins) for t in trials)
     if not read:
         raise InputError(Problem("no-trial", "a domain is put on trial with at least one conformance file"))
