@@ -60,19 +60,25 @@ def bound_notices(table: Table, model: Model, spec: CaseSpec) -> list[Notice]:
             for word, beyond in (("below", x[x < low - slack]), ("above", x[x > high + slack])):
                 if beyond.size:
                     counts.setdefault((column, word), []).extend(beyond.tolist())
-    out = []
-    for (column, word), values in counts.items():
-        bound = limits[column][0 if word == "below" else 1]
-        worst = min(values) if word == "below" else max(values)
-        many = f" in {len(values)} snapshots" if table.size > 1 else ""
-        out.append(
-            Notice(
-                "bound-violated",
-                f"{model.names[column]} comes out {word} its bound of {bound:g} {model.units[column]}{many} "
-                f"(worst {worst:.6g}). Reverse flow, zero offset, or a fault? The value is exported as it came out.",
-            )
+    return [
+        bound_notice(
+            model, spec, column, word, len(values), min(values) if word == "below" else max(values), table.size
         )
-    return out
+        for (column, word), values in counts.items()
+    ]
+
+
+def bound_notice(
+    model: Model, spec: CaseSpec, column: int, word: str, count: int, worst: float, snapshots: int
+) -> Notice:
+    """Words for a column that comes out `word` (below or above) its bound in `count` of so many snapshots."""
+    bound = limits_of(model, spec)[column][0 if word == "below" else 1]
+    many = f" in {count} snapshots" if snapshots > 1 else ""
+    return Notice(
+        "bound-violated",
+        f"{model.names[column]} comes out {word} its bound of {bound:g} {model.units[column]}{many} "
+        f"(worst {worst:.6g}). Reverse flow, zero offset, or a fault? The value is exported as it came out.",
+    )
 
 
 def refuse_conflicts(model: Model, spec: CaseSpec, problems: Problems) -> None:

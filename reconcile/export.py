@@ -25,13 +25,17 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from .results import Result
+    from .trajectory import Trajectory
 
 __all__ = ["Corrected", "load_corrected", "summary_of", "write"]
 
 Array = npt.NDArray[np.float64]
 
 MISSING = ""
-_KINDS = {"b": "boolean", "i": "integer", "u": "integer", "f": "number"}
+EVIDENCE_COLUMNS = (
+    "snapshot", "objective", "checks", "limit", "p_value", "word", "explanation", "probability", "decision", "reason",
+)  # fmt: skip
+KINDS = {"b": "boolean", "i": "integer", "u": "integer", "f": "number"}
 
 
 # ------------------------------------------------------------------ tables
@@ -39,6 +43,8 @@ _KINDS = {"b": "boolean", "i": "integer", "u": "integer", "f": "number"}
 
 def tables(result: Result) -> dict[str, pd.DataFrame]:
     """Every table of the data set by its file stem, in the order of the description."""
+    from .campaign.tables import campaign_tables
+
     return {
         "adjusted": _values(result, result.adjusted),
         "sigmas": _values(result, result.sigmas),
@@ -47,6 +53,7 @@ def tables(result: Result) -> dict[str, pd.DataFrame]:
         "suspects": _suspects(result),
         "balances": _balances(result),
         "figures": _figures(result),
+        **campaign_tables(result),
     }
 
 
@@ -76,11 +83,13 @@ def _variables(result: Result) -> pd.DataFrame:
 def _evidence(result: Result) -> pd.DataFrame:
     import pandas as pd
 
+    from .report.campaign import why_not
+
     rows = []
     for i in range(result.size):
         if i in result.table.failed:
             rows.append(
-                (result.labels[i], np.nan, 0, np.nan, np.nan, "not solved", "", np.nan, "", str(result.table.failed[i]))
+                (result.labels[i], np.nan, 0, np.nan, np.nan, why_not(result, i), "", np.nan, "", result.table.failed[i].message)
             )
             continue
         named, probability = most_likely(result, i)
@@ -98,10 +107,7 @@ def _evidence(result: Result) -> pd.DataFrame:
                 "" if result.checks[i] else "no check possible",
             )
         )
-    columns = [
-        "snapshot", "objective", "checks", "limit", "p_value", "word", "explanation", "probability", "decision", "reason",
-    ]  # fmt: skip
-    return pd.DataFrame(rows, columns=columns)
+    return pd.DataFrame(rows, columns=list(EVIDENCE_COLUMNS))
 
 
 def decision_of(result: Result, index: int) -> str:
@@ -208,13 +214,14 @@ def summary_of(result: Result) -> dict[str, Any]:
     dict
         verdict, snapshots, suspects, not_checked, versions and hashes.
     """
+    from .report.campaign import why_not
     from .report.words import suspects_of, verdict_line
 
     per_snapshot: list[dict[str, Any]] = []
     for i in range(result.size):
         if i in result.table.failed:
             per_snapshot.append(
-                {"snapshot": result.labels[i], "status": "not solved", "reason": str(result.table.failed[i])}
+                {"snapshot": result.labels[i], "status": why_not(result, i), "reason": result.table.failed[i].message}
             )
             continue
         named, probability = most_likely(result, i)
@@ -264,16 +271,51 @@ def _number(value: float) -> float | None:
 # ------------------------------------------------------------------ files
 
 
-def write(result: Result, folder: str | Path, *, formats: tuple[str, ...] = ("csv",)) -> list[Path]:
+@dataclass(frozen=True)
+class Package:
+    """What a corrected data set holds, whatever it came from.
+
+    Attributes
+    ----------
+    title : str
+    tables : mapping of file stem to DataFrame
+    units : mapping of variable to unit
+        For the columns of `adjusted` and `sigmas`.
+    covariance : mapping of str to array
+        ``variables``, ``group_of_snapshot`` and ``factor_0``, ``factor_1``, ...
+    summary, provenance : mapping
+    """
+
+    title: str
+    tables: Mapping[str, pd.DataFrame]
+    units: Mapping[str, str]
+    covariance: Mapping[str, npt.NDArray[Any]]
+    summary: Mapping[str, Any]
+    provenance: Mapping[str, Any]
+
+
+def package_of(result: Result | Trajectory) -> Package:
+    """What `write` writes of a result."""
+    from .trajectory import Trajectory
+
+    if isinstance(result, Trajectory):
+        from .export_trajectory import package_of_trajectory
+
+        return package_of_trajectory(result)
+    units = dict(zip(result.variables, result.units, strict=True))
+    return Package(result.title, tables(result), units, _covariance(result), summary_of(result), result.provenance)
+
+
+def write(result: Result | Trajectory, folder: str | Path, *, formats: tuple[str, ...] = ("csv",)) -> list[Path]:
     """Write the corrected data set.
 
     Parameters
     ----------
-    result : Result
+    result : Result or Trajectory
     folder : path
         Made if it is not there; files of the same names are replaced, others are left alone.
     formats : tuple of str
-        ``csv`` and, where asked, ``parquet``.
+        ``csv`` and, where asked, ``parquet`` and ``xlsx`` (one workbook for people, a sheet a table).
 
     Returns
     -------
@@ -285,14 +327,14 @@ def write(result: Result, folder: str | Path, *, formats: tuple[str, ...] = ("cs
     InputError
         If the folder cannot be written; nothing half-written is left.
     """
-    target = Path(folder)
+    target, package = Path(folder), package_of(result)
     try:
         target.mkdir(parents=True, exist_ok=True)
         part = Path(tempfile.mkdtemp(prefix=".unfinished-", dir=target))
     except OSError as error:
         raise InputError(_cannot_write(target, error)) from None
     try:
-        names = _write_all(result, part, formats)
+        names = _write_all(package, part, formats)
         for name in names:
             os.replace(part / name, target / name)
         return [target / name for name in names]
@@ -310,30 +352,42 @@ def _cannot_write(target: Path, error: OSError) -> Problem:
     )
 
 
-def _write_all(result: Result, part: Path, formats: tuple[str, ...]) -> list[str]:
+def _write_all(content: Package, part: Path, formats: tuple[str, ...]) -> list[str]:
     made: list[str] = []
     resources = []
-    for stem, frame in tables(result).items():
-        for kind in formats:
+    for stem, frame in content.tables.items():
+        for kind in (f for f in formats if f != "xlsx"):
             name = f"{stem}.{kind}"
-            _WRITERS[kind](frame, part / name)
+            WRITERS[kind](frame, part / name)
             made.append(name)
-            resources.append(_resource(stem, name, frame, part / name, result))
-    _write_covariance(result, part / "covariance.npz")
-    (part / "summary.json").write_text(json.dumps(summary_of(result), indent=2, ensure_ascii=False) + "\n", "utf-8")
-    for name in ("covariance.npz", "summary.json"):
+            resources.append(_resource(stem, name, frame, part / name, content.units))
+    with (part / "covariance.npz").open("wb") as file:
+        np.savez(file, **dict(content.covariance))
+    (part / "summary.json").write_text(json.dumps(content.summary, indent=2, ensure_ascii=False) + "\n", "utf-8")
+    others = ["covariance.npz", "summary.json"]
+    if "xlsx" in formats:
+        from .export_workbook import write_workbook
+
+        write_workbook(content.tables, part / "corrected.xlsx")
+        others.append("corrected.xlsx")
+    for name in others:
         made.append(name)
         resources.append({"name": Path(name).stem, "path": name, **_fingerprint(part / name)})
-    package = {
-        "$schema": "https://datapackage.org/profiles/2.0/datapackage.json",
-        "name": "reconciled-readings",
-        "title": result.title,
-        "resources": resources,
-        "provenance": dict(result.provenance),
-    }
+    package = description(content.title, resources, dict(content.provenance))
     (part / "datapackage.json").write_text(json.dumps(package, indent=2, ensure_ascii=False) + "\n", "utf-8")
     made.append("datapackage.json")
     return made
+
+
+def description(title: str, resources: list[dict[str, Any]], provenance: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the description of a data set by the open standard for table packages."""
+    return {
+        "$schema": "https://datapackage.org/profiles/2.0/datapackage.json",
+        "name": "reconciled-readings",
+        "title": title,
+        "resources": resources,
+        "provenance": dict(provenance),
+    }
 
 
 def _write_csv(frame: pd.DataFrame, path: Path) -> None:
@@ -349,7 +403,7 @@ def _write_parquet(frame: pd.DataFrame, path: Path) -> None:
         raise MissingExtra("pyarrow", "parquet", "writing Parquet") from None
 
 
-_WRITERS: Mapping[str, Callable[[Any, Path], None]] = {"csv": _write_csv, "parquet": _write_parquet}
+WRITERS: Mapping[str, Callable[[Any, Path], None]] = {"csv": _write_csv, "parquet": _write_parquet}
 
 
 def _fingerprint(path: Path) -> dict[str, Any]:
@@ -357,11 +411,11 @@ def _fingerprint(path: Path) -> dict[str, Any]:
     return {"bytes": len(data), "hash": f"sha256:{hashlib.sha256(data).hexdigest()}"}
 
 
-def _resource(stem: str, name: str, frame: pd.DataFrame, path: Path, result: Result) -> dict[str, Any]:
-    units = dict(zip(result.variables, result.units, strict=True)) if stem in ("adjusted", "sigmas") else {}
+def _resource(stem: str, name: str, frame: pd.DataFrame, path: Path, known: Mapping[str, str]) -> dict[str, Any]:
+    units = known if stem in ("adjusted", "sigmas") else {}
     fields = []
     for column in frame.columns:
-        entry: dict[str, Any] = {"name": column, "type": _KINDS.get(frame[column].dtype.kind, "string")}
+        entry: dict[str, Any] = {"name": column, "type": KINDS.get(frame[column].dtype.kind, "string")}
         if column in units:
             entry["unit"] = units[column]
         fields.append(entry)
@@ -376,7 +430,7 @@ def _resource(stem: str, name: str, frame: pd.DataFrame, path: Path, result: Res
     }
 
 
-def _write_covariance(result: Result, path: Path) -> None:
+def _covariance(result: Result) -> dict[str, Any]:
     """Covariance of the adjusted variables, one for each group of snapshots that share it."""
     shown = result.model.shown
     groups = list(result.table.groups)
@@ -390,8 +444,7 @@ def _write_covariance(result: Result, path: Path) -> None:
     }
     for g, group in enumerate(groups):
         arrays[f"factor_{g}"] = group.cover[shown]
-    with path.open("wb") as file:
-        np.savez(file, **arrays)
+    return arrays
 
 
 # ------------------------------------------------------------------ reading it back
@@ -405,6 +458,8 @@ class Corrected:
     ----------
     adjusted, sigmas, variables, evidence, suspects, balances, figures : DataFrame
     summary : dict
+    readings, log, intervals : DataFrame or None
+        Of a data set that comes from a log: every cell with its status, every decision, every interval.
     """
 
     adjusted: pd.DataFrame
@@ -418,12 +473,21 @@ class Corrected:
     _names: tuple[str, ...]
     _factors: tuple[Array, ...]
     _group_of: npt.NDArray[np.int64]
+    readings: pd.DataFrame | None = None
+    log: pd.DataFrame | None = None
+    intervals: pd.DataFrame | None = None
 
     def covariance(self, snapshot: int = 0) -> pd.DataFrame:
         """Full covariance of the variables of one snapshot, with names."""
         import pandas as pd
 
         group = int(self._group_of[snapshot])
+        if group == -2:
+            raise SolveError(
+                f"the covariance of snapshot {snapshot} was not kept: too few snapshots have its pattern of absent readings",
+                code="covariance-not-kept",
+                hint="run it on its own",
+            )
         if group < 0:
             raise SolveError(f"snapshot {snapshot} was not adjusted", code="not-adjusted")
         factor = self._factors[group]
@@ -495,6 +559,11 @@ def load_corrected(folder: str | Path) -> Corrected:
         stem: pd.read_csv(base / f"{stem}.csv", dtype={"snapshot": str}, **exact)
         for stem in ("adjusted", "sigmas", "variables", "evidence", "suspects", "balances", "figures")
     }
+    as_text = {"snapshot": str, "start": str, "end": str, "input": str, "case": str}
+    there = {r["path"] for r in package["resources"]}
+    for stem in ("readings", "log", "intervals"):
+        if f"{stem}.csv" in there:
+            read[stem] = pd.read_csv(base / f"{stem}.csv", dtype=as_text, **exact)
     with np.load(base / "covariance.npz") as arrays:
         names = tuple(str(n) for n in arrays["variables"])
         group_of = arrays["group_of_snapshot"]

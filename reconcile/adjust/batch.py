@@ -56,7 +56,7 @@ class BatchResult:
     objective : ndarray, shape (N,)
     checks : ndarray of int, shape (N,)
     suspect : ndarray of int, shape (N,)
-        Reading with the largest \\|z\\| among those tested, the first of a tie; -1 where none is checked.
+        Reading with the largest |z| among those tested, the first of a tie; -1 where none is checked.
     largest : ndarray, shape (N,)
         Its z, with sign; nan where none is checked.
     z : ndarray, shape (q, N), or None
@@ -298,6 +298,30 @@ class Batch:
         if z is not None:
             z[self.tested_of] = np.where((scale > 0).T[:, which], scaled, np.nan)
 
+    def _without(self, absent: Bools) -> Adjuster:
+        gone = np.asarray(absent, dtype=bool)[self.present]
+        return self.adjuster.without(gone) if gone.any() else self.adjuster
+
+    def cover(self, absent: Bools) -> Array:
+        """Factor F of the covariance of the columns asked for, shape (v, q): cov = F F'; nan rows are not known.
+
+        Parameters
+        ----------
+        absent : ndarray of bool, shape (k,)
+            Readings that are not there.
+        """
+        a = self._without(absent)
+        out = self._of_shown(a.cover, a.cover_unmeasured)
+        out[np.isnan(self._sigmas(a))] = np.nan
+        return out
+
+    def signatures(self, absent: Bools) -> Array:
+        """Parity shift per unit bias of the readings tested, shape (r, q); zero for absent and unchecked ones."""
+        a = self._without(absent)
+        out = np.zeros((a.checks, self.tests))
+        out[:, self.tested_of] = np.where(a.redundant[self.tested_rows], a.signatures[:, self.tested_rows], 0.0)
+        return out
+
     # ------------------------------------------------------------------ absent readings
 
     def _patterns(self, gone: Bools) -> tuple[_Patterns, Ints]:
@@ -405,7 +429,9 @@ class Batch:
             own = self.adjuster.q1[index].T / self.adjuster.sigma[index]
             left = np.linalg.norm(a.q1 @ a.turn, axis=1)
             scale = np.where(a.redundant, 1.0 / np.where(left > 0, left, 1.0), 0.0)
-            found = _Exact(np.linalg.pinv(own, rcond=1e-9), a.checks, scale, self._sigmas(a))
+            found = _Exact(
+                np.asarray(np.linalg.pinv(own, rcond=1e-9), dtype=np.float64), a.checks, scale, self._sigmas(a)
+            )
             if len(self._remembered) >= REMEMBERED:
                 self._remembered.clear()
             self._remembered[key] = found

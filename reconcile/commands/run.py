@@ -4,12 +4,15 @@ from __future__ import annotations
 
 import json
 from pathlib import Path
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
 import click
 
 from ..errors import InputError, PluginError, Problem, SolveError
 from .common import DONE, FAULTS_FOUND, ascii_only, case_argument, errors_to_exit_codes, plugin_option
+
+if TYPE_CHECKING:
+    from ..run import Case
 
 __all__ = ["run"]
 
@@ -20,6 +23,7 @@ __all__ = ["run"]
 @click.option("--readings", type=click.Path(path_type=Path), help="Readings, instead of those the case names.")
 @click.option("--out", type=click.Path(path_type=Path), help="Write the corrected data set into this folder.")
 @click.option("--parquet", is_flag=True, help="Write the tables of --out as Parquet, too.")
+@click.option("--xlsx", is_flag=True, help="Write the tables of --out as one workbook for people, too.")
 @click.option("--exclude", multiple=True, metavar="TAG", help="Leave a meter out; needs --because, one for each.")
 @click.option("--because", multiple=True, metavar="TEXT", help="Why the meter is left out; stands in the result.")
 @click.option(
@@ -32,6 +36,9 @@ __all__ = ["run"]
 @click.option("--strict", is_flag=True, help="Exit with 1 when readings disagree.")
 @click.option("--json", "as_json", is_flag=True, help="Print the summary as JSON.")
 @click.option("--snapshot", type=int, help="Print this snapshot in detail, counted from 1.")
+@click.option("--jobs", type=click.IntRange(1), default=1, help="Pieces of a long log worked on at the same time.")
+@click.option("--chunk", type=click.IntRange(1), metavar="ROWS", help="Work through the log in pieces of so many rows.")
+@click.option("--restart", is_flag=True, help="Throw away the parts that an interrupted run left in --out.")
 @errors_to_exit_codes
 def run(
     case: Path,
@@ -39,14 +46,22 @@ def run(
     readings: Path | None,
     out: Path | None,
     parquet: bool,
+    xlsx: bool,
     exclude: tuple[str, ...],
     because: tuple[str, ...],
     suspects: Literal["flag", "exclude", "compensate"],
     strict: bool,
     as_json: bool,
     snapshot: int | None,
+    jobs: int,
+    chunk: int | None,
+    restart: bool,
 ) -> int:
-    """Adjust the readings of CASE, test them, explain what disagrees."""
+    """Adjust the readings of CASE, test them, explain what disagrees.
+
+    A log of 200,000 rows or more is worked through in pieces if --out is given: memory stays bounded, and the same
+    command continues a run that was interrupted.
+    """
     from ..export import write
     from ..report.text import render
     from ..run import load_case
@@ -61,6 +76,26 @@ def run(
         )
     loaded = load_case(case, plugins=plugins)
     reasons = dict(zip(exclude, because, strict=True))
+    formats = ("csv", *(["parquet"] if parquet else []), *(["xlsx"] if xlsx else []))
+    if loaded.parts.spec.trajectory is not None:
+        return _follow(loaded, readings, out, reasons, formats, strict=strict, as_json=as_json)
+    if out is not None and suspects == "flag" and snapshot is None and "xlsx" not in formats:
+        from .in_pieces import run_in_pieces
+
+        code = run_in_pieces(
+            loaded,
+            readings,
+            out,
+            reasons,
+            formats,
+            jobs=jobs,
+            chunk=chunk,
+            restart=restart,
+            strict=strict,
+            as_json=as_json,
+        )
+        if code is not None:
+            return code
     result = loaded.run(readings, exclude=reasons, suspects=suspects)
     if as_json:
         click.echo(json.dumps(result.to_dict(), indent=2, ensure_ascii=False))
@@ -78,6 +113,31 @@ def run(
             else SolveError("no snapshot could be solved; nothing is exported", code="nothing-solved")
         )
     if out is not None:
-        files = write(result, out, formats=("csv", "parquet") if parquet else ("csv",))
+        files = write(result, out, formats=formats)
         click.echo(f"Wrote {len(files)} files to {out}.", err=as_json)
     return FAULTS_FOUND if strict and result.suspicious.any() else DONE
+
+
+def _follow(
+    loaded: Case,
+    readings: Path | None,
+    out: Path | None,
+    reasons: dict[str, str],
+    formats: tuple[str, ...],
+    *,
+    strict: bool,
+    as_json: bool,
+) -> int:
+    """Run a case whose windows are tied by inventories, as one sequence."""
+    from ..export import write
+    from ..report.trajectory import render_trajectory
+
+    found = loaded.run_trajectory(readings, exclude=reasons)
+    if as_json:
+        click.echo(json.dumps(found.to_dict(), indent=2, ensure_ascii=False))
+    else:
+        click.echo(render_trajectory(found, ascii_only=ascii_only()), nl=False)
+    if out is not None:
+        files = write(found, out, formats=formats)
+        click.echo(f"Wrote {len(files)} files to {out}.", err=as_json)
+    return FAULTS_FOUND if strict and found.test.status == "disagrees" else DONE

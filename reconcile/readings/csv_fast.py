@@ -20,7 +20,7 @@ from .options import ReadOptions
 __all__ = ["read_fast"]
 
 _SAMPLE = 2000
-_BLANK_WORDS = ("", "NA", "N/A", "n/a", "NaN", "nan", "NAN", "null", "NULL", "None", "none", "-", "\u2013", "\u2014")
+BLANK_WORDS = ("", "NA", "N/A", "n/a", "NaN", "nan", "NAN", "null", "NULL", "None", "none", "-", "\u2013", "\u2014")
 
 
 def read_fast(decoded: Decoded, delimiter: str, name: str, options: ReadOptions) -> RawTable | None:
@@ -61,7 +61,7 @@ def read_fast(decoded: Decoded, delimiter: str, name: str, options: ReadOptions)
     if marks.conflict or marks.undecided or marks.three_digits or marks.thousands:
         return None
     rows = text.count("\n") + (not text.endswith("\n")) - skip
-    blanks = [*_BLANK_WORDS, *(b for b in options.blanks if b.casefold() not in BLANKS)]
+    blanks = [*BLANK_WORDS, *(b for b in options.blanks if b.casefold() not in BLANKS)]
     parsed = _parse(text, delimiter, header, numeric, skip, marks.decimal, blanks)
     if parsed is None or any(len(c) != rows for c in parsed):
         return None
