@@ -188,7 +188,7 @@ class Adjuster:
     @property
     def undetermined(self) -> Bools:
         """Measured variables that an absent reading leaves undetermined, shape (n,)."""
-        return np.any(np.abs(self.drift) > 1e-7 * self.sigma[:, None], axis=1)
+        return np.any(self.drift != 0, axis=1)
 
     @cached_property
     def observable(self) -> Bools:
@@ -231,7 +231,8 @@ class Adjuster:
         # Directions of bias that no check sees leave everything that depends on them undetermined.
         lost = u[:, rank:] / np.where(seen, norm, 1.0)[:, None]
         lost /= np.linalg.norm(lost, axis=0)
-        drift = self.sigma[:, None] * (self.q2 @ (self.q2[index].T @ lost))
+        drift = np.zeros((self.sigma.size, lost.shape[1]))
+        drift[index] = self.sigma[index, None] * np.where(np.abs(lost) > 1e-7, lost, 0.0)
         left = np.linalg.norm(self.q1 @ turn, axis=1) ** 2
         whole = np.linalg.norm(self.q1, axis=1) ** 2
         redundant = self.redundant & (left > 1e-10 * whole)
@@ -284,7 +285,7 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
         through, form = exact.apply(a_m)
         transform = exact.apply(np.eye(len(a_m)))[1]
         form = cleaned(form, pivots)
-        whole = np.abs(through).max(axis=1, initial=0.0, keepdims=True)
+        whole = np.maximum(np.abs(through).max(axis=1, initial=0.0, keepdims=True), 1.0)
 
         def sharp(rhs: Array) -> tuple[Array, Array]:
             offset, target = exact.apply((rows * rhs)[:, None])
@@ -292,7 +293,7 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
 
     else:
         through = elimination.recover @ a_m
-        whole = np.abs(through).max(axis=1, initial=0.0, keepdims=True)
+        whole = (np.abs(elimination.recover) @ np.abs(a_m)).max(axis=1, initial=0.0, keepdims=True)
         through = through - through[:, pivots] @ form
     through[np.abs(through) < 1e-14 * whole] = 0.0
     redundant = np.any(form != 0, axis=0)

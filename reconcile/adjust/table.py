@@ -75,9 +75,10 @@ class Group:
     def cover(self) -> Array:
         """Factor F of the covariance of all columns, shape (n, q): cov = F F'; nan rows cannot be calculated."""
         a = self.adjuster
-        out = np.zeros((self.x.shape[1], a.cover.shape[1]))
-        out[self.columns[self.present]] = a.cover
-        out[self.free] = a.cover_unmeasured
+        # One column at least, so that nan has a place even where the balances force every determined value.
+        out = np.zeros((self.x.shape[1], max(a.cover.shape[1], 1)))
+        out[self.columns[self.present], : a.cover.shape[1]] = a.cover
+        out[self.free, : a.cover.shape[1]] = a.cover_unmeasured
         out[~self.determined] = np.nan
         return out
 
