@@ -111,6 +111,13 @@ class Prepared:
         out[list(self.left_out)] = False
         return out
 
+    @property
+    def estimated(self) -> tuple[tuple[int, int], ...]:
+        """Cells (snapshot, column) that count as readings although nobody read them; intervals are not among them."""
+        entered = {(c.snapshot, self.table.index(c.tag)) for c in self.intervals}
+        cells = zip(*np.nonzero(self.table.status == Status.ESTIMATED), strict=True)
+        return tuple((int(i), int(j)) for i, j in cells if (int(i), int(j)) not in entered)
+
 
 def prepare(
     spec: CampaignSpec,
@@ -275,12 +282,18 @@ class _Preparation:
         found = [d for d in find_derived(some) if self.spec.of(d.tag).calculated is None]
         if not found:
             return
-        self.table = mark_derived(self.table, found)
+        # A copy or a sum would pass for a check of the balances. What is proportional, or a product, may read another
+        # quantity of the same source (two rates from one dilution): told, and used.
+        false_checks = [d for d in found if d.kind in ("copy", "sum")]
+        self.table = mark_derived(self.table, false_checks)
         for d in found:
-            words = d.notice.message.replace(
-                "declare it as calculated, or leave it out",
-                f"not used. Write calculated: false under reading: of {d.tag} if an instrument reads it",
+            way = (
+                f"It adds no check, and is not used; write calculated: false under reading: of {d.tag} if an instrument "
+                "reads it"
+                if d in false_checks
+                else f"If so, it adds no check: write calculated: true under reading: of {d.tag}, or false to keep this quiet"
             )
+            words = d.notice.message.replace("It adds no check; declare it as calculated, or leave it out", way)
             self._add(replace(d.notice, message=words))
 
     # ---------------------------------------------------------------- snapshots

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 from ..mixups import mixups_of
 from ..refit import figures_if
+from .campaign import from_the_log, grouped_notices, why_not
 from .history import history_section
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
@@ -58,9 +59,10 @@ def render(result: Result, *, snapshot: int | None = None, ascii_only: bool = Fa
     else:
         index = snapshot or 0
         if index in result.table.failed:
-            parts.append(wrap(f"Not solved: {result.table.failed[index]}", ""))
+            parts.append(wrap(f"{why_not(result, index).capitalize()}: {result.table.failed[index].message}", ""))
         else:
             parts += _detail(result, index)
+    parts += from_the_log(result, snapshot)
     parts += _closing(result)
     text = "\n".join(parts).rstrip() + "\n"
     return to_ascii(text) if ascii_only else text
@@ -79,7 +81,7 @@ def _many(result: Result) -> str:
     rows = []
     for i in range(result.size):
         if i in result.table.failed:
-            rows.append((result.labels[i], "", "", "", "", "not solved"))
+            rows.append((result.labels[i], "", "", "", "", why_not(result, i)))
             continue
         word = result.words[i]
         rows.append(
@@ -250,7 +252,7 @@ def _closing(result: Result) -> list[str]:
     if result.decisions:
         out += ["", "DECIDED", *(wrap(f"{result.labels[i]}: {d.words}") for i, d in result.decisions.items())]
     if result.notices:
-        out += ["", "NOTICES", *(wrap(str(n)) for n in result.notices)]
+        out += ["", "NOTICES", *(wrap(line) for line in grouped_notices(result.notices))]
     for caution in result.cautions:
         out += ["", wrap(f"Caution: {caution}", "")]
     return out
