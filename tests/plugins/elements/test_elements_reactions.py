@@ -1,10 +1,7 @@
 """Degrees of reduction, balanced and independent reactions: published figures and exact algebra."""
 
-import gzip
-import importlib.util
 from fractions import Fraction
 from math import gcd
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -263,35 +260,3 @@ def test_rounded_coefficients_need_a_stated_tolerance():
     with pytest.raises(Refusal, match="not balanced"):
         require_balanced(rounded, FERMENTATION)
     require_balanced(rounded, FERMENTATION, tolerance=1e-3)
-
-
-def test_core_metabolism_matrix():
-    """The E. coli core model of Orth, Fleming & Palsson (2010): 72 rows of which 67 are independent."""
-    found = importlib.util.find_spec("cobra")
-    if found is None or found.origin is None:
-        pytest.skip("needs the model file in package cobra, which wants pandas 2; see the oracles extra")
-    from xml.etree import ElementTree
-
-    ns = {"s": "http://www.sbml.org/sbml/level3/version1/core"}
-    fbc = "{http://www.sbml.org/sbml/level3/version1/fbc/version2}"
-    path = Path(found.origin).parent / "data" / "textbook.xml.gz"
-    model = ElementTree.fromstring(gzip.decompress(path.read_bytes())).find("s:model", ns)
-    table = {}
-    for node in model.findall(".//s:species", ns):
-        charge = int(node.get(f"{fbc}charge"))
-        table[node.get("id")] = parse_formula(node.get(f"{fbc}chemicalFormula") + (f"{charge:+d}" if charge else ""))
-    reactions = {}
-    for node in model.findall(".//s:reaction", ns):
-        net = {}
-        for side, sign in (("Reactants", -1), ("Products", 1)):
-            for part in node.findall(f"s:listOf{side}/s:speciesReference", ns):
-                net[part.get("species")] = net.get(part.get("species"), 0) + sign * Fraction(part.get("stoichiometry"))
-        reactions[node.get("id")] = net
-    assert (len(table), len(reactions)) == (72, 95)
-    assert sum(len(r) == 1 for r in reactions.values()) == 20
-    stoichiometry = [[r.get(s, Fraction(0)) for r in reactions.values()] for s in table]
-    assert rank(stoichiometry) == 67
-    inner = {name: r for name, r in reactions.items() if len(r) > 1}
-    unbalanced = [name for name, r in inner.items() if imbalance(r, table)]
-    assert len(unbalanced) == 1
-    assert "iomass" in unbalanced[0]
