@@ -12,13 +12,14 @@ import numpy as np
 
 from .accounts import Accounts
 from .adjust.robust import Loss
-from .over_time.levels import FlowLevels, levels_of
+from .diagnose.lookalike import PARALLEL
+from .over_time.levels import FlowLevels, levels_of, without_scale
 from .over_time.one_sided import OneSided, one_sided_of
 from .over_time.second_opinion import SecondOpinion, second_opinion_of
 from .over_time.sequence import Sequence
 from .over_time.sigmas import About, SigmaAudit, audit_of
 from .over_time.steady import Steady, Stretch, steady_of, stretches_of
-from .over_time.tracks import Drift, Track, drifts_of, tracks_of
+from .over_time.tracks import Drift, Track, TrackStretch, drifts_of, tracks_of, watched
 
 if TYPE_CHECKING:
     from .results import Result
@@ -100,23 +101,44 @@ class History:
     @cached_property
     def drifts(self) -> tuple[Drift, ...]:
         """Changes that were found, the clearest first."""
-        return drifts_of(self._sequence, self.tracks)
+        return drifts_of(self._sequence, self.tracks, self.levels.gain)
+
+    @cached_property
+    def watch(self) -> tuple[Track, TrackStretch] | None:
+        """Clearest of the tracks that alarmed without a change beyond chance, where no change was found."""
+        if self.drifts or self.levels.outcome in ("constant", "scale", "either"):
+            return None
+        found = watched(self._sequence, self.tracks)
+        if found is None or found[1].alarm is None or self.labels[found[1].alarm] == self.steady.single:
+            return None
+        return found
 
     @cached_property
     def audit(self) -> SigmaAudit:
-        """Whether the sigmas are what the readings scatter by, steady and growing faults taken out."""
+        """Whether the sigmas are what the readings scatter by, steady and growing faults taken out.
+
+        Nothing is named while a balance is off to one side in every record: what is missing there scatters, too.
+        """
         about: About = "zero"
-        if any(not d.stretch.from_the_start for d in self.drifts):
+        if self.drifts:
             about = "pairs" if self._sequence.one_linearisation else "mean"
         elif not self.steady.agrees:
             about = "mean"
-        return audit_of(self._sequence, about)
+        found = audit_of(without_scale(self._sequence, self.levels), about)
+        if any(o.structural for o in self.one_sided):
+            return dataclasses.replace(found, status="structural", named=(), together=())
+        return found
 
     def second_opinion(self, loss: Loss = "huber") -> SecondOpinion:
         """Return a robust estimate of all snapshots: ``huber``, ``welsch`` or ``hampel``."""
         if loss not in self._opinions:
             self._opinions[loss] = second_opinion_of(self._sequence, loss)
         return self._opinions[loss]
+
+    def alike(self, track: Track) -> tuple[Track, ...]:
+        """Other tracks with a parallel signature: no reading here tells them apart."""
+        cosine = np.abs(self._sequence.cosine[track.candidate])
+        return tuple(t for t in self.tracks if t.candidate != track.candidate and cosine[t.candidate] >= 1 - PARALLEL)
 
     def track(self, name: str) -> Track:
         """Track of a fault by its name."""
@@ -139,16 +161,19 @@ class History:
             "levels": plain_data(self.levels),
             "one_sided": [{**plain_data(o), "structural": o.structural} for o in self.one_sided],
             "drifts": [self._drift(d) for d in self.drifts],
+            "watch": None if self.watch is None else self._change(*self.watch),
             "sigmas": plain_data(self.audit),
             "second_opinion": {loss: self._opinion(loss) for loss in self.losses},
         }
 
     def _drift(self, d: Drift) -> dict[str, Any]:
-        s = d.stretch
+        return {**self._change(d.track, d.stretch), "rivals": plain_data(d.rivals)}
+
+    def _change(self, track: Track, s: TrackStretch) -> dict[str, Any]:
         return {
-            "fault": d.track.name,
-            "kind": d.track.kind,
-            "unit": d.track.unit,
+            "fault": track.name,
+            "kind": track.kind,
+            "unit": track.unit,
             **plain_data(s),
             "first": self.labels[s.first],
             "last": self.labels[s.last],
@@ -158,7 +183,6 @@ class History:
             "earliest": self.labels[s.earliest],
             "latest": self.labels[s.latest],
             "from_the_start": s.from_the_start,
-            "rivals": plain_data(d.rivals),
         }
 
     def _opinion(self, loss: Loss) -> dict[str, Any]:

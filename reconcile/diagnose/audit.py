@@ -85,8 +85,10 @@ class Audit:
         Band in which the ratio lies with probability ``1 - level`` when they are.
     overall, overall_low, overall_high : float
         Factor by which all sigmas together would be off, with its interval.
+    overall_gain : float
+        Twice the gain in log likelihood from changing all sigmas by that factor.
     gain : ndarray
-        Twice the gain in log likelihood from changing this sigma alone; nan where it cannot be audited.
+        The same from changing this sigma alone; nan where it cannot be audited.
     factor, factor_low, factor_high : ndarray
         Factor on the sigma if it is the only one that is wrong, and its interval; nan where it cannot be audited.
     share : ndarray
@@ -109,6 +111,7 @@ class Audit:
     overall: float
     overall_low: float
     overall_high: float
+    overall_gain: float
     gain: Array
     factor: Array
     factor_low: Array
@@ -226,6 +229,7 @@ def audit(parts: Sequence[Scatter], *, level: float = 0.05) -> Audit:
         overall=float(np.sqrt(ratio)),
         overall_low=float(np.sqrt(square / high)),
         overall_high=float(np.sqrt(square / low)),
+        overall_gain=float(total * (ratio - 1.0 - np.log(ratio))) if ratio > 0 else np.inf,
         gain=gain,
         factor=factor,
         factor_low=lowest,

@@ -12,7 +12,7 @@ from ..diagnose.lookalike import PARALLEL
 from ..diagnose.operating import Fit, Stack, both_terms, fit_column, plan_level, stack_columns
 from .sequence import Sequence
 
-__all__ = ["FlowLevels", "LevelModel", "NextLevel", "levels_of"]
+__all__ = ["FlowLevels", "LevelModel", "NextLevel", "levels_of", "without_scale"]
 
 Array = npt.NDArray[np.float64]
 
@@ -108,6 +108,11 @@ class FlowLevels:
     next: NextLevel | None
 
     @property
+    def gain(self) -> float:
+        """What the best fault that does not change takes off the sum of squares; 0 where none survives."""
+        return max((self.left - c[0].left for c in self.classes), default=0.0)
+
+    @property
     def one_level(self) -> bool:
         """Whether all snapshots lie at one level."""
         return self.highest - self.lowest <= SAME_LEVEL * max(abs(self.highest), abs(self.lowest))
@@ -171,6 +176,23 @@ def levels_of(sequence: Sequence) -> FlowLevels:
         noise=c.noise.get(candidate, np.nan),
         next=_next(sequence, c, alive) if outcome == "either" else None,
     )
+
+
+def without_scale(sequence: Sequence, levels: FlowLevels) -> Sequence:
+    """Return the evidence with the best error of scale granted, where the outcome is one."""
+    if levels.outcome != "scale":
+        return sequence
+    best = levels.classes[0][0]
+    place = {tag: j for j, tag in enumerate(sequence.result.tags)}
+    out = sequence
+    for i, c in enumerate(sequence.candidates):
+        if c.kind == "bias" and c.name in best.names:
+            value = sequence.result.readings[:, place[c.item]]
+            if best.shape == "scale":
+                score, information = sequence.scores(i)
+                value = value - np.divide(score, information, out=np.zeros_like(score), where=information > 0)
+            out = out.minus(best.size * np.nan_to_num(value), i)
+    return out
 
 
 def _columns(sequence: Sequence) -> _Columns:
@@ -243,7 +265,8 @@ def _models(sequence: Sequence, c: _Columns, level: float) -> list[LevelModel]:
             continue
         if j < len(c.constant):
             one = sequence.candidates[c.constant[j]]
-            shape, names, kind, item, unit = "constant", (one.name,), one.kind, one.item, one.unit
+            names: tuple[str, ...] = (one.name,)
+            shape, kind, item, unit = "constant", one.kind, one.item, one.unit
             possible = one.side == 0 or one.side * fit.size > 0
         elif j < len(c.constant) + len(c.meters):
             one = sequence.candidates[c.meters[j - len(c.constant)]]

@@ -78,6 +78,15 @@ class Sequence:
         )
         return Sequence(self.result, parts)
 
+    def without(self, snapshot: int) -> Sequence:
+        """Return the evidence without one snapshot."""
+        parts = []
+        for p in self.parts:
+            keep = p.rows != snapshot
+            if keep.any():
+                parts.append(Evidence(p.group, p.rows[keep], p.parity[keep], p.signatures))
+        return Sequence(self.result, tuple(parts))
+
     @property
     def candidates(self) -> tuple[Candidate, ...]:
         """Every fault that may be named."""

@@ -17,6 +17,7 @@ __all__ = ["About", "SigmaAudit", "SigmaFactor", "audit_of"]
 About = Literal["zero", "mean", "pairs"]
 
 TOO_GOOD = 0.999
+MOST_SINGLE = 3
 
 
 @dataclass(frozen=True)
@@ -65,11 +66,13 @@ class SigmaAudit:
         For the largest gain.
     status : str
         ``few``, ``no change``, ``one`` (a reading is named), ``rivals`` (one of several), ``all`` (no single
-        reading stands out).
+        reading stands out), ``structural`` (something is missing from the balances, and scatters).
     named : tuple of str
         The reading with the largest gain first; then its rivals where the status is ``rivals``.
     together : tuple of (tag, factor, sigma)
         Where several sigmas have to change together.
+    hangs_on : tuple of str
+        Up to three snapshots without which no change would be indicated; the status is ``few snapshots`` then.
     too_good : bool
         Whether readings agree better than their sigmas allow.
     meters : tuple of SigmaFactor
@@ -89,6 +92,7 @@ class SigmaAudit:
     status: str
     named: tuple[str, ...]
     together: tuple[tuple[str, float, float], ...]
+    hangs_on: tuple[str, ...]
     too_good: bool
     meters: tuple[SigmaFactor, ...]
 
@@ -130,13 +134,15 @@ def audit_of(sequence: Sequence, about: About) -> SigmaAudit:
                 tied.get(i, ()),
             )
         )
-    status, named = "no change", ()
+    status, named, hangs_on = "no change", (), ()
     together: tuple[tuple[str, float, float], ...] = ()
     if few:
         status = "few"
+    elif found.change_indicated and (hangs_on := _hangs_on(sequence, about)):
+        status = "few snapshots"
     elif found.change_indicated:
         best = found.best
-        if best >= 0 and found.gain[best] > found.limit:
+        if best >= 0 and found.gain[best] > max(found.limit, found.overall_gain):
             near = np.flatnonzero(np.nan_to_num(found.gain, nan=-np.inf) > found.gain[best] - CLEAR)
             order = sorted(near.tolist(), key=lambda j: -found.gain[j])
             status, named = ("one" if len(order) == 1 else "rivals"), tuple(tags[j] for j in order)
@@ -151,8 +157,22 @@ def audit_of(sequence: Sequence, about: About) -> SigmaAudit:
     p = float(chdtrc(found.checks, found.ratio * found.checks))
     return SigmaAudit(
         found.count, found.checks, about, found.ratio, found.low, found.high, p, found.overall, found.overall_low,
-        found.overall_high, found.limit, status, named, together, bool(p > TOO_GOOD), tuple(meters),
+        found.overall_high, found.limit, status, named, together, hangs_on, bool(p > TOO_GOOD), tuple(meters),
     )  # fmt: skip
+
+
+def _hangs_on(sequence: Sequence, about: About) -> tuple[str, ...]:
+    """Fewest snapshots, of those that disagree most, without which no change is indicated; empty if more than three."""
+    objective = np.full(sequence.result.size, -np.inf)
+    for p in sequence.parts:
+        objective[p.rows] = (p.parity**2).sum(axis=1)
+    rest, taken = sequence, []
+    for i in np.argsort(-objective, kind="stable")[: min(MOST_SINGLE, sequence.count // LEAST_SNAPSHOTS)]:
+        rest = rest.without(int(i))
+        taken.append(sequence.result.labels[i])
+        if not audit(_scatters(rest, about), level=sequence.result.settings.level).change_indicated:
+            return tuple(taken)
+    return ()
 
 
 def _scatters(sequence: Sequence, about: About) -> list[Scatter]:

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+import numpy as np
+
 from ..accounts import Accounts, explain, explainer_of
 from ..diagnose.critical import smallest_detectable
 from .sequence import Sequence
@@ -70,6 +72,8 @@ class Steady:
         Every candidate that is checked.
     accounts : Accounts or None
         Explanations of the pool; None where it agrees.
+    single : str or None
+        Snapshot without which the pool would agree, and what would be left then in `without_it`.
     """
 
     count: int
@@ -82,6 +86,8 @@ class Steady:
     contrast_p: float
     faults: tuple[SteadyFault, ...]
     accounts: Accounts | None
+    single: str | None = None
+    without_it: float = float("nan")
 
     @property
     def agrees(self) -> bool:
@@ -110,10 +116,19 @@ def steady_of(sequence: Sequence) -> Steady:
     if pool.objective > pool.limit:
         explainer = explainer_of(model, pool.signatures, settings, result.spec)
         accounts = None if explainer is None else explain(explainer, pool.parity, model, settings.level)
+    single, without = _single(sequence) if accounts is not None and sequence.count > 2 else (None, float("nan"))
     return Steady(
         pool.count, pool.objective, pool.checks, pool.limit, pool.p,
-        pool.contrast, pool.contrast_checks, pool.contrast_p, tuple(faults), accounts,
+        pool.contrast, pool.contrast_checks, pool.contrast_p, tuple(faults), accounts, single, without,
     )  # fmt: skip
+
+
+def _single(sequence: Sequence) -> tuple[str | None, float]:
+    """Snapshot that alone makes the pool disagree, if the one that disagrees most does."""
+    worst = int(np.nanargmax(sequence.result.objective))
+    rest = sequence.without(worst).pool()
+    agrees = rest.objective <= rest.limit
+    return (sequence.result.labels[worst], rest.objective) if agrees else (None, float("nan"))
 
 
 def stretches_of(sequence: Sequence) -> tuple[Stretch, ...]:

@@ -10,7 +10,7 @@ import numpy.typing as npt
 from ..diagnose.track import CLEAR, Shape, change, cusum, first_alarm
 from .sequence import Sequence
 
-__all__ = ["Drift", "Rival", "Track", "TrackStretch", "drifts_of", "tracks_of"]
+__all__ = ["Drift", "Rival", "Track", "TrackStretch", "drifts_of", "tracks_of", "watched"]
 
 Array = npt.NDArray[np.float64]
 
@@ -28,6 +28,8 @@ class TrackStretch:
     ----------
     first, last : int
         Snapshots, counted from 0.
+    count : int
+        Snapshots in between that check the fault.
     alarm_up, alarm_down : int or None
         Snapshot at which the one-sided cumulative sum alarmed.
     step_gain, ramp_gain : float
@@ -51,6 +53,7 @@ class TrackStretch:
 
     first: int
     last: int
+    count: int
     alarm_up: int | None
     alarm_down: int | None
     step_gain: float
@@ -81,7 +84,12 @@ class TrackStretch:
     @property
     def changed(self) -> bool:
         """Whether a change is beyond what chance and the scatter seen from snapshot to snapshot account for."""
-        return self.alarm is not None and self.gain / max(1.0, self.scatter) > self.limit
+        return self.alarm is not None and self.gain / self.excess > self.limit
+
+    @property
+    def excess(self) -> float:
+        """Scatter from snapshot to snapshot where it is larger than expected by more than its own error, else 1."""
+        return self.scatter if self.scatter > 1.0 + 1.645 * np.sqrt(3.0 / self.count) else 1.0
 
     @property
     def from_the_start(self) -> bool:
@@ -220,6 +228,7 @@ def _stretch(
     return TrackStretch(
         first=first,
         last=first + len(score) - 1,
+        count=int(seen.sum()),
         alarm_up=alarms[0],
         alarm_down=alarms[1],
         step_gain=float(found.step.gain),
@@ -247,19 +256,50 @@ def _alarm(sums: Array, first: int) -> int | None:
 # ------------------------------------------------------------------ which of them
 
 
-def drifts_of(sequence: Sequence, tracks: tuple[Track, ...]) -> tuple[Drift, ...]:
-    """Name changes one after the other, each with its rivals; what a named one accounts for is taken out first."""
+def drifts_of(sequence: Sequence, tracks: tuple[Track, ...], unchanging: float) -> tuple[Drift, ...]:
+    """Name changes one after the other, each with its rivals; what a named one accounts for is taken out first.
+
+    Parameters
+    ----------
+    sequence : Sequence
+    tracks : tuple of Track
+        Of it.
+    unchanging : float
+        What the best fault that does not change, constant or a share of the reading, takes off the sum of squares.
+
+    Returns
+    -------
+    tuple of Drift
+        None that may have been there throughout, or that an unchanging fault accounts for as well.
+    """
     out: list[Drift] = []
     now, followed = sequence, tracks
-    while len(out) < MOST_DRIFTS:
+    for _ in range(MOST_DRIFTS):
         changed = [(s, t) for t in followed for s in t.stretches if s.changed and _sign_possible(sequence, t, s)]
         if not changed:
             break
         stretch, track = max(changed, key=lambda pair: (pair[0].gain, -pair[1].candidate))
-        out.append(Drift(track, stretch, _rivals(sequence, track, stretch, followed)))
+        if now is sequence and stretch.gain <= unchanging + CLEAR:
+            break
+        if not (stretch.from_the_start and len(track.stretches) == 1):
+            out.append(Drift(track, stretch, _rivals(sequence, track, stretch, followed)))
         now = now.minus(_shift(sequence.result.size, stretch), track.candidate)
         followed = tracks_of(now)
     return tuple(out)
+
+
+def watched(sequence: Sequence, tracks: tuple[Track, ...]) -> tuple[Track, TrackStretch] | None:
+    """Clearest of the tracks that alarmed without a change that is beyond chance, or None."""
+    alarmed = [
+        (s, t)
+        for t in tracks
+        for s in t.stretches
+        if s.alarm is not None and not s.changed and not s.from_the_start and _sign_possible(sequence, t, s)
+    ]
+    if not alarmed:
+        return None
+    stretch, track = max(alarmed, key=lambda pair: (pair[0].gain, -pair[1].candidate))
+    return track, stretch
 
 
 def _sign_possible(sequence: Sequence, track: Track, stretch: TrackStretch) -> bool:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..accounts import SizedFault
+from ..diagnose.lookalike import PARALLEL
 from .layout import table, to_ascii, wrap
 from .levels import levels_in_words
 from .numbers import plain, signed
@@ -71,25 +72,32 @@ def history_section(history: History) -> list[str]:
 
 def _steady(history: History) -> list[str]:
     s = history.steady
-    test = f"χ² {s.objective:.2f}, {s.checks} {'check' if s.checks == 1 else 'checks'}, limit {s.limit:.2f}, p {p_value(s.p)}"
+    test = (
+        f"χ² {s.objective:.2f}, {s.checks} {'check' if s.checks == 1 else 'checks'}, limit {s.limit:.2f}, p {_p(s.p)}"
+    )
     out = ["  Steady over all of them"]
     if s.agrees:
         out.append(wrap(f"Pooled, nothing steady shows ({test}).", "    "))
         near = [f for f in s.faults if f.kind == "bias" and math.isfinite(f.smallest)]
         if near:
-            told = ", ".join(f"{f.name} {plain(f.smallest, f.smallest / 10)} {f.unit}" for f in near)
+            told = ", ".join(f"{f.name} {plain(f.smallest, f.smallest)} {f.unit}" for f in near)
             power = 100 * history.result.settings.power
             out.append(wrap(f"A steady error would be noticed (chance {power:.0f} %) from: {told}.", "    "))
     else:
         out.append(wrap(f"Pooled, something is off ({test}). " + " ".join(named_in_short(s.accounts)), "    "))
-        if history.drifts and not all(d.stretch.from_the_start for d in history.drifts):
+        if s.single is not None:
+            out.append(
+                wrap(f"It is all in one snapshot: without {s.single} the pool agrees (χ² {s.without_it:.2f}).", "    ")
+            )
+        if history.drifts:
             out.append(wrap("It is not the same throughout, though: see the changes below.", "    "))
-        small = [f for f in s.faults if f.kind == "bias" and abs(f.z) > 3 and f.sigmas < 1]
+        best = s.accounts.standing[0].alternatives if s.accounts and s.accounts.standing else ()
+        named = {f.candidate.name for a in best for f in a.faults}
+        small = [f.name for f in s.faults if f.name in named and f.kind == "bias" and f.sigmas < 1]
         if small:
-            tags = ", ".join(f"{f.name} {signed(f.size, f.sigma)} {f.unit}" for f in small)
             out.append(
                 wrap(
-                    f"Taken alone, below one sigma of its meter: {tags}. Where a sigma includes a calibration error that "
+                    f"That is less than one sigma of {' and '.join(small)}. Where a sigma includes a calibration error that "
                     "stays the same in all snapshots, a steady error of that size is what it allows.",
                     "    ",
                 )
@@ -98,18 +106,22 @@ def _steady(history: History) -> list[str]:
         out.append(
             wrap(
                 f"Snapshots with different readings absent contradict each other (χ² {s.contrast:.2f}, "
-                f"{s.contrast_checks} checks, p {p_value(s.contrast_p)}) in a way that no steady fault explains.",
+                f"{s.contrast_checks} checks, p {_p(s.contrast_p)}) in a way that no steady fault explains.",
                 "    ",
             )
         )
     if history.stretches:
         rows = [
-            (f"{t.first} to {t.last}", str(t.count), f"{t.objective:.2f}", str(t.checks), f"{t.limit:.2f}", p_value(t.p),
+            (f"{t.first} to {t.last}", str(t.count), f"{t.objective:.2f}", str(t.checks), f"{t.limit:.2f}", _p(t.p),
              "off" if t.objective > t.limit else "agrees")
             for t in history.stretches
         ]  # fmt: skip
         out += ["", table(("POOLED", "snapshots", "χ²", "checks", "limit", "p", ""), rows, left=(0, 6))]
     return out
+
+
+def _p(p: float) -> str:
+    return "under 1e-300" if p == 0 else p_value(p)
 
 
 def _structural(history: History) -> list[str]:
@@ -120,9 +132,10 @@ def one_sided_in_words(o: OneSided, history: History) -> str:
     """A balance that is off to one side in every record, and what that means."""
     side = "more goes in than comes out" if o.mean > 0 else "more comes out than goes in"
     where = f" at {o.node}" if o.node else ""
+    digit = (o.high - o.low) / 10
     text = (
-        f"{o.balance} is off to the same side in all {o.count} records that form it ({side}: mean {signed(o.mean)}, from "
-        f"{plain(o.low)} to {plain(o.high)} {o.unit})."
+        f"{o.balance} is off to the same side in all {o.count} records that form it ({side}: mean {signed(o.mean, digit)}, from "
+        f"{plain(o.low, digit)} to {plain(o.high, digit)} {o.unit})."
     )
     if o.structural:
         fits = f" {', '.join(o.faults)} would fit." if o.faults else ""
@@ -139,7 +152,7 @@ def one_sided_in_words(o: OneSided, history: History) -> str:
 def _changes(history: History) -> list[str]:
     out = ["  Changes"]
     if not history.drifts:
-        out.append(wrap("No fault begins or grows: no cumulative sum alarmed with a clear change behind it.", "    "))
+        out.append(wrap(_no_change(history), "    "))
     for d in history.drifts:
         out += [wrap(line, "    ") for line in drift_in_words(d, history)]
     out += [wrap(line, "    ") for t in history.tracks if (line := _calibrations(t, history))]
@@ -149,16 +162,40 @@ def _changes(history: History) -> list[str]:
     return out
 
 
+def _no_change(history: History) -> str:
+    if history.watch is None:
+        return "No fault begins or grows."
+    track, s = history.watch
+    assert s.alarm is not None
+    side = "upwards" if s.alarm == s.alarm_up else "downwards"
+    shape = (
+        " It cannot be told yet whether it grows or jumped." if s.shape == "open" else f" It looks like a {s.shape}."
+    )
+    tied = [r.name for r in history.alike(track)]
+    name = " or ".join([track.name, *tied])
+    return (
+        f"Watch {name}: its cumulative sum alarmed at {_name(history, s.alarm)}, {side}, but a change since "
+        f"{_name(history, s.onset)} takes only χ² {s.gain:.1f} off, and chance over all onsets and tracks would reach "
+        f"{s.limit * s.excess:.1f}.{shape} Of many such sums one alarms by chance in about 930 snapshots."
+    )
+
+
+def _name(history: History, i: int) -> str:
+    """Name of a snapshot; ``snapshot`` stands before a bare number."""
+    label = history.labels[i]
+    return f"snapshot {label}" if label.isdigit() else label
+
+
 def drift_in_words(d: Drift, history: History) -> list[str]:
     """One change: what, since when, how sure, which shape, and what it could be instead."""
-    s, labels = d.stretch, history.labels
+    s = d.stretch
     c = history.result.model.candidates[d.track.candidate]
     size = fault_phrase(SizedFault(c, s.size, s.sigma))
-    text = f"{size} (± {plain(s.sigma, s.sigma)}) at {labels[s.last]}"
+    text = f"{size} (± {plain(s.sigma, s.sigma)}) at {_name(history, s.last)}"
     if s.from_the_start:
-        text += f", from the first snapshot on or from one up to {labels[s.latest]}."
+        text += f", from the first snapshot on or from one up to {_name(history, s.latest)}."
     else:
-        text += f", since {labels[s.onset]} (95 %: {labels[s.earliest]} to {labels[s.latest]})."
+        text += f", since {_name(history, s.onset)} (95 %: {history.labels[s.earliest]} to {history.labels[s.latest]})."
     ahead = abs(s.ramp_gain - s.step_gain)
     if s.shape == "ramp":
         text += f" It grows, by {plain(abs(s.slope), s.slope_sigma)} ± {plain(s.slope_sigma, s.slope_sigma)} {c.unit} a snapshot: a jump fits worse by χ² {ahead:.1f}."
@@ -167,18 +204,26 @@ def drift_in_words(d: Drift, history: History) -> list[str]:
     else:
         text += f" Whether it grows or jumped cannot be told yet (the two differ by χ² {ahead:.1f}, and 3.84 is clear)."
     if s.alarm is not None:
-        text += f" The cumulative sum alarmed at {labels[s.alarm]}"
+        text += f" The cumulative sum alarmed at {_name(history, s.alarm)}"
         text += (
             "; at that moment growth could not yet be told from a jump."
             if s.open_at_alarm and s.shape != "open"
             else "."
         )
     out = [text]
-    same = [r for r in d.rivals if abs(r.correlation) > 1 - 1e-9]
-    if same:
-        told = ", or ".join(_rival_phrase(r, history) for r in same)
-        out.append(f"Cannot tell it from: {told}; they look exactly alike in these readings.")
-    out += [_rival(r, d, history) for r in d.rivals if r not in same][:MOST_LISTED]
+    groups: list[list[Rival]] = []
+    for r in d.rivals:
+        near = groups and abs(groups[-1][0].behind - r.behind) <= 1e-6 * (1 + abs(r.behind))
+        if near and abs(abs(groups[-1][0].correlation) - abs(r.correlation)) <= 1e-9:
+            groups[-1].append(r)
+        else:
+            groups.append([r])
+    for g in groups[:MOST_LISTED]:
+        if abs(g[0].correlation) >= 1 - PARALLEL and not g[0].excluded:
+            told = ", or ".join(_rival_phrase(r, history) for r in g)
+            out.append(f"Cannot tell it from: {told}; they look exactly alike in these readings.")
+        else:
+            out.append(_rival(g, d, history))
     return out
 
 
@@ -187,28 +232,26 @@ def _rival_phrase(r: Rival, history: History) -> str:
     return fault_phrase(SizedFault(c, r.size, r.sigma))
 
 
-def _rival(r: Rival, d: Drift, history: History) -> str:
+def _rival(tied: list[Rival], d: Drift, history: History) -> str:
+    r = tied[0]
+    told = ", or ".join(_rival_phrase(x, history) for x in tied)
+    alike = f"signature correlation {r.correlation:+.2f}"
     word = (
-        f"fits worse by χ² {r.behind:.1f}, rejected"
-        if r.excluded
-        else f"is not excluded (worse by χ² {r.behind:.1f} only)"
+        f"leaves χ² {r.behind:.1f} more and is rejected" if r.excluded else f"is not excluded (χ² {r.behind:.1f} more)"
     )
-    alike = f", signatures correlate {signed(r.correlation, 0.1)}"
-    differ = ""
-    if r.touches or r.instead:
-        parts = [
-            f"{name} would open {', '.join(balances)}"
-            for name, balances in ((r.name, r.touches), (d.track.name, r.instead))
-            if balances
-        ]
-        differ = f" What differs: {'; '.join(parts)}."
-    return f"Rival: {_rival_phrase(r, history)} {word}{alike}.{differ}"
+    parts = [
+        f"{name} would open {' and '.join(balances)}"
+        for name, balances in ((r.name, r.touches), (d.track.name, r.instead))
+        if balances
+    ]
+    differ = f" What differs: {'; '.join(parts)}." if parts else ""
+    return f"Rival: {told} ({alike}) {word}.{differ}"
 
 
 def _calibrations(track: Track, history: History) -> str:
     if not track.calibrated:
         return ""
-    places = ", ".join(history.labels[i] for i in track.calibrated)
+    places = ", ".join(_name(history, i) for i in track.calibrated)
     return f"{track.name} was calibrated: its track, and no other, begins anew at {places}."
 
 
@@ -242,7 +285,7 @@ def _second_opinion(history: History) -> list[str]:
             least = value - o.difference[i, v] * sigma
             text += (
                 f"values differ from least squares by more than one sigma in {count} of {history.count} snapshots, most in "
-                f"{history.labels[i]}: {o.variables[v]} {plain(value, sigma)} instead of {plain(least, sigma)} "
+                f"{_name(history, i)}: {o.variables[v]} {plain(value, sigma)} instead of {plain(least, sigma)} "
                 f"{o.units[v]} ({size.max():.1f} sigma)."
             )
             moved = np.nan_to_num(np.abs(o.pulled[i]))

@@ -29,16 +29,17 @@ def levels_in_words(history: History) -> list[str]:
 def level_sentences(history: History) -> list[str]:
     """Sentences on flow levels; none where nothing is wrong."""
     f = history.levels
-    if f.outcome == "nothing" or not f.tag:
+    if f.outcome == "nothing" or not f.tag or (history.drifts and f.outcome != "neither"):
         return []
     if f.outcome == "neither":
-        if history.drifts and not all(d.stretch.from_the_start for d in history.drifts):
+        if history.drifts or history.steady.agrees or history.steady.single is not None:
             return []
         best = f.rejected[0]
-        return [
-            "Neither a constant error nor an error of scale of any one meter, nor a constant loss, accounts for all snapshots: "
+        text = (
+            "Neither a constant error nor one of scale of any one meter, nor a constant loss, accounts for all snapshots: "
             f"the best, {_phrase(best, history)}, leaves χ² {best.left:.1f}, limit {best.limit:.1f}."
-        ]
+        )
+        return [text]
     out = [_either(f, history) if f.outcome == "either" else _settled(f, history)]
     if f.outcome == "either":
         out.append(_next(f))
@@ -68,20 +69,13 @@ def _phrase(m: LevelModel, history: History) -> str:
     if m.shape == "constant":
         c = next(c for c in history.result.model.candidates if c.name == m.names[0])
         said = fault_phrase(SizedFault(c, m.size, m.sigma))
-        more = {
-            "bias": f"a zero offset: {said}",
-            "leak": f"a leak, or a steady user that no meter reads: {said}",
-        }.get(c.kind, said)
-        return f"{more} (± {plain(m.sigma, m.sigma)})"
+        more = {"bias": "; a zero offset", "leak": "; a leak, or a steady user that no meter reads"}.get(c.kind, "")
+        return f"{said} (± {plain(m.sigma, m.sigma)}{more})"
     share = f"{plain(100 * abs(m.size), 100 * m.sigma)} ± {plain(100 * m.sigma, 100 * m.sigma)} %"
     direction = "high" if m.size > 0 else "low"
     if m.shape == "scale":
-        return f"the scale of {m.names[0]}: it reads {direction} by {share} of its value"
+        return f"{m.names[0]} reads {direction} by {share} of its value (scale)"
     return f"all of {', '.join(m.names)} {direction} by the same share, {share}"
-
-
-def _first(models: list[LevelModel] | tuple[LevelModel, ...], constant: bool) -> LevelModel | None:
-    return next((m for m in models if (m.shape == "constant") == constant), None)
 
 
 def _settled(f: FlowLevels, history: History) -> str:
@@ -91,14 +85,27 @@ def _settled(f: FlowLevels, history: History) -> str:
     text = f"The error is {'constant' if constant else 'proportional'}, {_span(f)} ({fits}): {told[0]}."
     if len(told) > 1:
         text += f" Not excluded: {'; '.join(told[1:])}."
-    against = _first(f.rejected, not constant)
-    if against is not None:
-        what = f"a share ({_share(against)})" if constant else f"a constant ({signed(against.size, against.sigma)})"
+    against = [m for m in f.rejected if (m.shape == "constant") != constant]
+    if against:
+        told = [f"{_share(m) if constant else _constant(m)} leaves χ² {m.left:.1f}" for m in _distinct(against)[:3]]
         text += (
-            f" Not {'an error of scale' if constant else 'a leak or a zero offset'}: {what} leaves χ² {against.left:.1f}, "
-            f"limit {against.limit:.2f}, rejected. Without any fault {f.left:.0f} is left."
+            f" Not {'an error of scale' if constant else 'a leak or a zero offset'}: {', '.join(told)}, limit "
+            f"{against[0].limit:.2f}. Without any fault {f.left:.0f} is left."
         )
     return text
+
+
+def _distinct(models: list[LevelModel]) -> list[LevelModel]:
+    """The first of those that leave the same."""
+    out: list[LevelModel] = []
+    for m in models:
+        if not out or m.left > out[-1].left * (1 + 1e-9) + 1e-9:
+            out.append(m)
+    return out
+
+
+def _constant(m: LevelModel) -> str:
+    return f"a constant of {plain(abs(m.size), m.sigma)} {m.unit}"
 
 
 def _share(m: LevelModel) -> str:

@@ -17,8 +17,8 @@ __all__ = ["audit_in_words", "audit_sentences"]
 HALF = 0.5
 ABOUT = {
     "zero": "",
-    "mean": " about their mean, since something steady shows",
-    "pairs": " from one to the next, since something changes",
+    "mean": " (about their mean, since something steady shows)",
+    "pairs": " (from one to the next, since something changes)",
 }
 
 
@@ -31,17 +31,28 @@ def audit_sentences(history: History) -> list[str]:
     """Whether the sigmas are what the readings scatter by; nothing is said from fewer than twenty snapshots."""
     n = history.count
     if n < LEAST_SNAPSHOTS:
-        return [f"Not auditable: {n} snapshots say too little of a sigma, {LEAST_SNAPSHOTS} are needed."]
+        have = "1 snapshot says" if n == 1 else f"{n} snapshots say"
+        return [f"Not auditable: {have} too little of a sigma, {LEAST_SNAPSHOTS} are needed."]
     a = history.audit
     band = f"mean χ² per check {a.ratio:.2f}, 95 % band {a.low:.2f} to {a.high:.2f}"
     if history.result.settings.level != 0.05:
         band = band.replace("95 %", f"{100 * (1 - history.result.settings.level):g} %")
-    scatter = f"Over {n} snapshots the readings scatter{ABOUT[a.about]}"
+    scatter = f"Over {n} snapshots{ABOUT[a.about]} the readings scatter"
     out = []
-    if a.status == "no change":
+    if a.status == "structural":
+        why = (
+            "Not auditable while a balance is off to the same side in every record: what is missing there scatters, too"
+        )
+        return [f"{why} ({band})."]
+    if a.status == "few snapshots":
+        out.append(
+            f"{scatter} other than their sigmas let expect ({band}), but only because of {', '.join(a.hangs_on)}: without, "
+            "no change is indicated."
+        )
+    elif a.status == "no change":
         out.append(f"{scatter} as their sigmas let expect ({band}): no change indicated.")
     elif a.status == "one":
-        out.append(_one(a.meter(a.named[0]), n, a.about) + f" ({band}.)")
+        out.append(_one(a.meter(a.named[0]), n, a.about, band))
     elif a.status == "rivals":
         told = ", or ".join(f"{t} by a factor {_factor(a.meter(t))}" for t in a.named)
         out.append(f"{scatter} other than their sigmas let expect ({band}). Cannot tell which sigma is wrong: {told}.")
@@ -64,8 +75,11 @@ def _factor(m: SigmaFactor) -> str:
     return f"{m.factor:.1f} (95 %: {m.low:.1f} to {high})"
 
 
-def _one(m: SigmaFactor, n: int, about: str) -> str:
-    text = f"Over {n} snapshots{ABOUT[about]} the readings scatter {_factor(m)} times what the sigma of {m.tag} allows."
+def _one(m: SigmaFactor, n: int, about: str, band: str) -> str:
+    text = (
+        f"Over {n} snapshots{ABOUT[about]} the readings scatter other than their sigmas let expect ({band}): {m.tag} by "
+        f"{_factor(m)} times what its sigma allows. No other reading explains it as well."
+    )
     if m.high < 1:
         text += " That sigma is too large."
         if m.low <= HALF <= m.high:
