@@ -364,18 +364,18 @@ def _write_all(content: Package, part: Path, formats: tuple[str, ...]) -> list[s
     with (part / "covariance.npz").open("wb") as file:
         np.savez(file, **dict(content.covariance))
     (part / "summary.json").write_text(json.dumps(content.summary, indent=2, ensure_ascii=False) + "\n", "utf-8")
-    others = ["covariance.npz", "summary.json"]
-    if "xlsx" in formats:
-        from .export_workbook import write_workbook
-
-        write_workbook(content.tables, part / "corrected.xlsx")
-        others.append("corrected.xlsx")
-    for name in others:
+    for name in ("covariance.npz", "summary.json"):
         made.append(name)
         resources.append({"name": Path(name).stem, "path": name, **_fingerprint(part / name)})
     package = description(content.title, resources, dict(content.provenance))
     (part / "datapackage.json").write_text(json.dumps(package, indent=2, ensure_ascii=False) + "\n", "utf-8")
     made.append("datapackage.json")
+    if "xlsx" in formats:
+        from .export_workbook import write_workbook
+
+        # It repeats the tables for people, and is no part of the described data.
+        write_workbook(content.tables, part / "corrected.xlsx")
+        made.append("corrected.xlsx")
     return made
 
 

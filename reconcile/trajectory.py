@@ -213,8 +213,8 @@ class Trajectory:
     def by_window(self) -> tuple[Array, npt.NDArray[np.int64], Array]:
         """What the checks that each window completed add to the objective, their number, and its p-value, each (N,)."""
         s = self.solution
-        objective = np.bincount(s.window_of, s.parity**2, minlength=self.size)
-        checks = np.bincount(s.window_of, minlength=self.size)
+        objective = np.bincount(s.window_of, s.parity**2, minlength=self.size).astype(float)
+        checks = np.bincount(s.window_of, minlength=self.size).astype(np.int64)
         p = np.array([chi2_p(o, int(c)) if c else np.nan for o, c in zip(objective, checks, strict=True)])
         return objective, checks, p
 
@@ -266,6 +266,12 @@ class Trajectory:
             return pd.DataFrame()
         frame = pd.concat(parts, ignore_index=True).sort_values("window", kind="stable", ignore_index=True)
         return frame.drop(columns="window")
+
+    def to_dict(self) -> dict[str, Any]:
+        """Return the machine-readable summary; safe for JSON."""
+        from .export_trajectory import summary_of_trajectory
+
+        return summary_of_trajectory(self)
 
     def summary(self) -> str:
         """Return the verdict and the tables as text."""
@@ -320,16 +326,16 @@ def run_trajectory(case: Case, readings: Any = None, *, exclude: Mapping[str, st
     picked[:, [case.tags.index(t) for t in left_out]] = np.nan
     lengths, outer_known, notices = _lengths(table, tied, spec)
     chain, base = _chain(model, tied, spec, picked, lengths)
-    names = {"names": case.name_of_column, "row_names": case.name_of_row}
+    column, row = case.name_of_column, case.name_of_row
     start = None
     if not model.equations.is_linear:
-        alone = adjust_table(problem_of(model, spec.settings), model.to_base(picked), **names)
+        alone = adjust_table(problem_of(model, spec.settings), model.to_base(picked), names=column, row_names=row)
         start = np.full((len(base), model.size), np.nan)
         for group in alone.groups:
             start[group.rows] = group.x
         start = _filled(start, problem_of(model, spec.settings).start)
     lasting, pushes = _lasting(model, len(base))
-    solution = solve_sequence(chain, base, start=start, pushes=pushes, **names)
+    solution = solve_sequence(chain, base, start=start, pushes=pushes, names=column, row_names=row)
     found = Trajectory(
         title=case.title,
         model=model,
@@ -351,7 +357,7 @@ def run_trajectory(case: Case, readings: Any = None, *, exclude: Mapping[str, st
     singles, more = _singles(found)
     if not singles:
         return found
-    again = solve_sequence(chain, base, start=solution.x, pushes=(*pushes, *more), **names)
+    again = solve_sequence(chain, base, start=solution.x, pushes=(*pushes, *more), names=column, row_names=row)
     candidates = (*lasting, *singles)
     return replace(found, solution=_scaled(again, candidates), candidates=candidates)
 

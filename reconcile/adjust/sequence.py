@@ -170,7 +170,7 @@ def solve_sequence(
             return now
         length = 1.0 if linear or move < previous or move < 1.0 else 0.5
         previous = move
-        x = x + length * (now.x - x)
+        x = np.asarray(x + length * (now.x - x))
         if problem.settle:
             values = np.where(np.isfinite(now.x[:, problem.columns]), x[:, problem.columns], values)
     window, row, off = work.worst(x, values)

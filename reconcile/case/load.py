@@ -19,7 +19,6 @@ from .streams import OptionReader, read_nodes, read_streams
 from .tables import read_table
 from .trajectory import read_trajectory
 from .unfilled import refuse_unfilled
-from .unfilled import refuse_unfilled
 from .validate import keys_of, validated
 from .yaml_source import read_yaml
 
@@ -87,7 +86,6 @@ def read_what_stands(
             places.where(()),
         )
         problems.raise_if_any()
-    refuse_unfilled(data, places, problems)
     refuse_unfilled(data, places, problems)
     _version(data, places, problems)
     if "reconcile" not in data:

@@ -10,12 +10,20 @@ import numpy as np
 
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
-from .words import MARKS, explanations_in_words, named_in_short, remarks_on_explanations, test_phrase
+from .words import (
+    MARKS,
+    Suspect,
+    explanations_in_words,
+    named_in_short,
+    remarks_on_explanations,
+    suspects_of,
+    test_phrase,
+)
 
 if TYPE_CHECKING:
     from ..trajectory import Trajectory
 
-__all__ = ["render_trajectory", "verdict_of_trajectory"]
+__all__ = ["render_trajectory", "suspects_of_trajectory", "verdict_of_trajectory"]
 
 MANY = 14
 
@@ -23,6 +31,11 @@ MANY = 14
 def _told(found: Trajectory) -> Any:
     """What the sentences of a snapshot read, for the whole sequence."""
     return SimpleNamespace(accounts=found.accounts, test=found.test)
+
+
+def suspects_of_trajectory(found: Trajectory) -> tuple[Suspect, ...]:
+    """Every fault that a standing explanation of the sequence names."""
+    return suspects_of(_told(found))
 
 
 def verdict_of_trajectory(found: Trajectory) -> str:
@@ -90,7 +103,7 @@ def render_trajectory(found: Trajectory, *, ascii_only: bool = False) -> str:
 
 def _inventories(found: Trajectory) -> str:
     """Each inventory of the first and last windows: read (where one meter reads it), adjusted, sigma, test value."""
-    meter_of = {}
+    meter_of: dict[str, tuple[int, int]] = {}
     for j, i in enumerate(found.model.meters):
         reads = found.model.readings[i].reads
         if len(reads) == 1:
