@@ -170,6 +170,7 @@ def grant(result: Result, index: int, alternative: Alternative) -> Granted | Non
         result,
         model=opened,
         prepared=None,
+        decisions={},
         table=table,
         readings=readings,
         labels=(f"{result.labels[index]} granting {' and '.join(sorted(names))}",),

@@ -198,7 +198,9 @@ class Case:
 
         spec, table = self.parts.spec, self.read(readings)
         samples = read_samples(spec, table, self._readers())
-        return prepare(plan_of(spec), table, self.tags, lab=samples, file=str(spec.path))
+        plan = plan_of(spec)
+        units = {t: m.unit if (stated := plan.of(t).column_unit) is None else stated for t, m in spec.meters.items()}
+        return prepare(plan, table, self.tags, lab=samples, units=units, file=str(spec.path))
 
     def _readers(self) -> dict[str, Any]:
         """Readers of measured data that plugins offer, by suffix or scheme."""

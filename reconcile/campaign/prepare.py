@@ -125,6 +125,7 @@ def prepare(
     tags: Sequence[str],
     *,
     lab: ReadingsTable | None = None,
+    units: Mapping[str, str] | None = None,
     file: str | None = None,
 ) -> Prepared:
     """Turn a log into snapshots.
@@ -138,6 +139,8 @@ def prepare(
         Meters of the case, in the order wanted.
     lab : ReadingsTable, optional
         Samples with their values, where they are not in the log.
+    units : mapping of tag to str, optional
+        Units of the columns, for messages; what the log states goes before.
     file : str, optional
         The case file, for messages without a place of their own.
 
@@ -151,7 +154,8 @@ def prepare(
         With the names that the case uses.
     """
     try:
-        return _Preparation(spec, table, tags, lab).run()
+        told = replace(table, units={**{t: u for t, u in (units or {}).items() if t in table.columns}, **table.units})
+        return _Preparation(spec, told, tags, lab).run()
     except InputError as error:
         raise in_words_of_the_case(error, file) from None
 
@@ -163,6 +167,7 @@ class _Preparation:
         self.spec, self.table, self.tags, self.lab = spec, table, tuple(tags), lab
         self.log: list[Entry] = []
         self.told = 0
+        self.unmoved: ReadingsTable | None = None
 
     def run(self) -> Prepared:
         running = self._running()
@@ -181,8 +186,8 @@ class _Preparation:
 
     # ---------------------------------------------------------------- telling
 
-    def _tell_new(self, skip: str = "") -> None:
-        """Log the notices that have come since the last time."""
+    def _tell_new(self, skip: tuple[str, ...] = ()) -> None:
+        """Log the notices that have come since the last time; those of some codes have entries of their own."""
         for notice in self.table.notices[self.told :]:
             if not skip or not notice.code.startswith(skip):
                 self.log.append(of_notice(notice))
@@ -229,6 +234,7 @@ class _Preparation:
             elif rule.lag_range is not None:
                 lags[tag] = self._find_lag(tag, rule.behind, rule.lag_range)
         if lags:
+            self.unmoved = self.table
             self.table = shift_times(self.table, lags)
 
     def _find_lag(self, tag: str, behind: str, wanted: tuple[float, float]) -> float:
@@ -343,9 +349,15 @@ class _Preparation:
                 t: _stamps(r.calibrated, log) for t, r in readings.items() if r.calibrated and log.time is not None
             },
         )
-        found = make_windows(log, rules, running=running)
+        found = make_windows(log, rules, running=running, witness=self.unmoved)
         self.table = found.table
-        self._tell_new(skip="counter-")
+        self._tell_new(skip=("counter-", "window-off", "window-left-out"))
+        for left in found.left_out:
+            at = log.where(int(found.bounds[left.window, 0]))
+            name = "window-off" if left.code == "off" else "window-left-out"
+            self.log.append(
+                Entry(name, "", left.label, at.file or "", at.line, at.row, words=f"{left.code}: {left.reason}")
+            )
         alternatives = self._counters(found, log)
         alternatives += self._levels(found)
         self._zero(found)

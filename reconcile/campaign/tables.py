@@ -164,7 +164,7 @@ def _meters(result: Result, i: int) -> list[tuple[Any, ...]]:
     group = result.group(i) if solved else None
     final = result.final_group(i) if solved else None
     nan = math.nan
-    base = model.to_base(result.readings[i : i + 1])[0]
+    base = model.to_base((table.values if word else result.readings)[i : i + 1])[0]
     reference = base
     x = None
     if group is not None and final is not None:
@@ -194,7 +194,8 @@ def _meters(result: Result, i: int) -> list[tuple[Any, ...]]:
             reason = why
         cell = intervals.get(r.tag)
         ends = (nan, nan) if cell is None else tuple(v if math.isfinite(v) else nan for v in (cell.lower, cell.upper))
-        given = float(raw[j])
+        # What meters showed in a window that no balance is made of stands here, too.
+        given = float(table.values[i, j] if word else raw[j])
         out.append(
             (r.tag, _item(r.reads), r.unit, given, *ends, float(before[k]) if math.isfinite(given) else nan, value, sigma,
              status, reason)

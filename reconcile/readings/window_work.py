@@ -27,8 +27,14 @@ class WindowWork:
     """Fills and judges windows, one after the other."""
 
     def __init__(
-        self, table: ReadingsTable, rules: WindowRules, bounds: npt.NDArray[np.int64], labels: list[str]
+        self,
+        table: ReadingsTable,
+        rules: WindowRules,
+        bounds: npt.NDArray[np.int64],
+        labels: list[str],
+        witness: ReadingsTable | None = None,
     ) -> None:
+        self.witnesses = (table,) if witness is None else (table, witness)
         self.table, self.rules, self.bounds, self.labels = table, rules, bounds, labels
         shape = (len(bounds), len(table.columns))
         self.values = np.full(shape, np.nan)
@@ -179,11 +185,19 @@ class WindowWork:
 
     def _moves(self, w: int, a: int, b: int) -> str | None:
         """Return what moves in a window, in words; None if nothing does."""
+        for table in self.witnesses:
+            found = self._moves_in(table, a, b)
+            if found is not None:
+                return found
+        return None
+
+    def _moves_in(self, table: ReadingsTable, a: int, b: int) -> str | None:
+        usable = self.usable if table is self.table else table.usable
         tags = self.averaged if self.rules.steady is None else self.rules.steady
         for tag in tags:
             j = self.table.index(tag)
-            good = self.usable[a:b, j]
-            x = self.table.values[a:b, j][good]
+            good = usable[a:b, j]
+            x = table.values[a:b, j][good]
             if x.size < 4:
                 continue
             t = (np.arange(a, b) if self.seconds is None else self.seconds[a:b] / 3600.0)[good].astype(np.float64)

@@ -161,7 +161,13 @@ def sigma_of_mean(
     return np.asarray(np.sqrt(a**2 / np.maximum(n, 1.0) + c**2))
 
 
-def make_windows(table: ReadingsTable, rules: WindowRules, *, running: npt.NDArray[np.bool_] | None = None) -> Windows:
+def make_windows(
+    table: ReadingsTable,
+    rules: WindowRules,
+    *,
+    running: npt.NDArray[np.bool_] | None = None,
+    witness: ReadingsTable | None = None,
+) -> Windows:
     """Cut a table into windows.
 
     Parameters
@@ -170,6 +176,9 @@ def make_windows(table: ReadingsTable, rules: WindowRules, *, running: npt.NDArr
     rules : WindowRules
     running : (N,) bool, optional
         False while the plant is off: such windows become zero checks.
+    witness : ReadingsTable, optional
+        The same rows before readings were moved by their dead times; a window in which those move is not steady
+        either, since the plant was not.
 
     Raises
     ------
@@ -178,7 +187,7 @@ def make_windows(table: ReadingsTable, rules: WindowRules, *, running: npt.NDArr
     """
     _check(table, rules)
     bounds, labels = _cut(table, rules)
-    work = WindowWork(table, rules, bounds, labels)
+    work = WindowWork(table, rules, bounds, labels, witness)
     for w in range(len(bounds)):
         state = work.state(w, running)
         work.fill(w, off=state == "off")

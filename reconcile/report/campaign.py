@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from ..errors import Notice
     from ..results import Result
 
-__all__ = ["from_the_log", "grouped_notices", "not_used", "why_not"]
+__all__ = ["from_the_log", "grouped_notices", "not_used", "verdict_line_of", "why_not"]
 
 _FEW = 3
 _MANY = 20
@@ -27,6 +27,12 @@ def why_not(result: Result, index: int) -> str:
     if error.code != LEFT_OUT or result.prepared is None:
         return "not solved"
     return f"left out: {result.prepared.left_out[index].code}"
+
+
+def verdict_line_of(result: Result, index: int) -> str:
+    """One line on a snapshot without adjusted values."""
+    why = why_not(result, index)
+    return f"{why[0].upper()}{why[1:]}: {result.table.failed[index].message}"
 
 
 def not_used(result: Result) -> list[str]:

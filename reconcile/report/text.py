@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 from ..mixups import mixups_of
 from ..refit import figures_if
-from .campaign import from_the_log, grouped_notices, why_not
+from .campaign import from_the_log, grouped_notices, verdict_line_of, why_not
 from .history import history_section
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
@@ -59,7 +59,7 @@ def render(result: Result, *, snapshot: int | None = None, ascii_only: bool = Fa
     else:
         index = snapshot or 0
         if index in result.table.failed:
-            parts.append(wrap(f"{why_not(result, index).capitalize()}: {result.table.failed[index].message}", ""))
+            parts.append(wrap(verdict_line_of(result, index), ""))
         else:
             parts += _detail(result, index)
     parts += from_the_log(result, snapshot)

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..accounts import Account, Accounts, Alternative, SizedFault
 from ..diagnose.verdict import Conclusion, Reason
-from .campaign import not_used, why_not
+from .campaign import not_used, verdict_line_of
 from .numbers import plain, signed
 
 if TYPE_CHECKING:
@@ -147,7 +147,7 @@ def verdict_line(result: Result) -> str:
     """One line: how many readings and checks, whether they agree, who is suspected, what cannot be checked."""
     if result.size == 1:
         if result.table.failed:
-            return f"{why_not(result, 0).capitalize()}: {result.table.failed[0].message}"
+            return verdict_line_of(result, 0)
         return " ".join(verdict_sentences(result.snapshot(0)))
     words = Counter(result.words[i] for i in range(result.size) if i not in result.table.failed)
     parts = [f"{n} {_plural(word, n)}" for word, n in words.items()]
