@@ -5,10 +5,13 @@ from __future__ import annotations
 import math
 
 import numpy as np
+import numpy.typing as npt
 
 from reconcile import OUTSIDE, Expression, Network, System, units
 
 from .options import FluidOptions
+
+Array = npt.NDArray[np.float64]
 
 STANDARD_GRAVITY = 9.80665
 """m/s2, exact by convention (3rd CGPM, 1901)."""
@@ -24,10 +27,10 @@ def write_pressures(network: Network, system: System, flow: Expression, options:
     """
     kinds = network.of_streams("resistance")
     chosen = [i for i, k in enumerate(kinds) if k is not None]
+    rises = [s for s, r, k in zip(network.streams, network.of_streams("rise"), kinds, strict=True) if r and k is None]
+    if rises:
+        raise ValueError(f"stream {rises[0]!r} has a rise but no resistance; write resistance: laminar")
     if not chosen:
-        rises = [s for s, r in zip(network.streams, network.of_streams("rise"), strict=True) if r is not None]
-        if rises:
-            raise ValueError(f"stream {rises[0]!r} has a rise but no resistance; write resistance: laminar")
         return
     ends = [(network.node_name(int(network.source[i])), network.node_name(int(network.target[i]))) for i in chosen]
     nodes = list(dict.fromkeys(n for pair in ends for n in pair))
@@ -60,10 +63,10 @@ def _write_drops(
             loss = resistance * flow[names]
         else:
             loss = system.apply(
-                lambda r, q: r * q * np.abs(q),
+                _turbulent,
                 resistance,
                 flow[names],
-                derivatives=lambda r, q: (q * np.abs(q), 2.0 * r * np.abs(q)),
+                derivatives=_turbulent_slopes,
             )
         # Across a closed valve any pressure may stand, so a stream that is closed off has no pressure drop.
         open_ = [k for k, j in enumerate(pick) if not network.of_streams("closed", False)[chosen[j]]]
@@ -74,6 +77,14 @@ def _write_drops(
             unit=options.pressure_unit,
             nodes=[names[k] for k in open_],
         )
+
+
+def _turbulent(resistance: Array, flow: Array) -> Array:
+    return resistance * flow * np.abs(flow)
+
+
+def _turbulent_slopes(resistance: Array, flow: Array) -> tuple[Array, Array]:
+    return flow * np.abs(flow), 2.0 * resistance * np.abs(flow)
 
 
 def _pressure(text: str, unit: str) -> float:

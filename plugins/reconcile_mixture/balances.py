@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from functools import partial
 
 import numpy as np
 import numpy.typing as npt
@@ -221,9 +222,15 @@ def _carried(part: Part, amount: Expression, streams: Ints, system: System, writ
     solids = written.solids[streams]
     phase = solids if part.phase == "solids" else 1.0 - solids
     # three factors: no product of two affine expressions
-    return system.apply(
-        lambda a, p, w: a * p * w, amount, phase, fraction, derivatives=lambda a, p, w: (p * w, a * w, a * p)
-    )
+    return system.apply(_triple, amount, phase, fraction, derivatives=_triple_slopes)
+
+
+def _triple(a: Array, b: Array, c: Array) -> Array:
+    return a * b * c
+
+
+def _triple_slopes(a: Array, b: Array, c: Array) -> tuple[Array, Array, Array]:
+    return b * c, a * c, a * b
 
 
 # ------------------------------------------------------------------ rows of streams
@@ -286,12 +293,11 @@ def _write_densities(plan: Plan, network: Network, system: System, written: _Wri
     true = _stated_density(plan, shared, ores, density.unit, system)
     pick = place([ores.index(plan.ore_of[j]) for j in where], len(ores)).T
     pulp = system.variables("density", items, unit=density.unit, lower=0, start=1.5 * density.liquid)
-    liquid = density.liquid
     law = system.apply(
-        lambda w, rho: pulp_density(w, rho, liquid),
+        partial(pulp_density, liquid_density=density.liquid),
         solids[where],
         pick @ true,
-        derivatives=lambda w, rho: pulp_density_slopes(w, rho, liquid),
+        derivatives=partial(pulp_density_slopes, liquid_density=density.liquid),
     )
     system.require(pulp - law == 0, names=[f"{s} density" for s in items], kind="density", unit=density.unit)
 

@@ -92,11 +92,13 @@ def _stream_losses(plan: Plan, network: Network, system: System, out: Losses) ->
     seen: set[tuple[int, int]] = set()
     for kind, end, says, separate in ends:
         rows = []
-        for j in range(len(network.streams)):
+        # By name: which of several streams stands for all must not depend on the order of the file.
+        for j in sorted(range(len(network.streams)), key=lambda i: network.streams[i]):
             key = (int(end[j]), stands_for.get((int(end[j]), j), j))
             if key[0] >= 0 and key not in seen:
                 seen.add(key)
                 rows.append(j)
+        rows.sort()
         if rows:
             streams = np.array(rows, dtype=np.int64)
             amount = system.faults(

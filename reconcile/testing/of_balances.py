@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import itertools
 from collections.abc import Iterator
 
@@ -136,9 +137,12 @@ def _inflow(stand: Stand, balance: str, entry: str) -> str:
     row = system.row_names().index(balance)
     unit = system.rows_of(row).unit
     names = [n.strip() for n in entry.split(" * ")]
+    share = 1.0
+    with contextlib.suppress(ValueError):
+        share, names = float(names[0]), names[1:]
     known = {n: i for i, n in enumerate(system.names())}
     missing = [n for n in names if n not in known]
-    if missing or len(names) > 2:
+    if missing or not 1 <= len(names) <= 2:
         return f"inflow {entry!r} of {balance!r} is no variable and no product of two; {did_you_mean(missing[0], known) if missing else ''}"
     columns = [known[n] for n in names]
     if len(columns) == 1:
@@ -151,12 +155,12 @@ def _inflow(stand: Stand, balance: str, entry: str) -> str:
             if sorted(pair.tolist()) == sorted(columns):
                 raised = float(stand.equations.products[[row]].toarray()[0, p])
     try:
-        expected = difference_factor(of, unit)
+        expected = share * difference_factor(of, unit)
     except UnitProblem as problem:
         return f"inflow {entry!r} cannot flow into {balance!r}: {problem}"
     if abs(raised - expected) > 1e-9 * abs(expected):
         return (
-            f"raising {entry} by 1 {of} raises balance {balance!r} by {raised:.6g} instead of {expected:+.6g} {unit}"
+            f"raising {' * '.join(names)} by 1 {of} raises balance {balance!r} by {raised:.6g} instead of {expected:+.6g} {unit}"
             + ("; its sign is turned" if raised * expected < 0 else "")
         )
     return ""

@@ -45,7 +45,8 @@ class _File(BaseModel):
         description="One exact state, worked out by hand; what is not stated is calculated from the balances"
     )
     inflows: dict[str, list[str]] = Field(
-        default_factory=dict, description="By balance: what flows in, a variable or a product 'a.flow * a.urea'"
+        default_factory=dict,
+        description="By balance: what flows in, a variable or a product 'a.flow * a.urea'; with a number in front, so much of it",
     )
     in_other_units: list[dict[str, Any]] = Field(
         default_factory=list, description="Options of the domains that change units and nothing else"
