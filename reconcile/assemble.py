@@ -117,7 +117,9 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
 def option_models(plugins: Plugins) -> dict[str, DomainModels]:
     """Return the option models of every loaded domain, by its name."""
     return {
-        name: DomainModels(i.domain.options, i.domain.stream_options, i.domain.node_options, i.domain.needs_streams)
+        name: DomainModels(
+            i.domain.options, i.domain.stream_options, i.domain.node_options, i.domain.needs_streams, i.domain.version
+        )
         for name, i in plugins.domains.items()
     }
 

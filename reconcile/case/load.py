@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 from ..errors import InputError, Location, Problem, Problems, did_you_mean
 from .calibrations import read_calibrations
 from .models import CaseModel, KnownModel, MeterModel, SettingsModel
+from .needs import refuse_older
 from .places import Places
 from .quantities import Refusal, read_bound, read_quantity, read_span, read_unit
 from .reads import read_reads, unquoted
@@ -130,6 +131,7 @@ class _CaseReader:
     def read(self) -> CaseSpec | None:
         """Return the case; whatever was wrong stands in the problems."""
         domains = self._domains()
+        refuse_older(self._block("needs"), domains, self.models, self.places, self.problems)
         options = OptionReader(tuple(domains), self.models, self.places, self.problems)
         raw_streams = self._table("streams", ("name", "stream"), ("path", "source", "target", *options.keys("stream")),
                                   any_key=options.open_ended("stream"))  # fmt: skip
@@ -365,7 +367,9 @@ class _CaseReader:
         )
         return None
 
-    def _campaign(self, meters: Mapping[str, MeterSpec], tags: tuple[str, ...], streams: tuple[str, ...]) -> CampaignSpec:
+    def _campaign(
+        self, meters: Mapping[str, MeterSpec], tags: tuple[str, ...], streams: tuple[str, ...]
+    ) -> CampaignSpec:
         # That room reads quantities with the help of this one, so it is loaded when this one is complete.
         from ..campaign.read import read_campaign
 

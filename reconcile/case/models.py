@@ -117,6 +117,9 @@ class CaseModel(_Model):
     reconcile: Any = Field(description="Version of this format: 1", json_schema_extra={"const": 1})
     title: str = Field("", description="Free text for the report")
     domains: dict[str, Any] = Field(description="Subjects whose balances hold, each with its options", min_length=1)
+    needs: dict[str, Any] | None = Field(
+        None, description="Oldest version of a domain that the case works with, e.g. elements: at least 1.2"
+    )
     nodes: dict[str, Any] | None = Field(None, description="Nodes that need options")
     streams: dict[str, Any] | str = Field(description="Streams as name: a -> b, or the name of a table file")
     meters: dict[str, Any] | str | None = Field(None, description="Instruments by tag, or the name of a table file")

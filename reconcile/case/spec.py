@@ -46,12 +46,15 @@ class DomainModels:
         For extra keys of streams and nodes.
     needs_streams : bool
         Whether the domain has nothing to say without streams.
+    version : str
+        Of the domain.
     """
 
     options: type[BaseModel] | None
     stream: type[BaseModel] | None = None
     node: type[BaseModel] | None = None
     needs_streams: bool = True
+    version: str = ""
 
 
 @dataclass(frozen=True)
