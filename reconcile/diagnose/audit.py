@@ -255,14 +255,18 @@ def _profile(counts: Array, share: Array, squares: Array, drop: float) -> tuple[
     def at(x: Array) -> Array:
         return _deviance(x, counts, share, squares)
 
+    def rises(x: float) -> bool:
+        """Whether the deviance grows with the factor."""
+        variance = np.maximum(1.0 + (x**2 - 1.0) * share, 1e-12)
+        return bool((counts * share / variance - squares / variance**2).sum() > 0)
+
     grid = at(_FACTORS)
     best = int(grid.argmin())
     a, b = _FACTORS[max(best - 1, 0)], _FACTORS[min(best + 1, _FACTORS.size - 1)]
-    shrink = (np.sqrt(5.0) - 1.0) / 2.0
     for _ in range(_STEPS):
-        c, d = b - shrink * (b - a), a + shrink * (b - a)
-        a, b = (a, d) if at(c) < at(d) else (c, b)
-    top = 0.5 * (a + b)
+        middle = 0.5 * (a + b)
+        a, b = (a, middle) if rises(middle) else (middle, b)
+    top = 0.5 * (a + b) if a > 0 or not rises(0.0) else 0.0
     bottom = float(at(top))
     inside = grid <= bottom + drop
     # The ends lie between the last factor of the grid that is inside and the next.

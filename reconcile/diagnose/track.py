@@ -17,7 +17,7 @@ from scipy.special import chdtri
 
 from .refusal import Refusal
 
-__all__ = ["ALLOWANCE", "CLEAR", "DECISION", "Change", "Shape", "change", "cusum", "first_alarm"]
+__all__ = ["ALLOWANCE", "CLEAR", "DECISION", "STEP_DROP", "Change", "Shape", "change", "cusum", "first_alarm"]
 
 Array = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
@@ -31,6 +31,13 @@ DECISION = 5.0
 CLEAR = float(chdtri(1, 0.05))
 """Difference of twice the log likelihood, 3.84, from which one shape of a change is preferred to another."""
 
+STEP_DROP = float(-2.0 * np.log1p(-np.sqrt(0.95)))
+"""The same for the onset of a step, 7.35: its likelihood is no smooth function of the onset, so 3.84 covers too little.
+
+The law of the maximum of two independent exponentials holds for small steps and errs to the safe side for large ones
+(Hansen 2000, Econometrica 68, 575; from memory).
+"""
+
 
 @dataclass(frozen=True)
 class Shape:
@@ -43,7 +50,7 @@ class Shape:
     onset : ndarray of int, shape (...,)
         First snapshot that it moves, counted from 0.
     earliest, latest : ndarray of int, shape (...,)
-        Ends of the 95 % set of onsets: gains within 3.84 of the best.
+        Ends of the 95 % set of onsets: gains within 3.84 of the best for a ramp, 7.35 for a step.
     size, sigma : ndarray, shape (...,)
         Size of a step; growth per snapshot of a ramp; in the unit of the fault.
     """
@@ -142,8 +149,8 @@ def change(scores: Array, information: Array, *, level: float = 0.05, tracks: in
     # Sums over what comes after: a ramp that begins at s weighs snapshot u by u - s + 1.
     after_z, after_w = _after(z), _after(w)
     linear_w = _after(after_w)
-    step = _shape(after_z, after_w)
-    ramp = _shape(_after(after_z), 2.0 * _after(linear_w) - linear_w)
+    step = _shape(after_z, after_w, STEP_DROP)
+    ramp = _shape(_after(after_z), 2.0 * _after(linear_w) - linear_w, CLEAR)
     # Bonferroni over onsets, shapes and tracks: gains of neighbouring onsets are correlated, so the true level is lower.
     return Change(step, ramp, float(chdtri(1, level / (2 * n * max(tracks, 1)))))
 
@@ -153,13 +160,13 @@ def _after(values: Array) -> Array:
     return np.asarray(np.cumsum(values[..., ::-1], axis=-1)[..., ::-1])
 
 
-def _shape(score: Array, information: Array) -> Shape:
+def _shape(score: Array, information: Array, drop: float) -> Shape:
     known = information > 0
     safe = np.where(known, information, 1.0)
     gains = np.where(known, score**2 / safe, 0.0)
     best = gains.argmax(axis=-1)
     top = np.take_along_axis(gains, best[..., None], axis=-1)
-    likely = gains >= top - CLEAR
+    likely = gains >= top - drop
     n = gains.shape[-1]
     at = np.take_along_axis(safe, best[..., None], axis=-1)[..., 0]
     any_known = known.any(axis=-1)

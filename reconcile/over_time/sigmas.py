@@ -134,7 +134,9 @@ def audit_of(sequence: Sequence, about: About) -> SigmaAudit:
                 tied.get(i, ()),
             )
         )
-    status, named, hangs_on = "no change", (), ()
+    status = "no change"
+    named: tuple[str, ...] = ()
+    hangs_on: tuple[str, ...] = ()
     together: tuple[tuple[str, float, float], ...] = ()
     if few:
         status = "few"

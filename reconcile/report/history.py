@@ -91,6 +91,8 @@ def _steady(history: History) -> list[str]:
             )
         if history.drifts:
             out.append(wrap("It is not the same throughout, though: see the changes below.", "    "))
+        elif history.levels.outcome == "scale":
+            out.append(wrap("It is not the same at every flow, though: see the flow levels below.", "    "))
         best = s.accounts.standing[0].alternatives if s.accounts and s.accounts.standing else ()
         named = {f.candidate.name for a in best for f in a.faults}
         small = [f.name for f in s.faults if f.name in named and f.kind == "bias" and f.sigmas < 1]
@@ -193,14 +195,21 @@ def drift_in_words(d: Drift, history: History) -> list[str]:
     size = fault_phrase(SizedFault(c, s.size, s.sigma))
     text = f"{size} (± {plain(s.sigma, s.sigma)}) at {_name(history, s.last)}"
     if s.from_the_start:
-        text += f", from the first snapshot on or from one up to {_name(history, s.latest)}."
+        text += (
+            ", from the first snapshot on"
+            if s.latest == s.first
+            else f", from the first to {_name(history, s.latest)} on"
+        )
+        text += "."
     else:
         text += f", since {_name(history, s.onset)} (95 %: {history.labels[s.earliest]} to {history.labels[s.latest]})."
     ahead = abs(s.ramp_gain - s.step_gain)
     if s.shape == "ramp":
         text += f" It grows, by {plain(abs(s.slope), s.slope_sigma)} ± {plain(s.slope_sigma, s.slope_sigma)} {c.unit} a snapshot: a jump fits worse by χ² {ahead:.1f}."
     elif s.shape == "step":
-        text += f" It jumped: steady growth fits worse by χ² {ahead:.1f}."
+        text += (
+            f" It {'stayed the same' if s.from_the_start else 'jumped'}: steady growth fits worse by χ² {ahead:.1f}."
+        )
     else:
         text += f" Whether it grows or jumped cannot be told yet (the two differ by χ² {ahead:.1f}, and 3.84 is clear)."
     if s.alarm is not None:

@@ -85,9 +85,11 @@ def _settled(f: FlowLevels, history: History) -> str:
     text = f"The error is {'constant' if constant else 'proportional'}, {_span(f)} ({fits}): {told[0]}."
     if len(told) > 1:
         text += f" Not excluded: {'; '.join(told[1:])}."
-    against = [m for m in f.rejected if (m.shape == "constant") != constant]
+    mine = {name for c in f.classes for m in c for name in m.names}
+    every = [m for m in f.rejected if (m.shape == "constant") != constant]
+    against = _distinct([m for m in every if mine & set(m.names)] or every)[:3]
     if against:
-        told = [f"{_share(m) if constant else _constant(m)} leaves χ² {m.left:.1f}" for m in _distinct(against)[:3]]
+        told = [f"{_share(m) if constant else _constant(m)} leaves χ² {m.left:.1f}" for m in against]
         text += (
             f" Not {'an error of scale' if constant else 'a leak or a zero offset'}: {', '.join(told)}, limit "
             f"{against[0].limit:.2f}. Without any fault {f.left:.0f} is left."
