@@ -2,6 +2,7 @@
 
 import sys
 
+import iapws
 import numpy as np
 import pytest
 from energy_helpers import adjust, build, network, point, relative_closure
@@ -19,6 +20,11 @@ def test_published_verification_points():
     assert enthalpy.steam(np.array([700 - 273.15]), np.array([300.0]))[0] == pytest.approx(2631.49474, rel=1e-8)
     assert enthalpy.boiling_point(np.array([26.3889776]))[0] == pytest.approx(500 - 273.15, abs=1e-6)
     assert enthalpy.boiling_point(np.array([100.0]))[0] == pytest.approx(584.149488 - 273.15, abs=1e-6)
+
+
+def test_the_library_keeps_to_the_published_volume():
+    # Same report, table 5: v at 300 K and 3 MPa is 0.100215168e-2 m3/kg.
+    assert iapws.IAPWS97(T=300, P=3).v == pytest.approx(0.100215168e-2, rel=1e-8)
 
 
 def test_published_heat_capacity():

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from reconcile_elements.gas import KPA_PER_MMHG, conditions, molar_volume
+from reconcile_perfusion.options import Blood
 
 import reconcile
 
@@ -35,10 +37,27 @@ def test_oxygen_content_and_delivery(write_case):
     # Table in the Postgraduate Medical Journal (read as a search excerpt): Hb 14.0 g/dL, SaO2 0.98, Huefner 1.39,
     # PaO2 13.3 kPa (99.76 mmHg), solubility 0.0225 mL/dL/kPa (0.0030 mL/dL/mmHg): content 19.4 mL/dL; at 4.9 L/min 950 mL/min.
     read = {"Q": 4.9, "Ha": 14.0, "Hv": 14.0, "Sa": 0.98, "Sv": 0.75, "Pa": 99.76, "Pv": 40.0}
-    s = run(write_case, BLOOD, read).snapshot(0)
-    content = s.variable("a.oxygen").adjusted
+    figures = "figures: {bound: circuit.huefner * a.hemoglobin * a.saturation, dissolved: 0.003 * a.pO2}\n"
+    result = run(write_case, BLOOD + figures, read)
+    content = result.snapshot(0).variable("a.oxygen").adjusted
     assert content == pytest.approx(19.37, abs=0.01)
     assert content * 4.9 * 10 == pytest.approx(950.6, abs=1.5)
+    # the table prints 19.1 bound and 0.3 dissolved
+    assert [f.value for f in result.figure_values()] == pytest.approx([19.1, 0.3], abs=0.05)
+
+
+def test_constants_of_the_oxygen_content():
+    # Theory: 4 mol of O2 (22.414 L each at 0 C, 101.325 kPa) on 64458 g of haemoglobin (from memory): 1.39 mL/g; 1.34 to
+    # 1.39 are in use, and 0.0031 mL/dL per mmHg (Cornell paediatric intensive-care page, read as a search excerpt).
+    # 0.0225 mL/dL per kPa (Postgraduate Medical Journal) is 0.0030 per mmHg.
+    theory = 4e3 * molar_volume(conditions("0 C, 101.325 kPa")) / 64458
+    assert theory == pytest.approx(1.391, abs=5e-4)
+    assert pytest.approx(0.0030, abs=5e-6) == 0.0225 * KPA_PER_MMHG
+    blood = Blood(streams=["a"])
+    assert 1.34 <= blood.huefner <= 1.39
+    assert blood.huefner + 2 * blood.huefner_sigma >= theory
+    assert blood.huefner - 2 * blood.huefner_sigma <= 1.34
+    assert blood.solubility == pytest.approx(0.0031)
 
 
 def test_fick(write_case):
@@ -47,8 +66,10 @@ def test_fick(write_case):
     text += "  CA: {reads: a.oxygen, unit: mL/dL, sigma: 0.001 mL/dL}\n  CV: {reads: v.oxygen, unit: mL/dL, sigma: 0.001 mL/dL}\n"
     text += "known: {organ.oxygen_uptake: {value: 250 mL/min}}\n"
     read = {"CA": 20.0, "CV": 15.0, "Ha": np.nan, "Hv": np.nan, "Sa": np.nan, "Sv": np.nan, "Pa": np.nan, "Pv": np.nan}
+    text += "figures: {extraction: organ.oxygen_uptake / (10 * a.flow * a.oxygen)}\n"  # mL/min per L/min and mL/dL
     result = run(write_case, text, read)
     assert result.snapshot(0).variable("a.flow").adjusted == pytest.approx(5.0, rel=1e-9)
+    assert result.figure_values()[0].value == pytest.approx(0.25, rel=1e-9)
 
 
 def test_the_huefner_number_moves_artery_and_vein_together(write_case):
@@ -79,6 +100,7 @@ meters:
   CBO: {reads: bo.urea, unit: mg/dL, sigma: 1 mg/dL}
 figures:
   clearance: (bi.flow * bi.urea - bo.flow * bo.urea) / bi.urea
+  without_ultrafiltration: bi.flow * (1 - bo.urea / bi.urea)
 """
 
 
@@ -87,7 +109,9 @@ def test_dialyser_clearance_with_ultrafiltration(write_case):
     # UF 15, inlet 100, outlet 30, dialysate 500 free of urea: K 214.5, dialysate out 515 mL/min at 41.65.
     result = run(write_case, DIALYSER, {"QBI": 300.0, "QDI": 500.0, "UF": 15.0, "CBI": 100.0, "CBO": 30.0})
     s = result.snapshot(0)
-    assert result.figure_values()[0].value == pytest.approx(214.5, abs=5e-3)
+    clearance, without = result.figure_values()
+    assert clearance.value == pytest.approx(214.5, abs=5e-3)
+    assert without.value == pytest.approx(210.0, abs=5e-3)  # what is missed when ultrafiltration is forgotten
     assert s.variable("do.flow").adjusted == pytest.approx(515.0)
     assert s.variable("do.urea").adjusted == pytest.approx(41.65, abs=5e-3)
 
