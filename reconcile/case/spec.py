@@ -252,3 +252,7 @@ class CaseSpec:
     where: Callable[..., Location]
     campaign: CampaignSpec | None = None
     trajectory: TrajectorySpec | None = None
+
+    def beside(self, name: str) -> str:
+        """Where a file that the case names is: beside the case; the URL of a database stays as it is."""
+        return name if "://" in name else str(self.path.parent / name)

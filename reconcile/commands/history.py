@@ -15,10 +15,10 @@ __all__ = ["history"]
 @click.command()
 @case_argument
 @plugin_option
-@click.option("--readings", type=click.Path(path_type=Path), help="Readings, instead of those the case names.")
+@click.option("--readings", metavar="FILE", help="Readings (a file, pattern or URL), instead of those the case names.")
 @click.option("--json", "as_json", is_flag=True, help="Print as JSON.")
 @errors_to_exit_codes
-def history(case: Path, plugins: tuple[Path, ...], readings: Path | None, as_json: bool) -> None:
+def history(case: Path, plugins: tuple[Path, ...], readings: str | None, as_json: bool) -> None:
     """Say what all snapshots of CASE tell together: small steady faults, drifts, sigmas, flow levels."""
     from ..report.history import render_history
     from ..run import load_case

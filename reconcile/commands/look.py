@@ -15,9 +15,9 @@ __all__ = ["check", "domains", "schema"]
 @click.command()
 @case_argument
 @plugin_option
-@click.option("--readings", type=click.Path(path_type=Path), help="Readings, instead of those the case names.")
+@click.option("--readings", metavar="FILE", help="Readings (a file, pattern or URL), instead of those the case names.")
 @errors_to_exit_codes
-def check(case: Path, plugins: tuple[Path, ...], readings: Path | None) -> None:
+def check(case: Path, plugins: tuple[Path, ...], readings: str | None) -> None:
     """Read and check everything of CASE; run nothing."""
     from ..report.echo import describe_case
     from ..run import load_case

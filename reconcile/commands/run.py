@@ -20,7 +20,7 @@ __all__ = ["run"]
 @click.command()
 @case_argument
 @plugin_option
-@click.option("--readings", type=click.Path(path_type=Path), help="Readings, instead of those the case names.")
+@click.option("--readings", metavar="FILE", help="Readings (a file, pattern or URL), instead of those the case names.")
 @click.option("--out", type=click.Path(path_type=Path), help="Write the corrected data set into this folder.")
 @click.option("--parquet", is_flag=True, help="Write the tables of --out as Parquet, too.")
 @click.option("--xlsx", is_flag=True, help="Write the tables of --out as one workbook for people, too.")
@@ -43,7 +43,7 @@ __all__ = ["run"]
 def run(
     case: Path,
     plugins: tuple[Path, ...],
-    readings: Path | None,
+    readings: str | None,
     out: Path | None,
     parquet: bool,
     xlsx: bool,
@@ -120,7 +120,7 @@ def run(
 
 def _follow(
     loaded: Case,
-    readings: Path | None,
+    readings: str | None,
     out: Path | None,
     reasons: dict[str, str],
     formats: tuple[str, ...],

@@ -15,13 +15,13 @@ if TYPE_CHECKING:
 __all__ = ["describe_case"]
 
 
-def describe_case(case: Case, readings: Path | None = None) -> str:
+def describe_case(case: Case, readings: str | Path | None = None) -> str:
     """Describe a checked case and, where there are any, its readings.
 
     Parameters
     ----------
     case : Case
-    readings : path, optional
+    readings : path or URL, optional
         Instead of those the case names.
 
     Returns
