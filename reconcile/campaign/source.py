@@ -76,7 +76,7 @@ def _from_file(
                     Location(file=str(spec.path)),
                 )
             )
-        readings = spec.path.parent / str(named.get("file") if named else spec.readings)
+        readings = spec.beside(str(named.get("file") if named else spec.readings))
     from ..readings.sources import read_readings
 
     given = {k: v for k, v in named.items() if k != "file"}
@@ -119,7 +119,7 @@ def read_samples(spec: CaseSpec, table: ReadingsTable, readers: Mapping[str, Any
 
     headers = {plan.of(t).column or t: t for t in plan.samples}
     found = read_readings(
-        spec.path.parent / plan.lab.file, readers=readers, expected=tuple(headers), **plan.lab.options
+        spec.beside(str(plan.lab.file)), readers=readers, expected=tuple(headers), **plan.lab.options
     )
     lab = replace(
         found,
