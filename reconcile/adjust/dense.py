@@ -65,6 +65,8 @@ class Adjuster:
         Directions in which absent readings leave the measured variables undetermined.
     turn, gain : ndarray
         Parity space and spread that absent readings leave.
+    debias : ndarray, shape (number freed, r)
+        Biases of the absent readings, in sigmas, from a parity vector.
     sharp : callable or None
         From right-hand sides of the original rows, (m,), offset and target where `transform` would lose digits.
     """
@@ -84,6 +86,7 @@ class Adjuster:
     through: Array
     drift: Array
     turn: Array
+    debias: Array
     gain: Array
     sharp: Callable[[Array], tuple[Array, Array]] | None = None
 
@@ -160,9 +163,7 @@ class Adjuster:
         t = self._parity(y, target)
         if self.freed.size:
             # An absent reading is a reading with an unknown bias: remove the bias that the checks ask for.
-            own = self.q1[self.freed].T / self.sigma[self.freed]
-            bias = np.linalg.pinv(own, rcond=1e-9) @ t
-            y[:, self.freed] -= bias.T
+            y[:, self.freed] -= (self.debias @ t).T * self.sigma[self.freed]
             t = self._parity(y, target)
         x = y - (self.q1 @ t).T * self.sigma
         x -= (self.q1 @ self._parity(x, target)).T * self.sigma
@@ -226,8 +227,9 @@ class Adjuster:
         u, s, vt = np.linalg.svd(unit, full_matrices=True)
         rank = int(np.sum(s > 1e-7 * max(1.0, s[0] if s.size else 0.0)))
         turn = vt[rank:].T
-        inverse = np.linalg.pinv((own / self.sigma[index][:, None]).T, rcond=1e-9)  # bias = inverse @ t
-        gain = (self.q2[index] / self.sigma[index][:, None]).T @ inverse
+        # What no check sees has only rounding for a signature, and an inverse of rounding is garbage: zero instead.
+        debias = (u[:, :rank] / s[:rank]) @ vt[:rank] / np.where(seen, norm, 1.0)[:, None]
+        gain = self.q2[index].T @ debias
         # Directions of bias that no check sees leave everything that depends on them undetermined.
         lost = u[:, rank:] / np.where(seen, norm, 1.0)[:, None]
         lost /= np.linalg.norm(lost, axis=0)
@@ -237,7 +239,7 @@ class Adjuster:
         whole = np.linalg.norm(self.q1, axis=1) ** 2
         redundant = self.redundant & (left > 1e-10 * whole)
         redundant[index] = False
-        return replace(self, redundant=redundant, freed=index, drift=drift, turn=turn, gain=gain)
+        return replace(self, redundant=redundant, freed=index, drift=drift, turn=turn, debias=debias, gain=gain)
 
 
 def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
@@ -293,7 +295,7 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
 
     else:
         through = elimination.recover @ a_m
-        whole = (np.abs(elimination.recover) @ np.abs(a_m)).max(axis=1, initial=0.0, keepdims=True)
+        whole = np.abs(elimination.recover).max(axis=1, initial=0.0, keepdims=True) * np.abs(a_m).max(initial=0.0)
         through = through - through[:, pivots] @ form
     through[np.abs(through) < 1e-14 * whole] = 0.0
     redundant = np.any(form != 0, axis=0)
@@ -327,6 +329,7 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
         through=through,
         drift=np.zeros((n, 0)),
         turn=np.eye(r),
+        debias=np.zeros((0, r)),
         gain=np.zeros((n - r, 0)),
         sharp=sharp,
     )
