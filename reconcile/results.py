@@ -212,7 +212,7 @@ class Result:
 
     def classes(self, snapshot: int) -> tuple[str, ...]:
         """Class of each variable in one snapshot, see `CLASSES`."""
-        return classes_of(self.model, self.group(snapshot))
+        return classes_of(self.model_of(snapshot), self.group(snapshot))
 
     def group(self, snapshot: int) -> Group:
         """Linearisation that a snapshot belongs to.

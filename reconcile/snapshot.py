@@ -322,7 +322,7 @@ def look(result: Result, index: int) -> Snapshot:
     return Snapshot(
         label=result.labels[index],
         readings=readings,
-        variables=_variables(result, group, x),
+        variables=_variables(model, group, x),
         balances=balances,
         faults=faults,
         test=test,
@@ -463,10 +463,9 @@ def _words(model: Model, accounts: Accounts | None, tests: SignatureTests) -> di
     return named
 
 
-def _variables(result: Result, group: Group, x: Array) -> tuple[VariableLine, ...]:
+def _variables(model: Model, group: Group, x: Array) -> tuple[VariableLine, ...]:
     from .results import classes_of
 
-    model = result.model
     classes = classes_of(model, group)
     meters: dict[str, list[str]] = {}
     absent = set(group.absent.tolist())

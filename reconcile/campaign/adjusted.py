@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -10,6 +10,8 @@ import numpy.typing as npt
 
 from ..adjust.table import Table, adjust_table
 from ..errors import SolveError
+from ..refit import problem_of
+from .line_ups import closed_columns, silent
 
 if TYPE_CHECKING:
     from ..model import Model
@@ -40,18 +42,32 @@ def adjust_prepared(case: Case, prepared: Prepared, base: Array, settings: Any) 
     Table
         Of all N snapshots; those left out are among the failed ones, with code `LEFT_OUT`.
     """
-    rows = np.flatnonzero(prepared.used)
     own, more = _of_all_readings(case.model, prepared)
-    table = adjust_table(
-        case.problem(settings),
-        base[rows],
-        names=case.name_of_column,
-        row_names=case.name_of_row,
-        sigmas=None if own is None else own[rows],
-        scatter=None if more is None else more[rows],
-    )
+    used = np.flatnonzero(prepared.used)
+    networks: dict[tuple[str, ...], list[int]] = {}
+    for i in used.tolist():
+        networks.setdefault(prepared.closed.get(i, ()), []).append(i)
+    parts = []
+    for streams, numbers in networks.items():
+        rows = np.array(numbers, dtype=np.int64)
+        problem, readings = case.problem(settings), base[rows]
+        if streams:
+            closed = closed_columns(case.model, streams)
+            problem = problem_of(replace(case.model, fixed={**case.model.fixed, **closed}), settings)
+            readings = readings.copy()
+            readings[:, silent(case.model, closed)] = np.nan
+        table = adjust_table(
+            problem,
+            readings,
+            names=case.name_of_column,
+            row_names=case.name_of_row,
+            sigmas=None if own is None else own[rows],
+            scatter=None if more is None else more[rows],
+        )
+        parts.append(table.placed(rows, len(base)))
     left = {i: SolveError(entry.reason, code=LEFT_OUT) for i, entry in prepared.left_out.items()}
-    return table.placed(rows, len(base), left)
+    failed = {i: error for part in parts for i, error in part.failed.items()}
+    return Table(tuple(g for part in parts for g in part.groups), {**failed, **left}, len(base))
 
 
 def _of_all_readings(model: Model, prepared: Prepared) -> tuple[Array | None, Array | None]:
@@ -68,9 +84,10 @@ def _of_all_readings(model: Model, prepared: Prepared) -> tuple[Array | None, Ar
     return out[0], out[1]
 
 
-def model_of(model: Model, prepared: Prepared, index: int, closed: Mapping[int, float] | None = None) -> Model:
+def model_of(model: Model, prepared: Prepared, index: int) -> Model:
     """Model of one snapshot, with the sigmas of its cells and the streams that its line-up closes."""
     count = len(model.meters)
+    closed = closed_columns(model, prepared.closed[index]) if index in prepared.closed else {}
     own = np.full(count, np.nan) if prepared.table.sigma is None else prepared.table.sigma[index]
     more = np.zeros(count) if prepared.table.scatter is None else np.nan_to_num(prepared.table.scatter[index])
     if not np.isfinite(own).any() and not more.any() and not closed:

@@ -24,6 +24,7 @@ from ..readings.time_order import seconds_of
 from ..readings.validity import SignalLimits, check_signals, run_mask
 from ..readings.windows import LeftOut, WindowRules, Windows, ZeroCheck, make_windows, sigma_of_mean
 from .decisions import Entry, in_words_of_the_case, of_counter, of_notice
+from .line_ups import line_up_of
 from .spec import CampaignSpec, Condition, WindowSpec
 
 __all__ = ["Alternative", "Interval", "Prepared", "prepare"]
@@ -89,8 +90,10 @@ class Prepared:
     alternatives : tuple of Alternative
     segments : mapping of tag to (W,) int64
         Number of recalibrations before each snapshot.
-    states : mapping of line-up to (W,) bool
-        Snapshots in which each line-up holds.
+    closed : mapping of snapshot to tuple of str
+        Streams that a line-up closes there.
+    line_ups : mapping of snapshot to str
+        Names of the line-ups that hold there.
     """
 
     table: ReadingsTable
@@ -102,7 +105,8 @@ class Prepared:
     intervals: tuple[Interval, ...] = ()
     alternatives: tuple[Alternative, ...] = ()
     segments: Mapping[str, npt.NDArray[np.int64]] = field(default_factory=dict)
-    states: Mapping[str, npt.NDArray[np.bool_]] = field(default_factory=dict)
+    closed: Mapping[int, tuple[str, ...]] = field(default_factory=dict)
+    line_ups: Mapping[int, str] = field(default_factory=dict)
 
     @property
     def used(self) -> npt.NDArray[np.bool_]:
@@ -551,6 +555,11 @@ class _Preparation:
                         words = f"line-up {name!r} names window {wanted!r}, which there is not"
                         raise InputError(Problem("unknown-window", words, did_you_mean(wanted, labels)))
                 shown[name] = np.isin(labels, line_up.windows)
+            holds = int(shown[name].sum())
+            words = f"line-up {name!r} holds in {holds} of {len(table)} snapshots: {', '.join(line_up.closed)} closed"
+            table = replace(table, notices=(*table.notices, Notice("line-up", words)))
+            self.log.append(Entry("line-up", amount=float(holds), words=words))
+        closed, names = line_up_of(self.spec.line_ups, shown, len(table))
         return Prepared(
             table,
             dict(left_out),
@@ -561,7 +570,8 @@ class _Preparation:
             tuple(intervals),
             tuple(a for a in alternatives if a.snapshot not in left_out),
             windows.segments if windows else {},
-            shown,
+            closed,
+            names,
         )
 
     def _intervals(self, table: ReadingsTable, left_out: Mapping[int, LeftOut]) -> tuple[ReadingsTable, list[Interval]]:

@@ -20,7 +20,7 @@ __all__ = ["CELL_COLUMNS", "CELL_STATUSES", "campaign_tables", "cell_table"]
 
 CELL_COLUMNS = (
     "snapshot", "start", "end", "meter", "item", "unit", "raw", "lower", "upper", "sigma_before", "corrected",
-    "sigma_after", "status", "reason", "input", "case", "domains",
+    "sigma_after", "status", "reason", "line_up", "input", "case", "domains",
 )  # fmt: skip
 
 CELL_STATUSES = (
@@ -124,7 +124,7 @@ def _rows_of(result: Result, i: int) -> list[tuple[Any, ...]]:
     provenance = result.provenance
     domains = " ".join(f"{k} {v}" for k, v in provenance.get("domains", {}).items())
     made_of = prepared.hashes[i] if prepared.hashes else ""
-    tail = (made_of, str(provenance.get("case_sha256", ""))[:16], domains)
+    tail = (prepared.line_ups.get(i, ""), made_of, str(provenance.get("case_sha256", ""))[:16], domains)
     head = (result.labels[i], start, end)
     out = [(*head, *cell, *tail) for cell in _meters(result, i)]
     read = {n for k in model.meters for n, _ in model.readings[int(k)].reads if len(model.readings[int(k)].reads) == 1}
@@ -206,15 +206,17 @@ def _meters(result: Result, i: int) -> list[tuple[Any, ...]]:
 def _status(result: Result, i: int, tag: str, k: int, absent: bool, known: bool, reason: str) -> tuple[str, str]:
     group = result.group(i)
     decision = result.decisions.get(i)
+    j = result.tags.index(tag)
     granted = () if decision is None else [f.candidate.name for f in decision.alternative.faults]
     if tag in granted and decision is not None:
         return "calculated" if known else "cannot-be-calculated", decision.words
     if absent:
         why = f"left out: {result.excluded[tag]}" if tag in result.excluded else reason or "no value"
+        if result.prepared is not None and i in result.prepared.closed and np.isfinite(result.readings[i, j]):
+            why = f"{', '.join(result.prepared.closed[i])} closed: it tells of its zero only"
         return "calculated" if known else "cannot-be-calculated", why
     prepared = result.prepared
     assert prepared is not None
-    j = result.tags.index(tag)
     kind = "measured"
     if any(c.snapshot == i and c.tag == tag and c.closed for c in prepared.intervals):
         kind = "interval"

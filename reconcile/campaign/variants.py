@@ -64,10 +64,15 @@ def variant(result: Result, index: int, cells: Mapping[str, Cell], label: str = 
     changed = replace(prepared, table=replace(table, sigma=own, scatter=more))
     model = model_of(result.model, changed, index)
     taken = readings.copy()
+    gone = result.group(index).absent
     taken[0, [j for j, t in enumerate(result.tags) if t in result.excluded]] = np.nan
+    base = model.to_base(taken)
+    # What is absent stays so (a closed stream's meter), unless it is the cell that is tried.
+    tried = [model.tags.index(t) for t in cells]
+    base[0, [int(k) for k in gone if k not in tried]] = np.nan
     solved = adjust_table(
         problem_of(model, result.settings),
-        model.to_base(taken),
+        base,
         names=lambda c: model.names[c],
         row_names=lambda r: model.row_names[r],
     )

@@ -7,6 +7,7 @@ from collections import Counter
 from typing import TYPE_CHECKING
 
 from ..campaign.adjusted import LEFT_OUT
+from ..campaign.line_ups import zero_of_closed
 from ..campaign.variants import bound_checks, moves, what_ifs
 from .layout import table, wrap
 from .numbers import plain, signed
@@ -139,7 +140,7 @@ def _bounds(result: Result, snapshot: int | None) -> list[str]:
 
 
 def _zero(result: Result, snapshot: int | None) -> list[str]:
-    checks = result.prepared.zero_checks if result.prepared else ()
+    checks = (*(result.prepared.zero_checks if result.prepared else ()), *zero_of_closed(result))
     if not checks:
         return []
     units = {r.tag: r.unit for r in result.model.readings}
@@ -150,7 +151,7 @@ def _zero(result: Result, snapshot: int | None) -> list[str]:
         rows.append(
             (z.label, z.tag, units.get(z.tag, ""), signed(z.mean, spread), plain(z.sigma, z.sigma) if known else "-")
         )
-    out = ["", "ZERO CHECKS (what meters show while the plant is off)"]
+    out = ["", "ZERO CHECKS (what meters show while nothing flows)"]
     out.append(table(("WINDOW", "meter", "unit", "offset", "±"), rows, left=(0, 1, 2)))
     if len(checks) > _MANY:
         out.append(wrap(f"{len(checks) - _MANY} more; log.csv of --out lists them."))

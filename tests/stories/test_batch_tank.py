@@ -113,7 +113,7 @@ def test_a_counter_without_windows_or_with_a_rate_unit_alone_is_refused(tank):
     case = tank / "case.yaml"
     text = case.read_text()
     case.write_text(text.replace("windows: {whole: true, scatter: included}\n", ""))
-    with pytest.raises(reconcile.InputError, match="add windows:, e.g. windows: {whole: true}"):
+    with pytest.raises(reconcile.InputError, match=r"add windows:, e\.g\. windows: \{whole: true\}"):
         reconcile.load_case(tank)
     case.write_text(text.replace("unit: kg\n    sigma: 0.67 kg", "unit: kg/h\n    sigma: 0.67 kg/h"))
     with pytest.raises(reconcile.InputError, match="pulse of the counter of 'feed_total' is missing"):

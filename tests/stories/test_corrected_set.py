@@ -50,8 +50,8 @@ def test_every_window_and_quantity_has_a_status(back):
     assert back.readings["status"].notna().all()
     for number in (1, 2, 3, 4):
         assert set(of_window(back, number)["status"]) == {"measured-corrected"}
-    assert of_window(back, 5)["status"].to_dict() == {t: "measured-corrected" for t in TAGS} | {"P": "calculated"}
-    assert of_window(back, 8)["status"].to_dict() == {t: "measured-corrected" for t in TAGS} | {"R": "calculated"}
+    assert of_window(back, 5)["status"].to_dict() == dict.fromkeys(TAGS, "measured-corrected") | {"P": "calculated"}
+    assert of_window(back, 8)["status"].to_dict() == dict.fromkeys(TAGS, "measured-corrected") | {"R": "calculated"}
     assert set(of_window(back, 6)["status"]) == {"no-balance"}
     assert set(of_window(back, 7)["status"]) == {"no-balance"}
     # No number stands where there is no balance, and no number is missing elsewhere.
@@ -62,7 +62,9 @@ def test_every_window_and_quantity_has_a_status(back):
 def test_the_reasons_of_what_was_left_out(result, back):
     off, moving = of_window(back, 6), of_window(back, 7)
     assert off["reason"].str.startswith("off: the plant is off").all()
-    assert off["raw"].to_dict() == pytest.approx(dict(zip(TAGS, [0.4, 0.1, -0.2, 0.0, 0.1, 0.0], strict=True)), abs=1e-9)
+    assert off["raw"].to_dict() == pytest.approx(
+        dict(zip(TAGS, [0.4, 0.1, -0.2, 0.0, 0.1, 0.0], strict=True)), abs=1e-9
+    )
     assert moving["reason"].str.startswith("not steady: F rises 2.4 kg/h per hour (p < 0.001)").all()
     zero = next(z for z in result.prepared.zero_checks if z.tag == "F")
     assert zero.mean == pytest.approx(0.4)
@@ -113,7 +115,9 @@ def test_where_each_row_comes_from(result, back, folder):
     assert row["reason"].startswith("excluded R")
     assert row["domains"] == f"fluid {result.provenance['domains']['fluid']}"
     assert row["case"] == hashlib.sha256((folder / "case.yaml").read_bytes()).hexdigest()[:16]
-    assert back.summary["provenance"]["readings_sha256"] == hashlib.sha256((folder / "log.csv").read_bytes()).hexdigest()
+    assert (
+        back.summary["provenance"]["readings_sha256"] == hashlib.sha256((folder / "log.csv").read_bytes()).hexdigest()
+    )
 
 
 def test_two_runs_give_the_same_bytes(folder, tmp_path):
