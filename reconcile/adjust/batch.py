@@ -426,12 +426,9 @@ class Batch:
         if found is None:
             index = np.flatnonzero(absent)
             a = self.adjuster.without(index)
-            own = self.adjuster.q1[index].T / self.adjuster.sigma[index]
             left = np.linalg.norm(a.q1 @ a.turn, axis=1)
             scale = np.where(a.redundant, 1.0 / np.where(left > 0, left, 1.0), 0.0)
-            found = _Exact(
-                np.asarray(np.linalg.pinv(own, rcond=1e-9), dtype=np.float64), a.checks, scale, self._sigmas(a)
-            )
+            found = _Exact(self.adjuster.sigma[index, None] * a.debias, a.checks, scale, self._sigmas(a))
             if len(self._remembered) >= REMEMBERED:
                 self._remembered.clear()
             self._remembered[key] = found
