@@ -192,6 +192,7 @@ class History:
             "optimal": bool(o.optimal),
             "largest_violation": _number(float(np.nanmax(o.violation, initial=0.0))),
             "linearised": o.linearised,
+            "snapshots_with_several_optima": [self.labels[i] for i in np.flatnonzero(~o.unique)],
             "snapshots_that_differ": [self.labels[i] for i in np.flatnonzero(o.differs)],
             "largest_difference_in_sigmas": worst,
         }

@@ -54,6 +54,9 @@ class Robust:
         What the readings would have to be lowered by, in sigmas, for least squares to give the same values.
     violation : ndarray, shape (N,)
         Largest violation of the optimality conditions, in sigmas.
+    unique : ndarray of bool, shape (N,)
+        False where other values have the same Huber loss: readings at the bend whose signatures are dependent can
+        share a gross error in more than one way. True for the other losses, whose optimum is a local one anyway.
     steps : int
         Rounds that the slowest snapshot needed.
     """
@@ -61,6 +64,7 @@ class Robust:
     residual: Array
     shift: Array
     violation: Array
+    unique: Bools
     steps: int
 
     @property
@@ -140,7 +144,22 @@ def huber(parity: Array, projector: Array) -> Robust:
             residual[rows[left]], more = _newton(score[left], free)
             used += more
         steps = max(steps, used)
-    return Robust(residual, residual - psi(residual, "huber"), _violation(residual, t, g, "huber"), steps)
+    shift = residual - psi(residual, "huber")
+    return Robust(residual, shift, _violation(residual, t, g, "huber"), _unique(residual, g), steps)
+
+
+def _unique(residual: Array, g: Array) -> Bools:
+    """Whether the signatures of the readings at the bend or beyond are independent, shape (N,)."""
+    out = np.ones(len(residual), dtype=bool)
+    beyond = (np.abs(residual) >= HUBER - 1e-9) & (np.linalg.norm(g, axis=1) > 1e-12)
+    size = beyond.sum(axis=1)
+    out[size > g.shape[1]] = False
+    for k in np.unique(size[(size > 1) & (size <= g.shape[1])]):
+        rows = np.flatnonzero(size == k)
+        chosen = g[np.nonzero(beyond[rows])[1].reshape(-1, k)]
+        unit = chosen / np.linalg.norm(chosen, axis=2, keepdims=True)
+        out[rows] = np.linalg.svd(unit, compute_uv=False)[:, -1] > 1e-6
+    return out
 
 
 def _free_directions(g: Array) -> Array:
@@ -262,7 +281,7 @@ def _redescend(parity: Array, projector: Array, loss: Loss) -> Robust:
         residual[rows], used = _downhill(residual[rows], free, loss)
         steps = max(steps, used)
     shift = residual - psi(residual, loss)
-    return Robust(residual, shift, _violation(residual, t, g, loss), steps)
+    return Robust(residual, shift, _violation(residual, t, g, loss), np.ones(len(t), dtype=bool), steps)
 
 
 def _downhill(residual: Array, free: Array, loss: Loss) -> tuple[Array, int]:

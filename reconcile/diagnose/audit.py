@@ -252,8 +252,8 @@ def _deviance(factor: Array, counts: Array, share: Array, squares: Array) -> Arr
 def _profile(counts: Array, share: Array, squares: Array, drop: float) -> tuple[float, float, float, float]:
     """Gain, factor and interval of one reading by likelihood; the factor is searched from 0 to 1000."""
 
-    def at(x: Array) -> Array:
-        return _deviance(x, counts, share, squares)
+    def at(x: Array | float) -> Array:
+        return _deviance(np.asarray(x), counts, share, squares)
 
     def rises(x: float) -> bool:
         """Whether the deviance grows with the factor."""
@@ -281,11 +281,11 @@ def _profile(counts: Array, share: Array, squares: Array, drop: float) -> tuple[
     return max(-bottom, 0.0), float(top), float(low), float(high)
 
 
-def _crossing(at: Callable[[Array], Array], outside: float, inside: float, level: float) -> float:
+def _crossing(at: Callable[[float], Array], outside: float, inside: float, level: float) -> float:
     """Factor between two at which the deviance crosses a level."""
     for _ in range(_STEPS):
         middle = 0.5 * (outside + inside)
-        if at(np.asarray(middle)) > level:
+        if at(middle) > level:
             outside = middle
         else:
             inside = middle

@@ -31,6 +31,8 @@ class SecondOpinion:
         How far each reading is off by this estimate beyond what it influences it by, in sigmas; 0 for most.
     violation : ndarray, shape (N,)
         Of the optimality conditions, in sigmas; nan where there is no check.
+    unique : ndarray of bool, shape (N,)
+        False where other values fit as well by this loss.
     linearised : bool
         Whether balances hold products, so that the estimate is that of one linearisation at the adjusted values.
     """
@@ -42,6 +44,7 @@ class SecondOpinion:
     difference: Array
     pulled: Array
     violation: Array
+    unique: npt.NDArray[np.bool_]
     linearised: bool
 
     @property
@@ -62,6 +65,7 @@ def second_opinion_of(sequence: Sequence, loss: Loss) -> SecondOpinion:
     shown, n = model.shown, result.size
     values, difference = np.full((n, shown.size), np.nan), np.full((n, shown.size), np.nan)
     pulled, violation = np.full((n, model.meters.size), np.nan), np.full(n, np.nan)
+    unique = np.ones(n, dtype=bool)
     for p in sequence.parts:
         g = p.group
         projector = (g.signatures * g.sigma).T
@@ -77,5 +81,8 @@ def second_opinion_of(sequence: Sequence, loss: Loss) -> SecondOpinion:
         difference[p.rows] = np.where(known, ratio, np.nan)
         pulled[p.rows] = found.shift[:, model.meters]
         violation[p.rows] = found.violation
+        unique[p.rows] = found.unique
     linear = all(p.group.equations.is_linear for p in sequence.parts)
-    return SecondOpinion(loss, result.variables, result.units, values, difference, pulled, violation, not linear)
+    return SecondOpinion(
+        loss, result.variables, result.units, values, difference, pulled, violation, unique, not linear
+    )

@@ -300,6 +300,11 @@ def _second_opinion(history: History) -> list[str]:
             moved = np.nan_to_num(np.abs(o.pulled[i]))
             if moved.max(initial=0.0) > 0:
                 text += f" There {history.result.tags[int(moved.argmax())]} has lost most of its pull."
+        several = int((~o.unique).sum())
+        if several:
+            text += (
+                f" In {several} of the snapshots other values fit as well: several readings share a gross error there."
+            )
         if not o.optimal:
             bad = int(np.sum(o.violation > 1e-7))
             text += f" In {bad} snapshots the conditions of an optimum do not hold (off by up to {np.nanmax(o.violation):.1g} sigma)."

@@ -185,7 +185,7 @@ def test_all_sigmas_too_large_is_one_factor_for_all():
 def test_a_steady_fault_does_not_count_about_the_mean_nor_a_drift_in_pairs():
     rng = np.random.default_rng(14)
     parity = rng.normal(size=(200, 3))
-    shifted, sliding = parity + [3.0, 0, 0], parity + np.linspace(0, 8, 200)[:, None] * [1.0, 0, 0]
+    shifted, sliding = parity + np.array([3.0, 0, 0]), parity + np.outer(np.linspace(0, 8, 200), [1.0, 0, 0])
     assert not audit([scatter(shifted, SKID.biases, SKID.sigma)]).band_holds
     assert audit([scatter(shifted, SKID.biases, SKID.sigma, about="mean")]).band_holds
     assert not audit([scatter(sliding, SKID.biases, SKID.sigma, about="mean")]).band_holds
