@@ -14,7 +14,7 @@ import scipy.sparse as sp
 from reconcile import Expression, System
 
 from .faults import Faults
-from .layout import REDUCTION, NodePlan, Plan, StreamPlan
+from .plan import REDUCTION, NodePlan, Plan, StreamPlan
 from .reactions import CHARGE
 from .streams import write_streams
 from .vector import Key, Terms, Vector, sparse_rows

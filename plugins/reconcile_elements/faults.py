@@ -8,8 +8,9 @@ from fractions import Fraction
 from reconcile import Expression, System
 
 from .formula import Formula
-from .layout import Plan, StreamPlan
-from .reactions import degree_of_reduction
+from .plan import Plan, StreamPlan
+from .possible import can_form
+from .reduction import degree_of_reduction
 from .refusal import Refusal
 from .vector import Key, Vector
 
@@ -22,8 +23,8 @@ class Faults:
     def __init__(self, plan: Plan, system: System, vector: Vector) -> None:
         unit = plan.options.unit
         self.hidden: dict[str, list[tuple[int, Formula]]] = defaultdict(list)
-        places = [n.name for n in plan.nodes if n.mode == "elements"]
-        for name, formula in plan.hidden.items() if places else ():
+        for name, formula in plan.hidden.items():
+            places = [n.name for i, n in enumerate(plan.nodes) if n.mode == "elements" and can_form(plan, i, formula)]
             kind = f"hidden_{name}"
             block = system.faults(
                 kind,

@@ -1,163 +1,28 @@
-"""What compositions imply: balanced reactions, independent reactions and degrees of reduction.
-
-All of it is exact (fractions of whole numbers), so that "balanced" and "independent" are yes or no, and not a
-matter of a tolerance.
-"""
+"""What compositions imply: balanced reactions and independent reactions, exactly, so that both are yes or no."""
 
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from fractions import Fraction
-from math import gcd, lcm
 
 from reconcile import did_you_mean
 
-from .formula import Formula, parse_formula
+from .exact import null_space
+from .formula import Formula
 from .refusal import Mistake, Refusal
 
 __all__ = [
     "CHARGE",
-    "NITROGEN_SOURCES",
     "composition_matrix",
-    "degree_of_reduction",
     "imbalance",
     "independent_reactions",
-    "null_space",
     "parse_reaction",
-    "rank",
-    "reduction_weights",
     "require_balanced",
 ]
 
 CHARGE = "charge"
 """Name of the conserved quantity that is not an element."""
-
-# Reference compounds have degree of reduction zero: they neither give nor take electrons. Where an element has one
-# usual end state in aerobic culture it stands here; nitrogen has three, and must be stated.
-_REFERENCES = {
-    "H": "H+",
-    "O": "H2O",
-    "C": "CO2",
-    "P": "H3PO4",
-    "S": "H2SO4",
-    "Na": "Na+",
-    "K": "K+",
-    "Mg": "Mg+2",
-    "Ca": "Ca+2",
-    "Cl": "Cl-",
-}
-
-NITROGEN_SOURCES = {
-    "NH3": "NH3",
-    "NH4": "NH3",
-    "NH4+": "NH3",
-    "NO3": "HNO3",
-    "NO3-": "HNO3",
-    "HNO3": "HNO3",
-    "N2": "N2",
-}
-"""Accepted names of the nitrogen source, and the reference compound each stands for."""
-
-
-def reduction_weights(
-    elements: Iterable[str], nitrogen: str | None = None, references: Mapping[str, str] | None = None
-) -> dict[str, Fraction]:
-    """Return the electrons that each element counts for in a degree of reduction.
-
-    The degree of reduction of a compound is the number of electrons it can give until it has become the reference
-    compounds (CO2, H2O, H+, the nitrogen source, sulfate, phosphate); see e.g. Roels, "Energetics and Kinetics in
-    Biotechnology" (1983), ch. 3. For CHON and an ammonia source the weights are 4, 1, -2, -3.
-
-    Parameters
-    ----------
-    elements : iterable of str
-        Elements that occur. ``charge`` is accepted and always counts -1.
-    nitrogen : {"NH3", "NO3", "N2"}, optional
-        Nitrogen source, the reference for N: -3, +5 or 0.
-    references : mapping of str to str, optional
-        Element to reference compound, where the usual one does not apply, e.g. ``{"S": "H2S", "Fe": "Fe+3"}``.
-
-    Returns
-    -------
-    dict of str to Fraction
-        Electrons per atom; per unit of charge for ``charge``.
-
-    Raises
-    ------
-    Refusal
-        ``nitrogen-source-missing`` when N occurs and its source is not stated, ``nitrogen-source-unknown``,
-        ``reduction-reference-missing`` for an element without a usual end state, ``reduction-reference``.
-    """
-    compounds = {**_REFERENCES, **(references or {})}
-    if nitrogen is not None:
-        if nitrogen not in NITROGEN_SOURCES:
-            raise Refusal(
-                Mistake(
-                    "nitrogen-source-unknown",
-                    f"nitrogen source {nitrogen!r} is not known",
-                    "write NH3, NO3 or N2",
-                )
-            )
-        compounds["N"] = NITROGEN_SOURCES[nitrogen]
-    weights = {CHARGE: Fraction(-1)}
-    for element in ("H", "O", *elements):
-        if element not in weights:
-            weights[element] = _weight(element, compounds, weights)
-    return {element: weights[element] for element in dict.fromkeys(elements)}
-
-
-def _weight(element: str, compounds: Mapping[str, str], known: Mapping[str, Fraction]) -> Fraction:
-    if element not in compounds:
-        if element == "N":
-            raise Refusal(
-                Mistake(
-                    "nitrogen-source-missing",
-                    "the degree of reduction of a compound with nitrogen depends on the nitrogen source",
-                    "which is it: NH3 (N counts -3), NO3 (+5) or N2 (0)? State e.g. nitrogen_source: NH3",
-                )
-            )
-        raise Refusal(
-            Mistake(
-                "reduction-reference-missing",
-                f"{element} has no usual end state to count its electrons from",
-                f"name its reference compound, e.g. references: {{{element}: ...}}",
-            )
-        )
-    compound = parse_formula(compounds[element])
-    others = [e for e in compound.composition if e != element and e not in known]
-    if not compound[element] or others:
-        raise Refusal(
-            Mistake(
-                "reduction-reference",
-                f"{compounds[element]!r} cannot be the reference compound of {element}",
-                f"write a compound of {element} with nothing but H, O and charge",
-            )
-        )
-    rest = sum((known[e] * n for e, n in compound.composition.items() if e != element), -compound.charge)
-    return -rest / compound[element]
-
-
-def degree_of_reduction(
-    formula: Formula | str, nitrogen: str | None = None, references: Mapping[str, str] | None = None
-) -> Fraction:
-    """Return the degree of reduction of one formula unit: electrons per mol, or per C-mol if so written.
-
-    Parameters
-    ----------
-    formula : Formula or str
-        Composition; its charge counts (an electron has degree of reduction 1).
-    nitrogen, references
-        See `reduction_weights`; the nitrogen source must be stated exactly when the formula contains N.
-
-    Returns
-    -------
-    Fraction
-        Electrons per formula unit.
-    """
-    parsed = parse_formula(formula) if isinstance(formula, str) else formula
-    weights = reduction_weights((*parsed.composition, CHARGE), nitrogen, references)
-    return sum((weights[e] * n for e, n in parsed.composition.items()), -parsed.charge)
 
 
 def composition_matrix(
@@ -184,70 +49,6 @@ def composition_matrix(
         found = list(dict.fromkeys(e for f in formulas for e in f.composition))
         conserve = [*found, CHARGE] if any(f.charge for f in formulas) else found
     return tuple(conserve), [[f.charge if name == CHARGE else f[name] for f in formulas] for name in conserve]
-
-
-def rank(matrix: Sequence[Sequence[Fraction]]) -> int:
-    """Return the exact rank of a matrix of fractions."""
-    return len(_reduce(matrix)[1])
-
-
-def null_space(matrix: Sequence[Sequence[Fraction]], columns: int) -> list[list[int]]:
-    """Return a basis of the exact null space in the smallest whole numbers.
-
-    Each basis vector uses as few columns as the echelon form allows: one free column and the pivots. The first
-    non-zero coefficient is negative.
-
-    Parameters
-    ----------
-    matrix : sequence of sequence of Fraction
-        Shape (m, columns); may have no rows.
-    columns : int
-        Number of columns.
-
-    Returns
-    -------
-    list of list of int
-        ``columns - rank`` vectors.
-    """
-    echelon, pivots = _reduce(matrix)
-    basis = []
-    for free in (c for c in range(columns) if c not in pivots):
-        vector = [Fraction(0)] * columns
-        vector[free] = Fraction(1)
-        for row, pivot in zip(echelon, pivots, strict=False):
-            vector[pivot] = -row[free]
-        basis.append(_whole(vector))
-    return basis
-
-
-def _reduce(matrix: Sequence[Sequence[Fraction]]) -> tuple[list[list[Fraction]], list[int]]:
-    """Reduced row echelon form and its pivot columns."""
-    rows = [[Fraction(v) for v in row] for row in matrix]
-    pivots: list[int] = []
-    for column in range(len(rows[0]) if rows else 0):
-        at = len(pivots)
-        found = next((r for r in range(at, len(rows)) if rows[r][column]), None)
-        if found is None:
-            continue
-        rows[at], rows[found] = rows[found], rows[at]
-        lead = rows[at][column]
-        rows[at] = [v / lead for v in rows[at]]
-        for r, row in enumerate(rows):
-            if r != at and row[column]:
-                factor = row[column]
-                rows[r] = [v - factor * p for v, p in zip(row, rows[at], strict=True)]
-        pivots.append(column)
-        if len(pivots) == len(rows):
-            break
-    return rows, pivots
-
-
-def _whole(vector: Sequence[Fraction]) -> list[int]:
-    scale = lcm(*(v.denominator for v in vector))
-    whole = [int(v * scale) for v in vector]
-    common = gcd(*whole)
-    first = next(v for v in whole if v)
-    return [-v // common if first > 0 else v // common for v in whole]
 
 
 def independent_reactions(species: Mapping[str, Formula]) -> tuple[dict[str, int], ...]:

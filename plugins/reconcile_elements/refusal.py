@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
+
+from reconcile import did_you_mean
 
 __all__ = ["Mistake", "Mistakes", "Refusal"]
 
@@ -58,6 +60,17 @@ class Mistakes:
     def extend(self, mistakes: Sequence[Mistake]) -> None:
         """Record several."""
         self.found.extend(m for m in mistakes if m not in self.found)
+
+    def unknown(self, names: Iterable[str], known: Iterable[str], where: str) -> None:
+        """Record every name that is none of the known species."""
+        known = list(known)
+        for name in names:
+            if name not in known:
+                self.add(
+                    "species-unknown",
+                    f"{where}: {name!r} is not one of the species",
+                    did_you_mean(name, known) or f"known: {', '.join(known)}",
+                )
 
     def __bool__(self) -> bool:
         return bool(self.found)

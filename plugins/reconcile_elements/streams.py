@@ -9,9 +9,9 @@ import numpy as np
 from reconcile import Expression, System
 
 from .gas import conditions, molar_volume
-from .layout import Plan, StreamPlan
 from .masses import FARADAY, STANDARD_WEIGHTS, molar_mass
 from .options import unit_parts
+from .plan import Plan, StreamPlan
 from .refusal import Mistake, Refusal
 from .vector import Vector, sparse_rows
 

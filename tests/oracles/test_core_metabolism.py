@@ -8,9 +8,10 @@ from pathlib import Path
 import numpy as np
 import pytest
 import yaml
+from reconcile_elements.exact import rank
 from reconcile_elements.formula import parse_formula
 from reconcile_elements.masses import molar_mass
-from reconcile_elements.reactions import imbalance, parse_reaction, rank
+from reconcile_elements.reactions import imbalance, parse_reaction
 from scipy.optimize import linprog
 from stated_rates import check_alarms, check_intervals, columns
 

@@ -7,18 +7,16 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from reconcile_elements.exact import null_space, rank
 from reconcile_elements.formula import parse_formula
 from reconcile_elements.reactions import (
     composition_matrix,
-    degree_of_reduction,
     imbalance,
     independent_reactions,
-    null_space,
     parse_reaction,
-    rank,
-    reduction_weights,
     require_balanced,
 )
+from reconcile_elements.reduction import degree_of_reduction, reduction_weights
 from reconcile_elements.refusal import Refusal
 
 

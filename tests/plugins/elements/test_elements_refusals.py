@@ -3,7 +3,7 @@
 import pickle
 
 import pytest
-from elements_helpers import CHEMOSTAT, FERMENTATION, build, chemostat
+from elements_helpers import CHEMOSTAT, FERMENTATION, STORY, adjust, build, chemostat
 from pydantic import ValidationError
 from reconcile_elements import Elements
 from reconcile_elements.options import ElementsNode, ElementsOptions, ElementsStream, unit_parts
@@ -136,6 +136,60 @@ def test_cases_that_contradict_themselves(streams, options, says):
 def test_nodes_that_contradict_themselves(node, options, says):
     with pytest.raises(ValueError, match=says):
         chemostat(node=node, **options)
+
+
+@pytest.mark.parametrize(
+    ("hidden", "says"),
+    [
+        ({"sulfide": "H2S"}, "'sulfide' .H2S. holds S, which no species here brings.*hidden-element"),
+        # seven electrons instead of eight, if it were let through: an acetate rate that is 6 % too high
+        (
+            {"acetate": "C2H3O2-"},
+            "charged, but charge is not conserved here; write the formula of its acid.*hidden-charge",
+        ),
+    ],
+)
+def test_products_that_cannot_form(hidden, says):
+    with pytest.raises(ValueError, match=says):
+        chemostat(hidden=hidden)
+
+
+def test_a_product_needs_what_it_is_made_from():
+    streams = {"feed": ("outside", "tank", "sugar"), "out": ("tank", "outside", "polymer")}
+    options = {"species": {"sugar": "CH2O", "polymer": "C2H4O2"}, "hidden": {"alcohol": "C2H6O"}}
+    with pytest.raises(
+        ValueError, match=r"no reaction among the species of any node makes 'alcohol' .*hidden-impossible"
+    ):
+        build(streams, {"tank": {"reacts": True}}, **options)
+    with pytest.raises(ValueError, match=r"alcohol cannot form, since no node reacts freely.*hidden-nowhere"):
+        build({"feed": ("outside", "tank", "sugar"), "out": ("tank", "outside", "sugar")}, {"tank": {}}, **options)
+
+
+def test_a_product_is_offered_only_where_it_can_form():
+    streams = {
+        "feed": ("outside", "first", "glucose"),
+        "air": ("outside", "first", "oxygen"),
+        "gas": ("first", "outside", ["carbon_dioxide", "water"]),
+        "broth": ("first", "second", "glucose"),
+        "out": ("second", "outside", "glucose"),
+    }
+    nodes = {"first": {"reacts": True}, "second": {"reacts": True}}
+    system = build(streams, nodes, species=FERMENTATION, conserve=["C", "H", "O"], hidden={"ethanol": "C2H6O"})
+    assert [n for n in system.names() if "hidden" in n] == ["first.hidden_ethanol"]
+
+
+def test_a_charged_product_beside_ions_is_the_same_as_its_acid():
+    ions = FERMENTATION | {"ammonia": "NH4+", "proton": "H+"}
+    streams = CHEMOSTAT | {"acid": ("reactor", "outside", "proton")}
+    sizes = []
+    for formula in ("C2H3O2-", "C2H4O2"):
+        system = chemostat(streams, species=ions, hidden={"acetate": formula})
+        read = dict(zip(STORY, [(10.05, 0.2), (29.1, 0.9), (29.6, 0.9), (24.4, 1.2)], strict=True))
+        _, solution = adjust(system, read)
+        column = [system.column("reactor.hidden_acetate")]
+        shift = solution.adjuster.signature_of_columns(solution.jacobian[:, column])[:, 0]
+        sizes.append(float(shift @ solution.parity / (shift @ shift)))
+    assert sizes == pytest.approx([2.9864, 2.9864], abs=5e-5)
 
 
 def test_a_forgotten_species_is_noticed():
