@@ -280,9 +280,10 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
     projected[np.linalg.norm(projected, axis=1) <= 1e-10] = 0.0
     form, transform, pivots = independent_form(projected, sigma / unit)
     transform = transform @ elimination.keep
-    sharp = None
+    sharp, exact = None, None
     if max(np.abs(transform).max(initial=0.0), np.abs(elimination.recover).max(initial=0.0)) > LARGE_MULTIPLIER:
         exact = SharpForm.of(a_u, elimination.pivots, a_m, pivots)
+    if exact is not None:
         elimination = exact.elimination(elimination)
         through, form = exact.apply(a_m)
         transform = exact.apply(np.eye(len(a_m)))[1]

@@ -26,6 +26,8 @@ DIGITS = 53
 """Binary digits of a double."""
 SLICES = 6
 """More than twice the digits of a double, below the largest entry of a line."""
+SINGULAR = 1e-13
+"""Pivots smaller than this beside the largest coefficient leave refinement nothing to hold on to."""
 ROUNDING = 1e-14
 """Entries smaller than this beside the largest are zero."""
 
@@ -123,10 +125,13 @@ class SharpForm:
     pivots: Ints
 
     @classmethod
-    def of(cls, unmeasured: Array, pivots: Ints, measured: Array, measured_pivots: Ints) -> SharpForm:
-        """Choose as many rows as there are pivots, and factorise."""
+    def of(cls, unmeasured: Array, pivots: Ints, measured: Array, measured_pivots: Ints) -> SharpForm | None:
+        """Choose as many rows as there are pivots, and factorise; None where they are too near to singular for that."""
         block = np.hstack([unmeasured[:, pivots], measured[:, measured_pivots]])
-        swaps, _, _ = lu(block)
+        swaps, _, upper = lu(block)
+        diagonal = np.abs(np.diag(upper))
+        if diagonal.size < block.shape[1] or diagonal.min() < SINGULAR * np.abs(block).max():
+            return None
         rows = np.argmax(swaps, axis=0)[: block.shape[1]].astype(np.int64)
         return cls(SharpSolver(block[rows]), rows, unmeasured, pivots)
 
