@@ -7,6 +7,7 @@ import sys
 import click
 
 from ._version import __version__
+from .commands.explain import explain
 from .commands.history import history
 from .commands.look import check, domains, schema
 from .commands.new_domain import check_domain, new_domain
@@ -31,5 +32,5 @@ def main() -> None:
             stream.reconfigure(errors="replace")
 
 
-for command in (run, check, coverage, place, rehearse, history, domains, schema, start, new_domain, check_domain):
+for command in (run, explain, check, coverage, place, rehearse, history, domains, schema, start, new_domain, check_domain):
     main.add_command(command)

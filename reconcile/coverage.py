@@ -21,7 +21,7 @@ if TYPE_CHECKING:
     from .model import Model
     from .run import Case
 
-__all__ = ["Coverage", "CoverageLine", "LookAlike", "UnreadLine", "coverage_of"]
+__all__ = ["Coverage", "CoverageLine", "LookAlike", "UnreadLine", "coverage_in", "coverage_of"]
 
 Array = npt.NDArray[np.float64]
 
@@ -168,8 +168,24 @@ def coverage_of(case: Case) -> Coverage:
     InputError
         If expected values are needed and missing.
     """
-    model, settings = case.model, case.parts.spec.settings
-    group = expected_group(case)
+    return coverage_in(case.title, case.model, expected_group(case), case.parts.spec.settings)
+
+
+def coverage_in(title: str, model: Model, group: Group, settings: Any) -> Coverage:
+    """Work out what the readings of one linearisation can show.
+
+    Parameters
+    ----------
+    title : str
+    model : Model
+    group : Group
+    settings : Settings
+        Level and power.
+
+    Returns
+    -------
+    Coverage
+    """
     shifts = signatures(model, group)
     norms = np.linalg.norm(shifts, axis=0)
     kinds = np.array([c.kind for c in model.candidates])
@@ -197,7 +213,7 @@ def coverage_of(case: Case) -> Coverage:
         else ()
     )
     return Coverage(
-        title=case.title,
+        title=title,
         checks=group.checks,
         checks_in_words=checks_in_words(model, group),
         dependent=dependent_in_words(model, group),
@@ -305,6 +321,8 @@ def _lines(
 
 
 def _needs_check(model: Model, group: Group, reading: int) -> tuple[tuple[str, ...], ...]:
+    if reading not in group.present or reading in group.absent:
+        return ()
     position = int(np.flatnonzero(group.present == reading)[0])
     a = group.adjuster
     free = group.jacobian[:, group.free]

@@ -24,6 +24,12 @@ __all__ = ["run"]
 @click.option("--out", type=click.Path(path_type=Path), help="Write the corrected data set into this folder.")
 @click.option("--parquet", is_flag=True, help="Write the tables of --out as Parquet, too.")
 @click.option("--xlsx", is_flag=True, help="Write the tables of --out as one workbook for people, too.")
+@click.option(
+    "--report", is_flag=True, help="Write report.html, one page with everything: into --out, else beside the case."
+)
+@click.option(
+    "--pictures", type=click.Choice(["svg", "png"]), help="Write its figures as files: into the folder 'pictures' there."
+)
 @click.option("--exclude", multiple=True, metavar="TAG", help="Leave a meter out; needs --because, one for each.")
 @click.option("--because", multiple=True, metavar="TEXT", help="Why the meter is left out; stands in the result.")
 @click.option(
@@ -47,6 +53,8 @@ def run(
     out: Path | None,
     parquet: bool,
     xlsx: bool,
+    report: bool,
+    pictures: Literal["svg", "png"] | None,
     exclude: tuple[str, ...],
     because: tuple[str, ...],
     suspects: Literal["flag", "exclude", "compensate"],
@@ -78,6 +86,14 @@ def run(
     reasons = dict(zip(exclude, because, strict=True))
     formats = ("csv", *(["parquet"] if parquet else []), *(["xlsx"] if xlsx else []))
     if loaded.parts.spec.trajectory is not None:
+        if report or pictures:
+            raise InputError(
+                Problem(
+                    "no-report",
+                    "windows that are tied by inventories have no page yet",
+                    "leave --report and --pictures out, or remove the inventories to see each window alone",
+                )
+            )
         return _follow(loaded, readings, out, reasons, formats, strict=strict, as_json=as_json)
     if out is not None and suspects == "flag" and snapshot is None and "xlsx" not in formats:
         from .in_pieces import run_in_pieces
@@ -95,6 +111,14 @@ def run(
             as_json=as_json,
         )
         if code is not None:
+            if report or pictures:
+                raise InputError(
+                    Problem(
+                        "report-too-long",
+                        "a log that is worked through in pieces has no report; the corrected data set is written",
+                        "make a page of a part of it, or of windows of it",
+                    )
+                )
             return code
     result = loaded.run(readings, exclude=reasons, suspects=suspects)
     if as_json:
@@ -115,6 +139,15 @@ def run(
     if out is not None:
         files = write(result, out, formats=formats)
         click.echo(f"Wrote {len(files)} files to {out}.", err=as_json)
+    if report or pictures:
+        from ..report.page import write_figures, write_page
+
+        folder = out if out is not None else loaded.parts.spec.path.parent
+        if report:
+            click.echo(f"Wrote {write_page(result, folder / 'report.html', case=loaded)}.", err=as_json)
+        if pictures:
+            drawn = write_figures(result, folder / "pictures", pictures, case=loaded)
+            click.echo(f"Wrote {len(drawn)} pictures to {folder / 'pictures'}.", err=as_json)
     return FAULTS_FOUND if strict and result.suspicious.any() else DONE
 
 

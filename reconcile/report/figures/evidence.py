@@ -1,0 +1,85 @@
+"""Whether the readings agree, snapshot by snapshot."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from ..canvas import Canvas, Scale
+from ..numbers import plain
+from .axes import frame, label_course, place_of, thinned
+from .sheet import Figure
+
+if TYPE_CHECKING:
+    from ...results import Result
+
+__all__ = ["evidence"]
+
+HEIGHT = 230.0
+
+
+def evidence(result: Result) -> Figure | None:
+    """Draw the objective of every snapshot as a multiple of its limit.
+
+    Parameters
+    ----------
+    result : Result
+
+    Returns
+    -------
+    Figure or None
+        None for one snapshot, or where nothing can be checked.
+    """
+    with np.errstate(invalid="ignore", divide="ignore"):
+        ratio = np.asarray(result.objective / result.limit, dtype=float)
+    if result.size < 2 or not np.isfinite(ratio).any():
+        return None
+    course = place_of(result.labels)
+    c = Canvas(course.width, HEIGHT)
+    top, bottom = 34.0, HEIGHT - 34.0
+    # Far outliers would flatten everything else: a root scale keeps both readable, zero stays zero.
+    highest = max(1.2, float(np.nanmax(ratio)))
+    y = Scale(0.0, highest**0.5 * 1.04, bottom, top)
+    frame(c, course, top, bottom)
+    values = [v for v in (0.0, 1.0, 4.0, 25.0, 100.0, 1000.0, 1e4, 1e5) if v <= highest]
+    for v in values[:2] + values[2:][-3:]:
+        if v != 1.0:
+            c.line((course.left, y(v**0.5)), (course.right, y(v**0.5)), "hair")
+            c.text((course.left - 8, y(v**0.5) + 4), f"{v:g}", "soft", 12, "end")
+    c.line((course.left, y(1.0)), (course.right, y(1.0)), "mark", 1.5, "6 4")
+    c.text((course.left - 8, y(1.0) + 4), "limit", "mark", 12, "end")
+    c.text((course.left, 20), "χ² as a multiple of its limit (root scale)", "soft", 12)
+    spots = thinned(ratio, course)
+    radius = 4.0 if len(spots) <= 80 else 2.5
+    for i in spots:
+        at = (course.x[i], y(max(float(ratio[i]), 0.0) ** 0.5))
+        if ratio[i] > 1.0:
+            c.line((at[0], y(1.0)), at, "mark", 1.5)
+            c.text(
+                (at[0], at[1] - 4), "✗" if result.words[i] == "does not agree" else "!", "mark", 13, "middle", bold=True
+            )
+        else:
+            c.dot(at, radius, "main")
+    for i in result.table.failed:
+        c.text((course.x[i], bottom - 4), "N", "mark", 12, "middle", bold=True)
+    label_course(c, course, bottom)
+    beyond = int((ratio > 1.0).sum())
+    failed = f", {len(result.table.failed)} could not be solved (N)" if result.table.failed else ""
+    description = (
+        f"χ² of {result.size} snapshots as a multiple of its limit; {beyond} lie beyond it{failed}, the largest at "
+        f"{highest:.3g} times the limit in {result.labels[int(np.nanargmax(ratio))]}."
+    )
+    rows = [
+        (
+            result.labels[i],
+            plain(result.objective[i], 0.1),
+            plain(result.limit[i], 0.1),
+            plain(ratio[i], 0.1),
+            result.words[i],
+        )
+        for i in spots
+    ]
+    return Figure(
+        "evidence", "Do the readings agree?", description, c, ("snapshot", "χ²", "limit", "ratio", "word"), rows
+    )

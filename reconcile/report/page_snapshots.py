@@ -1,0 +1,134 @@
+"""Many snapshots on the page: an overview, then each in detail, as far as a page should hold them."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from . import figures
+from .markup import Markup, element, join
+from .numbers import plain
+from .page_snapshot import explanations_part, figure_part, snapshot_parts
+from .tables import html_table
+from .words import MARKS, p_value, short_name, verdict_sentences
+
+if TYPE_CHECKING:
+    from ..results import Result
+
+__all__ = ["MOST_DETAILS", "one_at_a_time", "overview"]
+
+MOST_DETAILS, MOST_WITH_PRODUCTS, MOST_BYTES = 200, 40, 2_500_000
+"""A page holds no more than so many snapshots in detail (fewer where each has to be solved again for its explanations),
+and no more than so much text of them."""
+
+_ORDER = {"does not agree": 0, "watch": 1, "cannot tell": 2, "agrees": 3}
+
+
+def overview(result: Result, shown: frozenset[int]) -> Markup:
+    """All snapshots: evidence over time, a sortable table, the readings over time.
+
+    Parameters
+    ----------
+    result : Result
+    shown : frozenset of int
+        Snapshots that stand in detail elsewhere in the page.
+
+    Returns
+    -------
+    Markup
+    """
+    rows: list[tuple[object, ...]] = []
+    marked = []
+    for i, label in enumerate(result.labels):
+        if i in result.table.failed:
+            marked.append(i)
+            rows.append((label, "-", "-", "-", "-", "✗ not solved", result.table.failed[i].message))
+            continue
+        word = result.words[i]
+        if word in ("watch", "does not agree"):
+            marked.append(i)
+        named = short_name(result.snapshot(i))[0] if result.suspicious[i] else ""
+        rows.append(
+            (
+                element("a", label, href=f"#snapshot-{i + 1}") if i in shown else label,
+                f"{result.objective[i]:.2f}",
+                plain(result.limit[i], 0.01),
+                str(result.checks[i]),
+                p_value(result.p_value[i]),
+                f"{MARKS[word]} {word}",
+                named.replace("known:", ""),
+            )
+        )
+    header = ("snapshot", "χ²", "limit", "checks", "p", "word", "most likely")
+    note = (
+        f"χ² sums the squares of what the checks find; the limit is exceeded by chance in "
+        f"{100 * result.settings.level:g} % of sound snapshots."
+    )
+    table = html_table(
+        "All snapshots", header, rows, name="snapshots-table", left=(0, 5, 6), sortable=True, note=note, marked=marked
+    )
+    folded = table
+    if result.size > 40:
+        folded = element("details", element("summary", f"Table of all {result.size} snapshots"), table)
+    return join(
+        figure_part(figures.evidence(result)),
+        folded,
+        *(figure_part(f) for f in figures.series(result)),
+    )
+
+
+def one_at_a_time(result: Result) -> tuple[Markup, frozenset[int]]:
+    """Each snapshot in detail, folded, and which these are; a slider where scripts run."""
+    usable = [i for i in range(result.size) if i not in result.table.failed]
+    linear = result.model.equations.is_linear
+    most = MOST_DETAILS if linear else MOST_WITH_PRODUCTS
+    ranked = sorted(usable, key=lambda i: (_ORDER[result.words[i]], i))[:most]
+    first = ranked[0]
+    parts: dict[int, Markup] = {}
+    size = 0
+    for i in ranked:
+        part = _detail(result, i, opened=i == first, mixups=linear or i == first)
+        size += len(part)
+        if parts and size > MOST_BYTES:
+            break
+        parts[i] = part
+    order = sorted(parts)
+    chooser = element(
+        "div",
+        element("label", "Snapshot", for_="which"),
+        element(
+            "input", type="range", id="which", min="0", max=str(len(order) - 1), step="1", value=str(order.index(first))
+        ),
+        element("output", result.labels[first], for_="which"),
+        class_="chooser",
+        hidden=True,
+    )
+    missing = result.size - len(result.table.failed) - len(parts)
+    said = (
+        f"{len(parts)} of {result.size} snapshots are here in detail, those that disagree before the others; "
+        "reconcile run --snapshot prints any other."
+        if missing
+        else f"All {len(parts)} snapshots in detail."
+    )
+    whole = join(element("p", said, class_="soft"), chooser if len(order) > 1 else None, *(parts[i] for i in order))
+    return whole, frozenset(order)
+
+
+def _detail(result: Result, index: int, *, opened: bool, mixups: bool) -> Markup:
+    label, word = result.labels[index], result.words[index]
+    name = f"snapshot-{index + 1}"
+    prefix = f"{name}-"
+    inner = [element("p", element("strong", " ".join(verdict_sentences(result.snapshot(index)))))]
+    for part, title, markup in snapshot_parts(result, index, prefix):
+        inner.append(element("h3", title, id=f"{prefix}{part}"))
+        inner.append(markup)
+    inner.append(element("h3", "Explanations", id=f"{prefix}explanations"))
+    inner.append(explanations_part(result, index, mixups=mixups))
+    return element(
+        "details",
+        element("summary", f"{label}: {MARKS[word]} {word}"),
+        *inner,
+        class_="snapshot",
+        id=name,
+        data_label=f"{label}: {MARKS[word]} {word}",
+        open=opened,
+    )
