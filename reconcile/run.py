@@ -20,7 +20,7 @@ from .adjust.solve import Problem as Snapshot
 from .adjust.table import Table
 from .assemble import Assembled, assemble
 from .bounds import bound_notices, limits_of
-from .campaign.adjusted import adjust_prepared
+from .campaign.adjusted import adjust_prepared, agreement_notices
 from .domains import Plugins, load_plugins
 from .doubts import doubts_of_readings
 from .errors import Problems, did_you_mean
@@ -171,6 +171,7 @@ class Case:
                 *self.parts.notices,
                 *table.notices,
                 *doubts_of_readings(self.model, self.parts.network, picked),
+                *agreement_notices(adjusted),
                 *bound_notices(adjusted, self.model, spec),
                 *rival_notices(adjusted, self.model, labels),
             ),
@@ -180,8 +181,8 @@ class Case:
         return result if suspects == "flag" else decide(result, suspects)
 
     def run_trajectory(self, readings: Any = None, *, exclude: Mapping[str, str] | None = None) -> Trajectory:
-        """Adjust windows that inventories tie, as one system; see `reconcile.trajectory.run_trajectory`."""
-        from .trajectory import run_trajectory
+        """Adjust windows that inventories tie, as one system; see `reconcile.trajectory_run`."""
+        from .trajectory_run import run_trajectory
 
         return run_trajectory(self, readings, exclude=exclude)
 

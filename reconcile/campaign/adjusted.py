@@ -9,7 +9,8 @@ import numpy as np
 import numpy.typing as npt
 
 from ..adjust.table import Table, adjust_table
-from ..errors import SolveError
+from ..diagnose.critical import chi2_p
+from ..errors import Notice, SolveError
 from ..refit import problem_of
 from .line_ups import closed_columns, silent
 
@@ -18,10 +19,12 @@ if TYPE_CHECKING:
     from ..run import Case
     from .prepare import Prepared
 
-__all__ = ["LEFT_OUT", "adjust_prepared", "model_of"]
+__all__ = ["LEFT_OUT", "adjust_prepared", "agreement_notices", "model_of"]
 
 LEFT_OUT = "left-out"
 """Code of a snapshot that was never to be solved."""
+
+_TOO_GOOD = 0.999
 
 Array = npt.NDArray[np.float64]
 
@@ -68,6 +71,20 @@ def adjust_prepared(case: Case, prepared: Prepared, base: Array, settings: Any) 
     left = {i: SolveError(entry.reason, code=LEFT_OUT) for i, entry in prepared.left_out.items()}
     failed = {i: error for part in parts for i, error in part.failed.items()}
     return Table(tuple(g for part in parts for g in part.groups), {**failed, **left}, len(base))
+
+
+def agreement_notices(table: Table) -> tuple[Notice, ...]:
+    """Tell where all snapshots together agree better than their sigmas allow in one case of a thousand."""
+    checks = sum(g.checks * len(g.rows) for g in table.groups)
+    objective = float(sum((g.parity**2).sum() for g in table.groups))
+    p = chi2_p(objective, checks) if checks else 0.0
+    if p <= _TOO_GOOD:
+        return ()
+    words = (
+        f"readings agree better than their sigmas allow (χ² {objective:.3g} with {checks} checks, p > {_TOO_GOOD:g}): are some "
+        "computed from others (copied, back-calculated), or are the sigmas those of a certificate with k = 2?"
+    )
+    return (Notice("agrees-too-well", words),)
 
 
 def _of_all_readings(model: Model, prepared: Prepared) -> tuple[Array | None, Array | None]:

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 
 from ..case.spec import CaseSpec
-from ..errors import InputError, Location, Problem, Problems, did_you_mean
+from ..errors import InputError, Location, Notice, Problem, Problems, did_you_mean
 from ..readings.table import ReadingsTable
 from ..units import factor_offset
 from .spec import CampaignSpec
@@ -87,7 +87,20 @@ def _from_file(
             *(c for c in needed if c not in kept and c not in (given.get("label_column"), given.get("time_column"))),
         ]
     expected = tuple(plan.of(t).column or t for t in spec.meters if not (plan.lab and plan.of(t).sample))
-    return read_readings(readings, readers=readers, expected=expected, **given)
+    return _at_starts(read_readings(readings, readers=readers, expected=expected, **given), given.get("interval"))
+
+
+def _at_starts(table: ReadingsTable, interval: str | None) -> ReadingsTable:
+    """Move stamps that stand at the end, or in the middle, of the interval of a mean to its start."""
+    if interval not in ("end", "centre") or table.time is None or len(table) < 2:
+        return table
+    import pandas as pd
+
+    step = pd.Series(table.time).diff().median()
+    moved = table.time - (step if interval == "end" else step / 2)
+    where = "ends" if interval == "end" else "middles"
+    words = f"stamps are the {where} of intervals of {step.total_seconds() / 60:g} min: moved to their starts"
+    return replace(table, time=moved, notices=(*table.notices, Notice("stamps-moved", words)))
 
 
 def _from_memory(readings: Any, needed: tuple[str, ...]) -> ReadingsTable:
@@ -118,9 +131,7 @@ def read_samples(spec: CaseSpec, table: ReadingsTable, readers: Mapping[str, Any
     from ..readings.sources import read_readings
 
     headers = {plan.of(t).column or t: t for t in plan.samples}
-    found = read_readings(
-        spec.beside(str(plan.lab.file)), readers=readers, expected=tuple(headers), **plan.lab.options
-    )
+    found = read_readings(spec.beside(str(plan.lab.file)), readers=readers, expected=tuple(headers), **plan.lab.options)
     lab = replace(
         found,
         columns=tuple(headers.get(c, c) for c in found.columns),
