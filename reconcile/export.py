@@ -289,7 +289,7 @@ class Package:
     title: str
     tables: Mapping[str, pd.DataFrame]
     units: Mapping[str, str]
-    covariance: Mapping[str, npt.NDArray[Any]]
+    covariance: Mapping[str, Any]
     summary: Mapping[str, Any]
     provenance: Mapping[str, Any]
 

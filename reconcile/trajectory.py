@@ -8,7 +8,7 @@ snapshot holds of the whole sequence: parity vector, signatures, tests, explanat
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
@@ -16,33 +16,25 @@ import numpy as np
 import numpy.typing as npt
 
 from .accounts import Accounts, explain, explainer_of
-from .adjust.sequence import Chain, Push, Sequence, solve_sequence
-from .adjust.table import adjust_table
-from .case.trajectory import TrajectorySpec, change_factor
+from .adjust.sequence import Sequence
+from .case.trajectory import TrajectorySpec
 from .diagnose.critical import chi2_limit, chi2_p
 from .diagnose.sidak import sidak_limit
 from .diagnose.tests_of_readings import global_test
-from .errors import InputError, Location, Notice, Problem
+from .errors import Notice
 from .model import Candidate, Model
-from .refit import problem_of
 from .results import word_of_evidence
-from .units import difference_factor
 
 if TYPE_CHECKING:
     import pandas as pd
 
     from .case.spec import CaseSpec
     from .diagnose.tests_of_readings import GlobalTest
-    from .readings.table import ReadingsTable
-    from .run import Case
 
-__all__ = ["Trajectory", "run_trajectory"]
+__all__ = ["Trajectory"]
 
 Array = npt.NDArray[np.float64]
 Bools = npt.NDArray[np.bool_]
-
-MOST_SINGLE = 8
-"""Single readings with the largest test values beyond the limit that are candidates beside lasting faults."""
 
 
 @dataclass(frozen=True)
@@ -281,224 +273,3 @@ class Trajectory:
 
     def __str__(self) -> str:
         return self.summary()
-
-
-# ------------------------------------------------------------------ the run
-
-
-def run_trajectory(case: Case, readings: Any = None, *, exclude: Mapping[str, str] | None = None) -> Trajectory:
-    """Adjust a sequence of windows as one system.
-
-    Parameters
-    ----------
-    case : Case
-        With a block ``trajectory:``.
-    readings : see `Case.run`
-        A row a window, in order of time.
-    exclude : mapping of tag to reason, optional
-
-    Returns
-    -------
-    Trajectory
-
-    Raises
-    ------
-    InputError
-        If the case has no trajectory, or the readings or their stamps do not fit.
-    SolveError
-        If no consistent answer was found.
-    """
-    spec, model = case.parts.spec, case.model
-    tied = spec.trajectory
-    if tied is None:
-        raise InputError(
-            Problem(
-                "no-trajectory",
-                "the case does not say which inventories tie its windows",
-                "add e.g. trajectory: {inventories: {tank: kg}, read_at: start}",
-                Location(file=str(spec.path)),
-            )
-        )
-    table = case.read(readings)
-    left_out = case._excluded(exclude or {})
-    values = np.where(table.usable, table.values, np.nan)[:, [table.columns.index(t) for t in case.tags]]
-    picked = values.copy()
-    picked[:, [case.tags.index(t) for t in left_out]] = np.nan
-    lengths, outer_known, notices = _lengths(table, tied, spec)
-    chain, base = _chain(model, tied, spec, picked, lengths)
-    column, row = case.name_of_column, case.name_of_row
-    start = None
-    if not model.equations.is_linear:
-        alone = adjust_table(problem_of(model, spec.settings), model.to_base(picked), names=column, row_names=row)
-        start = np.full((len(base), model.size), np.nan)
-        for group in alone.groups:
-            start[group.rows] = group.x
-        start = _filled(start, problem_of(model, spec.settings).start)
-    lasting, pushes = _lasting(model, len(base))
-    solution = solve_sequence(chain, base, start=start, pushes=pushes, names=column, row_names=row)
-    found = Trajectory(
-        title=case.title,
-        model=model,
-        solution=_scaled(solution, lasting),
-        candidates=lasting,
-        readings=values,
-        base=base,
-        labels=tuple(table.label(i) for i in range(len(table))),
-        lengths=lengths,
-        outer_known=outer_known,
-        settings=spec.settings,
-        spec=spec,
-        excluded=left_out,
-        statuses={(i, table.columns[j]): table.reason(i, j) for i, j in zip(*np.nonzero(~table.usable), strict=True)},
-        cautions=case.parts.cautions,
-        notices=(*case.parts.notices, *table.notices, *notices),
-        provenance=case._provenance(table, spec.settings, "flag"),
-    )
-    singles, more = _singles(found)
-    if not singles:
-        return found
-    again = solve_sequence(chain, base, start=solution.x, pushes=(*pushes, *more), names=column, row_names=row)
-    candidates = (*lasting, *singles)
-    return replace(found, solution=_scaled(again, candidates), candidates=candidates)
-
-
-def _lengths(table: ReadingsTable, tied: TrajectorySpec, spec: CaseSpec) -> tuple[Array, bool, tuple[Notice, ...]]:
-    """Length of every window in seconds; a stamp is the instant at which the inventories were read."""
-    where = spec.where(("trajectory", "step"))
-    count = len(table)
-    seconds = None
-    if table.time is not None:
-        from .readings.time_order import seconds_of
-
-        seconds = np.asarray(seconds_of(table.time), dtype=float)
-    if tied.step is not None:
-        length = tied.step[0] * difference_factor(tied.step[1], "s")
-        if seconds is not None and count > 1:
-            off = np.flatnonzero(np.abs(np.diff(seconds) - length) > 1e-3 * length)
-            if off.size:
-                i = int(off[0])
-                raise InputError(
-                    Problem(
-                        "step-differs",
-                        f"the case says windows of {length:g} s, but {np.diff(seconds)[i]:g} s pass from row {i + 1} to "
-                        f"row {i + 2} of the readings" + (f"; {off.size} such gaps in all" if off.size > 1 else ""),
-                        "write step: from stamps, or put in the missing rows, empty where nothing was read",
-                        where,
-                    )
-                )
-        return np.full(count, length), True, ()
-    if seconds is None:
-        raise InputError(
-            Problem(
-                "no-step",
-                "the readings have no time column, and the trajectory states no step",
-                "write e.g. step: 10 min under trajectory:",
-                where,
-            )
-        )
-    gaps = np.diff(seconds)
-    if np.any(gaps <= 0):
-        i = int(np.flatnonzero(gaps <= 0)[0])
-        raise InputError(
-            Problem(
-                "not-rising",
-                f"the stamp of row {i + 2} is not after that of row {i + 1}",
-                "sort the readings",
-                Location(file=table.sources[0] if table.sources else None, row=i + 2),
-            )
-        )
-    typical = float(np.median(gaps)) if gaps.size else 1.0
-    lengths = np.concatenate([[typical], gaps]) if tied.at_end else np.concatenate([gaps, [typical]])
-    notices = []
-    odd = int(np.sum(np.abs(gaps - typical) > 0.5 * typical))
-    if odd:
-        notices.append(
-            Notice(
-                "windows-of-different-length",
-                f"{odd} windows are much longer or shorter than the usual {typical:g} s; each flow is taken as the mean "
-                "over its own window. Put in the missing rows, empty, where nothing was read.",
-            )
-        )
-    return lengths, False, tuple(notices)
-
-
-def _chain(model: Model, tied: TrajectorySpec, spec: CaseSpec, picked: Array, lengths: Array) -> tuple[Chain, Array]:
-    """Put the windows of a sequence together; what is known once is read once."""
-    system = model.system
-    inventories = [system.column(i.name) for i in tied.inventories.values()]
-    problems = [i.name for i, c in zip(tied.inventories.values(), inventories, strict=True) if c in model.fixed]
-    if problems:
-        raise InputError(
-            Problem(
-                "inventory-exact",
-                f"{', '.join(problems)} is stated as exactly known, in every window",
-                "state it with a sigma, or read it",
-                spec.where(("known", problems[0])),
-            )
-        )
-    rates = [system.column(i.rate) for i in tied.inventories.values()]
-    per_second = [change_factor(i, system.unit(c)) for i, c in zip(tied.inventories.values(), rates, strict=True)]
-    once = [
-        i
-        for i, r in enumerate(model.readings)
-        if r.kind == "cause" or (r.kind == "prior" and r.reads[0][0] not in tied.varying)
-    ]
-    base = model.to_base(picked)
-    base[1:, once] = np.nan
-    constants = np.setdiff1d(model.columns[once], inventories)
-    chain = Chain(
-        problem_of(model, spec.settings),
-        np.array(inventories, dtype=np.int64),
-        np.array(rates, dtype=np.int64),
-        lengths[:, None] * np.array(per_second),
-        constants,
-        tied.at_end,
-    )
-    return chain, base
-
-
-def _filled(start: Array, typical: Array) -> Array:
-    """Fill windows that could not be solved alone from their neighbours, then from typical values."""
-    good = np.flatnonzero(np.isfinite(start).all(axis=1))
-    if good.size:
-        nearest = good[np.abs(np.arange(len(start))[:, None] - good).argmin(axis=1)]
-        return np.asarray(start[nearest])
-    return np.tile(np.nan_to_num(typical, nan=1.0), (len(start), 1))
-
-
-def _lasting(model: Model, windows: int) -> tuple[tuple[Candidate, ...], tuple[Push, ...]]:
-    """Every fault of a window as one that lasts throughout the sequence."""
-    candidates = tuple(
-        replace(c, says=f"{c.says} throughout") if c.kind not in ("constant", "shared error") else c
-        for c in model.candidates
-    )
-    return candidates, tuple(Push(c.reading, c.column, 0, windows) for c in candidates)
-
-
-def _singles(found: Trajectory) -> tuple[tuple[Candidate, ...], tuple[Push, ...]]:
-    """Single readings that stand out, as candidates; all readings of a sequence would be too many to combine."""
-    if found.word == "agrees" or not found.checks:
-        return (), ()
-    meters = found.model.meters
-    size = np.abs(np.nan_to_num(found.z[:, meters]))
-    order = np.argsort(-size, axis=None, kind="stable")[:MOST_SINGLE]
-    candidates, pushes = [], []
-    for place in order:
-        t, j = np.unravel_index(place, size.shape)
-        if not size[t, j] > found.z_limit:
-            continue
-        i = int(meters[j])
-        lasting = found.model.candidates[i]
-        rate = found.settings.fault_rate / found.size
-        label = found.labels[int(t)]
-        label = f"window {label}" if label.isdigit() else label
-        candidates.append(
-            replace(lasting, name=f"{lasting.name} at {label}", says=f"{lasting.says} at {label} alone", rate=rate)
-        )
-        pushes.append(Push(i, -1, int(t), int(t) + 1))
-    return tuple(candidates), tuple(pushes)
-
-
-def _scaled(solution: Sequence, candidates: tuple[Candidate, ...]) -> Sequence:
-    """Signatures per unit of the candidates instead of base units."""
-    return replace(solution, signatures=solution.signatures * np.array([c.scale for c in candidates]))

@@ -289,9 +289,9 @@ class _Work:
         if chain.at_end:
             step, w, u = np.eye(c) - change @ of_state, -change @ constant, -change @ of_free
         else:
-            step = np.linalg.inv(np.eye(c) + change @ of_state)
+            step = np.asarray(np.linalg.inv(np.eye(c) + change @ of_state), dtype=np.float64)
             w, u = -step @ (change @ constant), -step @ (change @ of_free)
-            constant = constant + of_state @ w
+            constant += of_state @ w
             of_free = of_free + of_state @ u
             of_state = of_state @ step
         present = np.flatnonzero(np.isfinite(self.readings[t]))

@@ -210,7 +210,9 @@ def check_rates(spec: TrajectorySpec, variables: Mapping[str, str], where: Any, 
             problems.add(
                 "no-rate",
                 f"inventory {key!r}: there is no variable {inventory.rate!r} by which it changes",
-                did_you_mean(inventory.rate, list(variables)) or f"write nodes: {{{node}: {{stores: true}}}}",
+                f"write nodes: {{{node}: {{stores: true}}}}"
+                if inventory.rate == f"{node}.accumulation"
+                else did_you_mean(inventory.rate, list(variables)) or "name a variable of a domain",
                 where(spot),
             )
             continue

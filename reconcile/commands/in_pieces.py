@@ -26,7 +26,7 @@ MOST_METERS = 12
 
 def run_in_pieces(
     case: Case,
-    readings: Path | None,
+    readings: str | Path | None,
     out: Path,
     reasons: dict[str, str],
     formats: tuple[str, ...],

@@ -13,7 +13,7 @@ from unrolled import solve_unrolled
 
 import reconcile
 from reconcile.adjust.sequence import Push, solve_sequence
-from reconcile.trajectory import _chain, _lengths
+from reconcile.trajectory_run import _chain, _lengths
 
 NILE = yaml.safe_load((Path(__file__).parent / "nile_local_level.yaml").read_text("utf-8"))
 LEVEL = """\
