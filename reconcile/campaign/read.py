@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping
-from dataclasses import replace
+from dataclasses import fields, replace
 from typing import Any
 
 from ..case.places import Places
@@ -390,6 +390,11 @@ class _Reader:
 
     def lab(self, model: LabModel) -> LabSpec:
         options = dict(model.model_extra or {})
+        known = [*(f.name for f in fields(ReadOptions)), *LabModel.model_fields]
+        for name in [n for n in options if n not in known]:
+            hint = did_you_mean(name, known) or f"known keys: {', '.join(known)}"
+            self.refuse(("lab", name), "unknown-key", f"unknown key {name!r} in lab", hint, key=True)
+            del options[name]
         try:
             ReadOptions.build(options, self.places.where(("lab",), key=True))
         except InputError as error:
