@@ -7,7 +7,7 @@ from collections.abc import Sequence
 
 from .markup import Markup, element, join
 
-__all__ = ["HATCH", "Canvas", "Scale", "cut", "text_width", "ticks"]
+__all__ = ["HATCH", "Canvas", "Scale", "cut", "text_width", "tick_text", "ticks"]
 
 Point = tuple[float, float]
 
@@ -48,6 +48,13 @@ def ticks(low: float, high: float, count: int = 5) -> list[float]:
     step = next(s * power for s in (1.0, 2.0, 2.5, 5.0, 10.0) if s * power >= rough * (1 - 1e-9))
     first = math.ceil(low / step - 1e-9)
     return [k * step for k in range(first, math.floor(high / step + 1e-9) + 1)]
+
+
+def tick_text(value: float, step: float) -> str:
+    """Show a tick with just as many decimals as its step needs."""
+    places = next((d for d in range(10) if abs(round(step, d) - step) <= 1e-9 * abs(step)), 10)
+    text = f"{value:.{places}f}"
+    return text if len(text) < 9 else f"{value:.3g}"
 
 
 class Scale:

@@ -218,13 +218,25 @@ def _verdict(result: Result) -> Markup:
     words = [result.words[i] for i in range(result.size) if i not in result.table.failed]
     word = next((w for w in _WORST if w in words), "cannot tell")
     text = verdict_line(result)
-    said = word if result.size == 1 else f"{words.count(word)} of {result.size} snapshots: {word}"
+    said = word if result.size == 1 else _of_many(words, word, result.size)
     return element(
         "div",
         element("span", MARKS[word], class_="sign", aria_hidden="true"),
         element("p", element("span", said[0].upper() + said[1:], class_="word"), text),
         class_=f"verdict {_CLASSES[word]}",
         id="verdict",
+    )
+
+
+def _of_many(words: Sequence[str], word: str, size: int) -> str:
+    """The worst word of many snapshots as a headline."""
+    count = words.count(word)
+    if count == size:
+        return f"all snapshots: {word}"
+    return (
+        f"{count} of {size} {'is' if count == 1 else 'are'} to watch"
+        if word == "watch"
+        else (f"{count} of {size} {'does' if count == 1 else 'do'} not agree" if word == "does not agree" else word)
     )
 
 

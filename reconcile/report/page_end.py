@@ -15,9 +15,9 @@ from . import figures
 from .by_hand import explain_node, nodes_of
 from .markup import Markup, element, join
 from .numbers import plain
-from .page_snapshot import figure_part
+from .page_snapshot import figure_part, snapshot_name
 from .tables import html_table
-from .words import separating_tests, suspects_of
+from .words import suspects_of
 
 if TYPE_CHECKING:
     from ..results import Result
@@ -26,6 +26,8 @@ if TYPE_CHECKING:
 __all__ = ["appendix", "assumptions", "figures_of_knowledge", "typical", "unknowable"]
 
 MOST_ALIKE, MOST_COLUMNS, MOST_ROWS = 12, 16, 40
+WORTH_IT = 0.95
+"""A meter is recommended if it lowers what it is for to less than this share."""
 
 
 def typical(result: Result) -> int:
@@ -43,10 +45,9 @@ def typical(result: Result) -> int:
 def unknowable(result: Result, case: Case | None = None) -> Markup:
     """What no reading here can show, what each check is worth, and which faults look alike."""
     index = typical(result)
-    s = result.snapshot(index)
     found = coverage_in(result.title, result.model, result.group(index), result.settings)
     points = _sentences(found)
-    of = "" if result.size == 1 else f" The figures are for {result.labels[index]}."
+    of = "" if result.size == 1 else f"The figures are for {snapshot_name(result, index)}."
     intro = (
         element("ul", *(element("li", p) for p in points))
         if points
@@ -54,11 +55,9 @@ def unknowable(result: Result, case: Case | None = None) -> Markup:
             "p", "Every reading is checked by others, every variable can be calculated, and no two faults look alike."
         )
     )
-    tests = separating_tests(s.accounts) if s.accounts is not None and s.test.status == "disagrees" else []
     return join(
         intro,
-        element("p", "To separate what is not excluded: " + "; ".join(tests) + ".") if tests else None,
-        element("p", of.strip(), class_="note") if of else None,
+        element("p", of, class_="note") if of else None,
         *(figure_part(f) for f in figures_of_knowledge(result, index, case)),
     )
 
@@ -137,12 +136,12 @@ def _advice(result: Result, index: int, case: Case | None) -> figures.Figure | N
 
     tied = [x.name for x in suspects_of(result.snapshot(index)) if x.tied_with][:6]
     try:
-        if len(tied) >= 2:
-            return figures.placements(place_meters(case, separate=tied), 8)
+        found = place_meters(case, separate=tied) if len(tied) >= 2 else None
     except ReconcileError:
         # Without expected values nothing can be planned; `reconcile place` says what is missing.
         return None
-    return None
+    helps = found is not None and any(p.effect and p.after < WORTH_IT * p.before for p in found.ranked)
+    return figures.placements(found, 8) if found is not None and helps else None
 
 
 # ------------------------------------------------------------------ assumptions
@@ -274,7 +273,7 @@ def _matrix(result: Result, index: int) -> Markup:
     note = (
         "Each row times the variables is zero."
         if linear
-        else f"Derivatives at the adjusted values of {result.labels[index]}: this case has products or functions."
+        else f"Derivatives at the adjusted values of {snapshot_name(result, index)}: this case has products or functions."
     )
     title = element("h3", "The balance matrix")
     if len(used) <= MOST_COLUMNS and m <= MOST_ROWS:

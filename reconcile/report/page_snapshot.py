@@ -6,14 +6,13 @@ import math
 from typing import TYPE_CHECKING
 
 from ..mixups import mixups_of
-from ..refit import figures_if
 from . import figures
 from .markup import Markup, element, join
 from .numbers import plain, signed
 from .symbols import symbol_of
 from .tables import html_table
+from .text import figures_granted
 from .words import (
-    alternative_name,
     explanations_in_words,
     percent,
     remarks_on_explanations,
@@ -25,7 +24,7 @@ if TYPE_CHECKING:
     from ..results import Result
     from ..snapshot import Snapshot
 
-__all__ = ["explanations_part", "figure_part", "snapshot_parts"]
+__all__ = ["explanations_part", "figure_part", "snapshot_name", "snapshot_parts"]
 
 NAMED = frozenset({"suspect", "tied", "cannot tell"})
 
@@ -33,6 +32,12 @@ NAMED = frozenset({"suspect", "tied", "cannot tell"})
 def figure_part(figure: figures.Figure | None, prefix: str = "", numbers_in: str | None = None) -> Markup | None:
     """Return a figure for the page; nothing where there is nothing to draw."""
     return None if figure is None else figure.html(prefix, numbers_in=numbers_in)
+
+
+def snapshot_name(result: Result, index: int) -> str:
+    """Label of a snapshot; a bare number gets its noun."""
+    label = result.labels[index]
+    return f"snapshot {label}" if label.isdigit() else label
 
 
 def snapshot_parts(result: Result, index: int, prefix: str = "") -> list[tuple[str, str, Markup]]:
@@ -130,7 +135,7 @@ def _balances_tested(count: int) -> str:
 
 
 def _of(result: Result, index: int) -> str:
-    return "" if result.size == 1 else f", {result.labels[index]}"
+    return "" if result.size == 1 else f", {snapshot_name(result, index)}"
 
 
 # ------------------------------------------------------------------ readings
@@ -148,7 +153,6 @@ def _readings_part(result: Result, index: int, prefix: str) -> Markup:
         rows.append(
             (
                 r.tag.removeprefix("known:") + (f" {symbol_of(r.word)}" if r.word in NAMED else ""),
-                r.reads,
                 r.unit,
                 plain(r.reading, sigma),
                 plain(r.adjusted, sigma),
@@ -162,7 +166,7 @@ def _readings_part(result: Result, index: int, prefix: str) -> Markup:
             )
         )
     header = (
-        "meter", "reads", "unit", "raw", "adjusted", "± before", "± after", "moved", "in sigmas", "checked", "z", "word",
+        "meter", "unit", "raw", "adjusted", "± before", "± after", "moved", "in sigmas", "checked", "z", "word",
     )  # fmt: skip
     tested = s.meter_tests.distinct
     note = (
@@ -178,7 +182,7 @@ def _readings_part(result: Result, index: int, prefix: str) -> Markup:
             header,
             rows,
             name=f"{prefix}readings-table",
-            left=(0, 1, 2, 11),
+            left=(0, 1, 10),
             sortable=True,
             note=note,
             marked=marked,
@@ -197,13 +201,13 @@ def _ranked(s: Snapshot, prefix: str, of: str) -> Markup | None:
         return None
     rows = [
         (
-            x.name.removeprefix("known:"),
+            x.name.removeprefix("known:").removeprefix("shared:"),
             x.kind,
             signed(x.size, x.sigma),
             plain(x.sigma, x.sigma),
             x.unit,
             percent(x.probability),
-            ", ".join(t.removeprefix("known:") for t in x.tied_with) or "none",
+            _few([t.removeprefix("known:").removeprefix("shared:") for t in x.tied_with]) or "none",
         )
         for x in found
     ]
@@ -211,6 +215,10 @@ def _ranked(s: Snapshot, prefix: str, of: str) -> Markup | None:
     return html_table(
         "Suspects, the most probable first" + of, header, rows, name=f"{prefix}suspects", left=(0, 1, 4, 6)
     )
+
+
+def _few(names: list[str]) -> str:
+    return ", ".join(names[:4]) + (f" and {len(names) - 4} more" if len(names) > 4 else "")
 
 
 def _unread(s: Snapshot, prefix: str, of: str) -> Markup | None:
@@ -244,19 +252,10 @@ def _derived(result: Result, index: int, prefix: str) -> Markup | None:
         )
         for f in values
     ]
-    for alternative, granted in figures_if(result, index):
-        rows += [
-            (
-                f.name,
-                f"granting {alternative_name(alternative)}",
-                plain(f.value, f.sigma),
-                plain(f.sigma, f.sigma),
-                "",
-                "",
-                "",
-            )
-            for f in granted
-        ]
+    rows += [
+        (name, f"granting {names}", value, sigma, "", "", "")
+        for name, value, sigma, names in figures_granted(result, index)
+    ]
     order = list(result.figures)
     rows.sort(key=lambda r: order.index(r[0]))
     header = ("derived value", "which", "value", "±", "from raw readings", "± raw", "uncertainty from")

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 from . import figures
 from .markup import Markup, element, join
 from .numbers import plain
-from .page_snapshot import explanations_part, figure_part, snapshot_parts
+from .page_snapshot import explanations_part, figure_part, snapshot_name, snapshot_parts
 from .tables import html_table
 from .words import MARKS, p_value, short_name, verdict_sentences
 
@@ -55,7 +55,7 @@ def overview(result: Result, shown: frozenset[int]) -> Markup:
                 str(result.checks[i]),
                 p_value(result.p_value[i]),
                 f"{MARKS[word]} {word}",
-                named.replace("known:", ""),
+                named.replace("known:", "").replace("shared:", ""),
             )
         )
     header = ("snapshot", "χ²", "limit", "checks", "p", "word", "most likely")
@@ -98,7 +98,7 @@ def one_at_a_time(result: Result) -> tuple[Markup, frozenset[int]]:
         element(
             "input", type="range", id="which", min="0", max=str(len(order) - 1), step="1", value=str(order.index(first))
         ),
-        element("output", result.labels[first], for_="which"),
+        element("output", snapshot_name(result, first), for_="which"),
         class_="chooser",
         hidden=True,
     )
@@ -114,10 +114,10 @@ def one_at_a_time(result: Result) -> tuple[Markup, frozenset[int]]:
 
 
 def _detail(result: Result, index: int, *, opened: bool, mixups: bool) -> Markup:
-    label, word = result.labels[index], result.words[index]
+    word = result.words[index]
     name = f"snapshot-{index + 1}"
     prefix = f"{name}-"
-    inner = [element("p", element("strong", " ".join(verdict_sentences(result.snapshot(index)))))]
+    inner = [element("p", " ".join(verdict_sentences(result.snapshot(index))), class_="lead")]
     for part, title, markup in snapshot_parts(result, index, prefix):
         inner.append(element("h3", title, id=f"{prefix}{part}"))
         inner.append(markup)
@@ -125,10 +125,10 @@ def _detail(result: Result, index: int, *, opened: bool, mixups: bool) -> Markup
     inner.append(explanations_part(result, index, mixups=mixups))
     return element(
         "details",
-        element("summary", f"{label}: {MARKS[word]} {word}"),
+        element("summary", f"{snapshot_name(result, index)}: {MARKS[word]} {word}"),
         *inner,
         class_="snapshot",
         id=name,
-        data_label=f"{label}: {MARKS[word]} {word}",
+        data_label=f"{snapshot_name(result, index)}: {MARKS[word]} {word}",
         open=opened,
     )

@@ -29,7 +29,7 @@ if TYPE_CHECKING:
     from ..results import Result
     from ..snapshot import Snapshot, VariableLine
 
-__all__ = ["render"]
+__all__ = ["figures_granted", "render"]
 
 MANY = 12
 
@@ -133,14 +133,14 @@ def _detail(result: Result, index: int) -> list[str]:
     figures = result.figure_values(index)
     if figures:
         out += ["", _figures(figures)]
-        granted = _figures_granted(result, index)
+        granted = figures_granted(result, index)
         if granted:
             out.append(wrap("These hold if nothing is wrong. Granting an explanation instead:"))
             out.append(table(("FIGURE", "value", "±", "granting"), granted, left=(0, 3)))
     return out
 
 
-def _figures_granted(result: Result, index: int) -> list[tuple[str, str, str, str]]:
+def figures_granted(result: Result, index: int) -> list[tuple[str, str, str, str]]:
     """Figures with each explanation granted; explanations that give the same are told in one line."""
     told: dict[tuple[str, str, str], list[str]] = {}
     for alternative, values in figures_if(result, index):

@@ -65,7 +65,10 @@ def place_of(labels: Sequence[str], *, left: float = LEFT, right: float = RIGHT)
     """
     times = _times(labels)
     values = times if times is not None else np.arange(len(labels), dtype=float)
-    scale = Scale(float(values[0]), float(values[-1]), left + 8, right - 8) if len(values) else Scale(0, 1, left, right)
+    # Half a step stays free at both ends, so that flagged spans around the first and the last have room.
+    room = max(8.0, (right - left) / (2 * max(len(labels), 1)))
+    last = float(values[-1]) if len(values) > 1 else 1.0
+    scale = Scale(0.0, last, left + room, right - room)
     return Course(tuple(labels), tuple(scale(float(v)) for v in values), left, right, WIDTH, times is not None)
 
 

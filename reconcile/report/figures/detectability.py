@@ -37,11 +37,12 @@ def detectability(found: Coverage) -> Figure | None:
     height = TOP + ROW * len(lines) + 26
     bottom = height - 26
     c = Canvas(WIDTH, height)
-    share = Scale(0.0, 1.0, left + 10, left + half - 60)
+    share = Scale(0.0, 1.0, left + 10, left + half - 90)
     ratios = [x.smallest / x.sigma_before for x in lines if math.isfinite(x.smallest) and x.sigma_before > 0]
     # A reading that is hardly checked would squeeze all others: bars end in an arrow there, the number stays.
     reach = max(6.0, min(max(ratios, default=6.0), 4 * sorted(ratios)[len(ratios) // 2] if ratios else 6.0))
-    size = Scale(0.0, reach * 1.02, left + half + 10, WIDTH - 120)
+    room = max(text_width(_small(x), 12) for x in lines) + 20
+    size = Scale(0.0, reach * 1.02, left + half - 20, max(WIDTH - room, left + half + 60))
     c.text((share.start, 22), "Share of an error that shows", "ink", 12, bold=True)
     c.text((size.start, 22), f"Smallest bias noticed ({100 * found.power:g} %), in sigmas", "ink", 12, bold=True)
     for scale, values in ((share, [0.0, 0.5, 1.0]), (size, ticks(0.0, reach, 4))):
@@ -86,7 +87,7 @@ def detectability(found: Coverage) -> Figure | None:
 
 
 def _name(x: CoverageLine) -> str:
-    return x.item if x.kind != "constant" else f"{x.item}"
+    return x.item
 
 
 def _percent(x: CoverageLine) -> str:

@@ -67,7 +67,7 @@ def evidence(result: Result) -> Figure | None:
     beyond = int((ratio > 1.0).sum())
     failed = f", {len(result.table.failed)} could not be solved (N)" if result.table.failed else ""
     description = (
-        f"χ² of {result.size} snapshots as a multiple of its limit; {beyond} lie beyond it{failed}, the largest at "
+        f"χ² of {result.size} snapshots as a multiple of its limit; beyond it: {beyond}{failed}, the largest at "
         f"{highest:.3g} times the limit in {result.labels[int(np.nanargmax(ratio))]}."
     )
     rows = [

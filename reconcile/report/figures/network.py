@@ -76,7 +76,7 @@ def network(result: Result, index: int = 0) -> Figure | None:
     ends = [tuple(place.get(k, -1) for k in paths[n]) for n in chosen]
     labels = [_label_size(n, told[n]) for n in chosen]
     drawn = lay_out(sizes, ends, labels)  # type: ignore[arg-type]
-    c = Canvas(max(drawn.width, 560.0), drawn.height + LEGEND)
+    c = Canvas(max(drawn.width, _legend_width()), drawn.height + LEGEND)
     thick = _widths(s, chosen)
     for n, stroke, wide in zip(chosen, drawn.strokes, thick, strict=True):
         _stroke(c, stroke, told[n], wide)
@@ -88,7 +88,7 @@ def network(result: Result, index: int = 0) -> Figure | None:
     part = "" if len(chosen) == len(paths) else f" {len(chosen)} of {len(paths)} streams are drawn, near the suspects."
     named = [f"{symbol_of(w)} {n}" for n, w in ((n, _word(told[n])) for n in chosen) if w in RANK]
     description = (
-        f"Network of {len(names)} nodes and {len(chosen)} streams with raw and adjusted values"
+        f"Network with {len(chosen)} streams at {_few(names)}, with raw and adjusted values"
         + (f"; marked: {', '.join(named[:6])}." if named else "; no stream is marked.")
         + part
     )
@@ -101,9 +101,17 @@ def network(result: Result, index: int = 0) -> Figure | None:
     return Figure("network", "The network", description, c, header, rows, stretches=False)
 
 
+def _few(names: Sequence[str]) -> str:
+    return ", ".join(names[:8]) + (f" and {len(names) - 8} more" if len(names) > 8 else "")
+
+
 def _quantities(s: Snapshot, stream: str) -> list[_Line]:
     """What is known of a stream, its flow first."""
-    found = [v for v in s.variables if v.name.startswith(f"{stream}.") and "." not in v.name[len(stream) + 1 :]]
+    found = [v for v in s.variables if v.name.startswith(f"{stream}.")]
+    read = {r.reads for r in s.readings if r.kind == "meter" and math.isfinite(r.reading)}
+    # Of the same thing in two measures (moles, mass) the one that is read is told.
+    told = [v for v in found if v.name in read or not any(n.startswith(f"{v.name}.") for n in read)]
+    found = [v for v in told if v.name in read or "." not in v.name[len(stream) + 1 :]]
     found.sort(key=lambda v: v.name != f"{stream}.flow")
     out = []
     for v in found:
@@ -278,15 +286,27 @@ def _node(
     c.text((x, y + 14), _ratio_text(ratio), "ink", 11, "middle")
 
 
+_LEGEND = (
+    ("read", "read → adjusted"),
+    ("unread", "not read"),
+    ("named", "✗ suspect, ? tied"),
+    ("", "ratio: closure of raw readings over its spread"),
+)
+
+
+def _legend_width() -> float:
+    return 16.0 + sum((34 if kind else 0) + text_width(text, SIZE) + 20 for kind, text in _LEGEND)
+
+
 def _legend(c: Canvas, drawn: Drawn) -> None:
     y = drawn.height + LEGEND - 18
     x = 16.0
-    for kind, text in (("read", "read → adjusted"), ("unread", "not read"), ("named", "✗ suspect, ? tied")):
+    for kind, text in _LEGEND:
         if kind == "named":
             c.line((x, y - 4), (x + 28, y - 4), "mark", 6)
             c.line((x, y - 4), (x + 28, y - 4), "card", 3)
-        else:
+        elif kind:
             c.line((x, y - 4), (x + 28, y - 4), "ink", 2, "6 4" if kind == "unread" else None)
-        c.text((x + 34, y), text, "soft", SIZE)
-        x += 34 + text_width(text, SIZE) + 20
-    c.text((x, y), "ratio: closure of raw readings over its spread", "soft", SIZE)
+        x += 34 if kind else 0
+        c.text((x, y), text, "soft", SIZE)
+        x += text_width(text, SIZE) + 20

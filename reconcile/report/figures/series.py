@@ -9,9 +9,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
-from ..canvas import Canvas, Scale, cut, text_width, ticks
+from ..canvas import Canvas, Scale, cut, text_width, tick_text, ticks
 from ..markup import Markup, element
-from ..numbers import decimals, plain
+from ..numbers import plain
 from .axes import Course, frame, label_course, place_of, thinned
 from .sheet import Figure
 
@@ -22,7 +22,7 @@ __all__ = ["FLAGS", "series", "time_series"]
 
 Array = npt.NDArray[np.float64]
 
-PANEL, PANELS, MOST_FIGURES = 118.0, 6, 4
+PANEL, PANELS, MOST_FIGURES, FEW = 118.0, 6, 4, 6
 
 FLAGS = {"X": "does not agree", "W": "watch", "N": "not solved"}
 """Letter of a flagged span, and what it stands for."""
@@ -96,7 +96,7 @@ def time_series(
     flagged = sum(1 for f in flags if f)
     description = (
         f"Raw readings (dots), adjusted values (line) and their band of ±2 sigmas for {', '.join(p[0] for p in panels)} over "
-        f"{len(labels)} snapshots; {flagged} snapshots are flagged."
+        f"{len(labels)} snapshots, {flagged} of them flagged."
         + (" Of each short stretch the extremes are drawn." if len(labels) > 240 else "")
     )
     header = ("meter", "snapshot", "unit", "raw", "adjusted", "± sigma", "flag")
@@ -178,22 +178,25 @@ def _panel(
     step = shown[1] - shown[0] if len(shown) > 1 else 1.0
     for v in shown:
         c.line((course.left, y(v)), (course.right, y(v)), "hair")
-        c.text((course.left - 8, y(v) + 4), f"{v:.{max(0, decimals(step) - 1)}f}", "soft", 12, "end")
+        c.text((course.left - 8, y(v) + 4), tick_text(v, step), "soft", 12, "end")
     frame(c, course, top, bottom)
-    _hatches(c, course, flags, top, bottom)
+    letters = _hatches(c, course, flags, top, bottom)
     spots = sorted({*thinned(raw, course), *thinned(value, course)})
-    for run in _runs([i for i in spots if np.isfinite(value[i])], value):
-        upper = [(course.x[i], y(value[i] + 2 * sigma[i])) for i in run]
-        lower = [(course.x[i], y(value[i] - 2 * sigma[i])) for i in reversed(run)]
-        c.area([*upper, *lower], "wash")
-        points = [(course.x[i], y(value[i])) for i in run]
-        c.polyline(points, "main", 2)
-        if len(points) == 1:
-            x, h = points[0]
-            c.line((x - 5, h), (x + 5, h), "main", 2)
+    if len(flags) < FEW:
+        _single(c, course, y, [i for i in spots if np.isfinite(value[i])], value, sigma)
+    else:
+        for run in _runs([i for i in spots if np.isfinite(value[i])], value):
+            upper = [(course.x[i], y(value[i] + 2 * sigma[i])) for i in run]
+            lower = [(course.x[i], y(value[i] - 2 * sigma[i])) for i in reversed(run)]
+            c.area([*upper, *lower], "wash")
+            c.polyline([(course.x[i], y(value[i])) for i in run], "main", 2)
+            if len(run) == 1:
+                _single(c, course, y, run, value, sigma)
     for i in spots:
         if np.isfinite(raw[i]):
             c.dot((course.x[i], y(raw[i])), 3.0 if len(spots) < 80 else 1.6, "ink", hollow=len(spots) < 80)
+    for x, letter in letters:
+        c.text((x, top - 4), letter, "mark", 12, "middle", bold=True, halo=True)
     return [
         (
             tag, course.labels[i], unit, plain(raw[i], sigma[i]), plain(value[i], sigma[i]), plain(sigma[i], sigma[i]),
@@ -201,6 +204,14 @@ def _panel(
         )
         for i in spots
     ]  # fmt: skip
+
+
+def _single(c: Canvas, course: Course, y: Scale, spots: Sequence[int], value: Array, sigma: Array) -> None:
+    """Draw snapshots that stand alone as bars of ±2 sigmas."""
+    for i in spots:
+        high, low = y(value[i] + 2 * sigma[i]), y(value[i] - 2 * sigma[i])
+        c.box(course.x[i] - 9, high, 18, low - high, "wash")
+        c.line((course.x[i] - 12, y(value[i])), (course.x[i] + 12, y(value[i])), "main", 2)
 
 
 def _runs(spots: Sequence[int], value: Array) -> list[list[int]]:
@@ -214,7 +225,9 @@ def _runs(spots: Sequence[int], value: Array) -> list[list[int]]:
     return out
 
 
-def _hatches(c: Canvas, course: Course, flags: Sequence[str], top: float, bottom: float) -> None:
+def _hatches(c: Canvas, course: Course, flags: Sequence[str], top: float, bottom: float) -> list[tuple[float, str]]:
+    """Hatch flagged spans; returns where their letters belong."""
+    letters: list[tuple[float, str]] = []
     half = max(course.step / 2, 1.0)
     i = 0
     while i < len(flags):
@@ -225,8 +238,9 @@ def _hatches(c: Canvas, course: Course, flags: Sequence[str], top: float, bottom
             a, b = max(course.x[i] - half, course.left), min(course.x[j] + half, course.right)
             c.add(_pale(a, top, b - a, bottom - top))
             if b - a > 9:
-                c.text(((a + b) / 2, top + 11), flags[i], "mark", 12, "middle", bold=True, halo=True)
+                letters.append(((a + b) / 2, flags[i]))
         i = j + 1
+    return letters
 
 
 def _pale(x: float, y: float, width: float, height: float) -> Markup:
