@@ -6,6 +6,7 @@ import json
 import os
 import shutil
 from collections.abc import Mapping
+from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
@@ -80,10 +81,12 @@ class Journal:
                 entry.unlink()
 
     def finish(self) -> None:
-        """Remove the folder of the parts."""
+        """Remove the folder of the parts, and that of the results where it holds none."""
         self.clear()
         self.close()
         shutil.rmtree(self.folder, ignore_errors=True)
+        with suppress(OSError):
+            self.target.rmdir()  # only where it is empty
 
     def close(self) -> None:
         """Let another run begin here."""

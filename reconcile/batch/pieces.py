@@ -134,8 +134,11 @@ class Log:
         """Pieces of each chunk of `size` rows (the last one has fewer); chunks not wanted are passed over unread."""
         number, held, gathered = 0, 0, []
         for layout, path, rows in zip(self.layouts, self.files, self.rows, strict=True):
-            cursor = _ParquetRows(path) if layout.encoding == "" else _Lines(path, layout)
             done = 0
+            try:
+                cursor = _ParquetRows(path) if layout.encoding == "" else _Lines(path, layout)
+            except OSError as error:
+                raise _vanished(path, error) from None
             try:
                 while done < rows:
                     take = min(size - held, rows - done)
