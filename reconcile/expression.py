@@ -310,15 +310,25 @@ def stack(expressions: Sequence[Expression]) -> Expression:
     Expression
         With as many entries as all of them together.
     """
-    sizes = [e.size for e in expressions]
-    total, before = sum(sizes), np.cumsum([0, *sizes])
-    out = None
-    for e, start in zip(expressions, before, strict=False):
-        place = sp.csr_array(
-            (np.ones(e.size), (np.arange(start, start + e.size), np.arange(e.size))), shape=(total, e.size)
-        )
-        part = place @ e
-        out = part if out is None else out + part
-    if out is None:
+    if not expressions:
         raise ValueError("nothing to stack")
-    return out
+    system = expressions[0].system
+    if any(e.system is not system for e in expressions):
+        raise ValueError("expressions of two different systems cannot be combined")
+    total = sum(e.size for e in expressions)
+    columns = max(e.linear.shape[1] for e in expressions)
+    calls, before = [], 0
+    for e in expressions:
+        for coefficient, call in e.calls:
+            ends = np.clip(np.arange(total + 1) - before, 0, e.size)
+            inner = (coefficient.data, coefficient.indices, coefficient.indptr[ends])
+            calls.append((sp.csr_array(inner, shape=(total, coefficient.shape[1])), call))
+        before += e.size
+    return Expression(
+        system,
+        sp.csr_array(sp.vstack([_widen(e.linear, columns) for e in expressions])),
+        np.concatenate([e.constant for e in expressions]),
+        sp.csr_array(sp.block_diag([e.products for e in expressions])),
+        np.concatenate([e.pairs for e in expressions]),
+        tuple(calls),
+    )
