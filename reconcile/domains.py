@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import contextlib
 import importlib.util
+import itertools
 import re
 import sys
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from importlib.metadata import EntryPoint, entry_points
 from pathlib import Path
@@ -21,6 +23,22 @@ from .hookspecs import PROJECT, Domain
 if TYPE_CHECKING:
     from .network import Network
     from .system import System
+
+RETURNED: dict[str, type] = {
+    "reconcile_sources": Mapping,
+    "reconcile_writers": Mapping,
+    "reconcile_sections": Sequence,
+}
+"""What hooks must return."""
+
+MOST_TOLD = 600
+"""Characters of a plugin's message that are printed."""
+
+MOST_DOMAINS = 1000
+"""Domains that one plugin may offer."""
+
+LONGEST_TEXT = 4000
+"""Characters of a summary, a caution or a sentence."""
 
 __all__ = ["DomainInfo", "Plugins", "load_plugins"]
 
@@ -68,6 +86,12 @@ class Plugins:
             wanted = {k: arguments[k] for k in implementation.argnames if k in arguments}
             with named(implementation.plugin_name, f"hook {hook}"):
                 returned = implementation.function(**wanted)
+            wanted_kind = RETURNED.get(hook, object)
+            if not isinstance(returned, wanted_kind):
+                raise PluginError(
+                    implementation.plugin_name,
+                    f"hook {hook} must return a {wanted_kind.__name__.lower()}, not {type(returned).__name__}",
+                )
             yield implementation.plugin_name, returned
 
     def domain(self, name: str) -> Domain:
@@ -108,12 +132,13 @@ class Plugins:
         """
         for name, options in _ordered(chosen, self.domains):
             info = self.domains[name]
-            rows, columns = len(system.row_blocks), system.size
+            rows, columns, blocks = len(system.row_blocks), system.size, len(system.blocks)
             with system.written_by(name), named(info.plugin, f"domain {name!r}", user_errors=True):
                 info.domain.build(network, system, options)
                 _ = system.equations
             if len(system.row_blocks) == rows and system.size == columns:
                 raise PluginError(info.plugin, f"domain {name!r} wrote neither variables nor balances")
+            _check_blocks(system, blocks, info)
             _check_rows(system, rows, info)
         before = system.size
         for plugin, _ in self.each("reconcile_faults", network=network, system=system):
@@ -124,28 +149,36 @@ class Plugins:
 
 
 class named:
-    """Turn whatever a plugin raises into an error that names the plugin."""
+    """Turn whatever a plugin raises into an error that names the plugin; what it prints goes to the error stream."""
 
     def __init__(self, plugin: str, doing: str, *, user_errors: bool = False) -> None:
         self.plugin = plugin
         self.doing = doing
         self.user_errors = user_errors
+        self._aside = contextlib.redirect_stdout(sys.stderr)
 
     def __enter__(self) -> None:
-        return None
+        self._aside.__enter__()
 
     def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, _trace: object) -> Literal[False]:
-        if error is None or not isinstance(error, Exception) or isinstance(error, (PluginError, InputError)):
+        self._aside.__exit__(None, None, None)
+        if isinstance(error, (PluginError, InputError)) or not isinstance(error, (Exception, SystemExit)):
             return False
         if self.user_errors and type(error) is ValueError and _is_refusal(error):
             raise InputError(
-                Problem("domain-refused", f"{self.doing}: {error}", where=Location(tag=self.plugin))
+                Problem("domain-refused", f"{self.doing}: {told(str(error))}", where=Location(tag=self.plugin))
             ) from error
         raise PluginError(
             self.plugin,
-            f"{self.doing} failed with {type(error).__name__}: {error}",
+            f"{self.doing} failed with {type(error).__name__}: {told(str(error))}",
             hint="report this to the author of the plugin; the program itself is well",
         ) from error
+
+
+def told(text: str, most: int = MOST_TOLD) -> str:
+    """One line of what a plugin says, without control characters, cut where it floods the screen."""
+    line = " ".join("".join(c if c.isprintable() else " " for c in text[: 2 * most]).split())
+    return line if len(line) <= most and len(text) <= 2 * most else f"{line[:most]} ..."
 
 
 def _is_refusal(error: ValueError) -> bool:
@@ -235,12 +268,12 @@ def load_plugins(
             if error.code == "name-clash":
                 raise
             plugins.notices.append(Notice("plugin-left-out", f"{error.message}; it was left out"))
-        except Exception as error:
+        except (Exception, SystemExit) as error:
             plugins.notices.append(
                 Notice(
                     "plugin-left-out",
                     f"plugin {point.name!r}{f' of {origin}' if origin else ''} could not be loaded "
-                    f"({type(error).__name__}: {error}); it was left out",
+                    f"({type(error).__name__}: {told(str(error))}); it was left out",
                 )
             )
     for file in files:
@@ -301,12 +334,15 @@ def _add_domains(plugins: Plugins, name: str, module: Any, origin: str) -> None:
     if hook is None:
         return
     with named(name, "hook reconcile_domains"):
-        offered = list(hook())
+        offered = list(itertools.islice(hook(), MOST_DOMAINS + 1))
+    if len(offered) > MOST_DOMAINS:
+        raise PluginError(name, f"reconcile_domains offers more than {MOST_DOMAINS} domains")
     for kind in offered:
         if not (isinstance(kind, type) and issubclass(kind, Domain)):
             raise PluginError(name, f"reconcile_domains offered {kind!r}, which is no subclass of reconcile.Domain")
         if not re.fullmatch(r"[a-z][a-z0-9_]*", kind.name or ""):
             raise PluginError(name, f"domain class {kind.__name__} needs a lower-case name, got {kind.name!r}")
+        _check_texts(name, kind)
         if kind.name in plugins.domains:
             other = plugins.domains[kind.name]
             raise PluginError(
@@ -318,3 +354,50 @@ def _add_domains(plugins: Plugins, name: str, module: Any, origin: str) -> None:
             )
         with named(name, f"making domain {kind.name!r}"):
             plugins.domains[kind.name] = DomainInfo(kind(), name, origin)
+
+
+def _check_texts(plugin: str, kind: type[Domain]) -> None:
+    """Refuse a domain whose attributes are not what the contract says, before anything prints or reads them."""
+    texts: list[tuple[str, Any]] = [(a, getattr(kind, a)) for a in ("version", "summary", "caution")]
+    for attribute in ("after", "forgotten"):
+        values = getattr(kind, attribute)
+        if not isinstance(values, (tuple, list)) or len(values) > MOST_DOMAINS:
+            raise PluginError(plugin, f"{attribute} of domain {kind.name!r} must be a short tuple of texts")
+        texts += [(attribute, v) for v in values]
+    for attribute, text in texts:
+        if not isinstance(text, str):
+            raise PluginError(plugin, f"{attribute} of domain {kind.name!r} must be a text, not {type(text).__name__}")
+        if len(text) > LONGEST_TEXT:
+            raise PluginError(
+                plugin, f"{attribute} of domain {kind.name!r} has {len(text)} characters; {LONGEST_TEXT} are the most"
+            )
+    for attribute in ("options", "stream_options", "node_options"):
+        model = getattr(kind, attribute)
+        if model is not None and not (isinstance(model, type) and hasattr(model, "model_validate")):
+            raise PluginError(plugin, f"{attribute} of domain {kind.name!r} must be a pydantic model or None")
+
+
+def _check_blocks(system: System, first: int, info: DomainInfo) -> None:
+    """Refuse variables whose unit is no text, and faults whose sentences cannot be filled."""
+    words = {"item": "", "size": "", "unit": "", "direction": ""}
+    for block in system.blocks[first:]:
+        owner = f"domain {info.domain.name!r}"
+        if not isinstance(block.unit, str):
+            raise PluginError(
+                info.plugin, f"{owner} gives {block.quantity!r} a unit that is no text: {block.unit!r:.80}"
+            )
+        if block.fault is None:
+            continue
+        for key, text in (("says", block.fault.says), ("separate", block.fault.separate)):
+            try:
+                text.format(**words)
+            except Exception as error:
+                raise PluginError(
+                    info.plugin,
+                    f"{owner} has a fault {block.quantity!r} whose {key}= cannot be filled: {told(str(text), 200)}",
+                    hint="there are {item}, {size}, {unit} and {direction}",
+                ) from error
+            if len(text) > LONGEST_TEXT:
+                raise PluginError(
+                    info.plugin, f"{owner}: {key}= of fault {block.quantity!r} has {len(text)} characters"
+                )

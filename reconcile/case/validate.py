@@ -6,7 +6,7 @@ from typing import Any, TypeVar
 
 from pydantic import BaseModel, ValidationError
 
-from ..errors import Problem, Problems, did_you_mean
+from ..errors import PluginError, Problem, Problems, did_you_mean
 from .places import Places
 
 __all__ = ["keys_of", "validated"]
@@ -77,6 +77,15 @@ def validated(
             if e["type"] != "missing" or not _is_near(e["loc"], unknown)
         )
         return None
+    except Exception as error:
+        # A validator of a plugin's own model may raise anything; one of ours that does is a bug of this program.
+        if model.__module__.startswith("reconcile."):
+            raise
+        raise PluginError(
+            model.__module__.removeprefix("reconcile_plugin_file_"),
+            f"checking {owner} failed with {type(error).__name__}: {str(error)[:200]!r}",
+            hint="report this to the author of the plugin; the program itself is well",
+        ) from error
 
 
 def _tell(
