@@ -8,6 +8,7 @@ here is random, so the same case gives the same sheet.
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass
 from itertools import pairwise
@@ -17,8 +18,9 @@ __all__ = ["Drawn", "Stroke", "lay_out"]
 Point = tuple[float, float]
 
 GAP_X, GAP_Y, LANE, MARGIN, SWEEPS = 34.0, 18.0, 18.0, 16.0, 24
-BELOW, STUB = 4.0, 14.0
-"""Room that a stream takes below its label; its straight end before a node, where the arrow head lies."""
+BELOW, STUB, TURN = 4.0, 14.0, 8.0
+"""Room that a stream takes below its label; its straight end before a node, where the arrow head
+lies; the distance between recycles that turn beside the same layer."""
 
 
 @dataclass(frozen=True)
@@ -119,7 +121,7 @@ def lay_out(
         links += list(pairwise(whole))
     layers = _ordered(cells, links)
     _heights(cells, layers, links)
-    widths = _columns(cells, layers)
+    edges = _columns(cells, layers, streams, back)
     top = min((c.y - c.above for c in cells), default=0.0)
     for c in cells:
         c.y += MARGIN - top
@@ -129,8 +131,11 @@ def lay_out(
     for j, chain in chains.items():
         strokes[j] = _forward(cells, streams[j], chain, ports[j])
     lanes, floor = _lanes(cells, streams, labels, back, floor)
+    turns = _turns(cells, streams, lanes)
     for j in back:
-        strokes[j] = _recycle(cells, streams[j], ports[j], lanes[j], widths)
+        a, b = (cells[k] for k in streams[j])
+        right, left = edges[a.layer][1] + turns[j][0], edges[b.layer][0] - turns[j][1]
+        strokes[j] = _recycle(a, b, ports[j], (right, left), lanes[j])
     reach = [p for s in strokes if s is not None for p in s.points]
     low = min([0.0, *(x for x, _ in reach)])
     width = max([c.x + c.width / 2 for c in cells] + [x for x, _ in reach], default=0.0) + MARGIN
@@ -153,35 +158,90 @@ def _moved(s: Stroke, shift: float) -> Stroke:
 
 
 def _against(count: int, streams: Sequence[tuple[int, int]]) -> set[int]:
-    """Streams that close a loop when the network is walked from its inlets, in the order of the case."""
-    out: list[list[int]] = [[] for _ in range(count)]
-    for j, (a, b) in enumerate(streams):
-        if a >= 0 and b >= 0:
-            out[a].append(j)
+    """Streams that are drawn as recycles: few, and those that run back towards the inlets.
+
+    Orders of the nodes are tried by walking from the inlets, in depth and in breadth; each is improved by moving single
+    nodes to their best place. What then runs backwards in the best order is set aside.
+    """
+    inner = [(a, b, j) for j, (a, b) in enumerate(streams) if a >= 0 and b >= 0]
     inlets = [b for a, b in streams if a < 0 and b >= 0]
-    fed = {b for a, b in streams if a >= 0}
-    starts = [*inlets, *(k for k in range(count) if k not in fed), *range(count)]
-    colour = [0] * count
-    back: set[int] = set()
+    fed = {b for _, b, _ in inner}
+    starts = list(dict.fromkeys([*inlets, *(k for k in range(count) if k not in fed), *range(count)]))
+    out: list[list[int]] = [[] for _ in range(count)]
+    for a, b, _ in inner:
+        out[a].append(b)
+    distance = _distances(count, out, starts)
+    weighed = [(a, b, 3 if distance[b] <= distance[a] else 4) for a, b, _ in inner if a != b]
+    tried = []
+    for order in (_in_depth(count, out, starts), sorted(range(count), key=lambda k: distance[k])):
+        place = {k: i for i, k in enumerate(_sifted(order, weighed))}
+        found = {j for a, b, j in inner if place[a] >= place[b]}
+        cost = sum(w for a, b, w in weighed if place[a] >= place[b])
+        tried.append((cost, max(_levels(count, streams, found), default=0), found))
+    # Of equally good orders the one with fewer layers shows the main direction better.
+    return min(tried, key=lambda t: t[:2])[2]
+
+
+def _in_depth(count: int, out: Sequence[Sequence[int]], starts: Sequence[int]) -> list[int]:
+    """Nodes so that each stands before what is only reached through it."""
+    seen = [False] * count
+    finished: list[int] = []
     for start in starts:
-        if colour[start]:
+        if seen[start]:
             continue
-        colour[start] = 1
+        seen[start] = True
         walk = [(start, iter(out[start]))]
         while walk:
-            node, rest = walk[-1]
-            following = next(rest, None)
+            following = next((b for b in walk[-1][1] if not seen[b]), None)
             if following is None:
-                colour[node] = 2
-                walk.pop()
-                continue
-            b = streams[following][1]
-            if colour[b] == 1:
-                back.add(following)
-            elif colour[b] == 0:
-                colour[b] = 1
-                walk.append((b, iter(out[b])))
-    return back
+                finished.append(walk.pop()[0])
+            else:
+                seen[following] = True
+                walk.append((following, iter(out[following])))
+    return finished[::-1]
+
+
+def _distances(count: int, out: Sequence[Sequence[int]], starts: Sequence[int]) -> list[int]:
+    """Steps from the first inlet to each node; what it does not reach is counted from the next one, and so on."""
+    distance = [-1] * count
+    for start in starts:
+        ring, steps = [start] if distance[start] < 0 else [], 0
+        while ring:
+            for k in ring:
+                distance[k] = steps
+            ring = list(dict.fromkeys(b for a in ring for b in out[a] if distance[b] < 0))
+            steps += 1
+    return distance
+
+
+def _sifted(order: list[int], weighed: Sequence[tuple[int, int, int]]) -> list[int]:
+    """Move single nodes to where the least runs backwards, until nothing gets better."""
+    pull: dict[int, dict[int, int]] = {k: {} for k in order}
+    entering = dict.fromkeys(order, 0)
+    for a, b, w in weighed:
+        # Standing behind its source a stream stops running backwards, standing behind its target it starts to.
+        pull[b][a] = pull[b].get(a, 0) - w
+        pull[a][b] = pull[a].get(b, 0) + w
+        entering[b] += w
+    for _ in range(SWEEPS):
+        better = False
+        for node in list(order):
+            at = order.index(node)
+            rest = order[:at] + order[at + 1 :]
+            cost = lowest = here = entering[node]
+            where = 0
+            for i, k in enumerate(rest, 1):
+                cost += pull[node].get(k, 0)
+                if i == at:
+                    here = cost
+                if cost < lowest:
+                    lowest, where = cost, i
+            if lowest < here:
+                order = [*rest[:where], node, *rest[where:]]
+                better = True
+        if not better:
+            break
+    return order
 
 
 def _levels(count: int, streams: Sequence[tuple[int, int]], back: set[int]) -> list[int]:
@@ -287,16 +347,21 @@ def _kept_apart(cells: list[_Cell], layer: Sequence[int], wanted: list[float], w
     return [f + o for f, o in zip(flat, offsets, strict=True)]
 
 
-def _columns(cells: list[_Cell], layers: Sequence[Sequence[int]]) -> list[tuple[float, float]]:
-    """Left and right edge of each layer; sets the middle of each cell."""
+def _columns(
+    cells: list[_Cell], layers: Sequence[Sequence[int]], streams: Sequence[tuple[int, int]], back: set[int]
+) -> list[tuple[float, float]]:
+    """Left and right edge of each layer, with room beside it for recycles; sets the middle of each cell."""
+    leaving = Counter(cells[streams[j][0]].layer for j in back)
+    entering = Counter(cells[streams[j][1]].layer for j in back)
     edges = []
     x = MARGIN
-    for layer in layers:
+    for number, layer in enumerate(layers):
+        x += TURN * entering[number]
         width = max((cells[k].width for k in layer), default=0.0)
         for k in layer:
             cells[k].x = x + width / 2
         edges.append((x, x + width))
-        x += width + (GAP_X if width else 0.0)
+        x += width + (GAP_X if width else 0.0) + TURN * leaving[number]
     return edges
 
 
@@ -354,9 +419,10 @@ def _lanes(
         a, b = streams[j]
         low, high = sorted((cells[a].x, cells[b].x))
         half = max((high - low) / 2, labels[j][0] / 2) + 2 * GAP_X
-        spans.append((high - low, j, (low + high) / 2 - half, (low + high) / 2 + half))
+        # Of equal spans the one that starts lowest lies highest, so that loops nest instead of crossing.
+        spans.append((high - low, -cells[a].y, j, (low + high) / 2 - half, (low + high) / 2 + half))
     rows: list[list[tuple[float, float, int]]] = []
-    for _, j, low, high in sorted(spans):
+    for _, _, j, low, high in sorted(spans):
         row = next((r for r in rows if all(high < x or low > y for x, y, _ in r)), None)
         if row is None:
             rows.append([(low, high, j)])
@@ -369,17 +435,24 @@ def _lanes(
     return lanes, floor
 
 
-def _recycle(
-    cells: list[_Cell],
-    ends: tuple[int, int],
-    port: tuple[float, float],
-    lane: float,
-    edges: Sequence[tuple[float, float]],
-) -> Stroke:
-    a, b = (cells[k] for k in ends)
-    # Each stroke turns within the gap beside its node, at a place that its lane decides, so that verticals differ.
-    turn = 8.0 + (lane * 0.37) % (GAP_X - 18.0)
-    right, left = edges[a.layer][1] + turn, edges[b.layer][0] - turn
+def _turns(
+    cells: list[_Cell], streams: Sequence[tuple[int, int]], lanes: dict[int, float]
+) -> dict[int, tuple[float, float]]:
+    """How far from the layers of its ends each recycle turns: the deeper its lane, the farther out."""
+    used: tuple[Counter[int], Counter[int]] = (Counter(), Counter())
+    turns = {}
+    for j in sorted(lanes, key=lambda k: (lanes[k], k)):
+        place = []
+        for side, end in enumerate(streams[j]):
+            layer = cells[end].layer
+            place.append(TURN * (1.5 + used[side][layer]) + (STUB if side else 0.0))
+            used[side][layer] += 1
+        turns[j] = (place[0], place[1])
+    return turns
+
+
+def _recycle(a: _Cell, b: _Cell, port: tuple[float, float], turn: tuple[float, float], lane: float) -> Stroke:
+    right, left = turn
     points = (
         (a.x + a.width / 2, port[0]), (right, port[0]), (right, lane), (left, lane), (left, port[1]),
         (b.x - b.width / 2, port[1]),
