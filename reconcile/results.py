@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from .accounts import Alternative
-    from .campaign.prepare import Prepared
+    from .campaign.snapshots import Prepared
     from .case.spec import CaseSpec
     from .diagnose.explain import Explainer
     from .figures import FigureValue
@@ -270,8 +270,9 @@ class Result:
             from .accounts import explainer_of
             from .snapshot import signatures
 
-            shifts = signatures(self.model, self.group(index))
-            self._explainers[key] = explainer_of(self.model, shifts, self.settings, self.spec, most)
+            group = self.group(index)
+            shifts, values = signatures(self.model, group), group.x[0][self.model.columns]
+            self._explainers[key] = explainer_of(self.model, shifts, self.settings, self.spec, most, values=values)
         return self._explainers[key]
 
     def figure_values(self, index: int = 0) -> tuple[FigureValue, ...]:

@@ -32,7 +32,7 @@ from .rivals import rival_notices
 if TYPE_CHECKING:
     import pandas as pd
 
-    from .campaign.prepare import Prepared
+    from .campaign.snapshots import Prepared
     from .coverage import Coverage
     from .model import Model
     from .trajectory import Trajectory

@@ -17,7 +17,7 @@ from .line_ups import closed_columns, silent
 if TYPE_CHECKING:
     from ..model import Model
     from ..run import Case
-    from .prepare import Prepared
+    from .snapshots import Prepared
 
 __all__ = ["LEFT_OUT", "adjust_prepared", "agreement_notices", "model_of"]
 

@@ -15,7 +15,7 @@ from .adjusted import model_of
 
 if TYPE_CHECKING:
     from ..results import Result
-    from .prepare import Alternative, Interval
+    from .snapshots import Alternative, Interval
 
 __all__ = ["BoundCheck", "Cell", "Moved", "WhatIf", "bound_checks", "moves", "variant", "what_ifs"]
 

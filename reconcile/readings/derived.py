@@ -110,6 +110,9 @@ class _Search:
         self.tags, self.values, self.moving, self.decimals = tags, values, moving, decimals
         self.found: list[DerivedColumn] = []
         self.done: set[int] = set()
+        # A few complete rows rule out nearly everything at once; where there are none, each group has to be tried.
+        whole = np.flatnonzero(np.isfinite(values[:, moving]).all(axis=1)) if moving else np.zeros(0, dtype=int)
+        self.probe = values[whole[[0, whole.size // 2, -1]]] if whole.size else None
 
     def holds(self, j: int, guess: npt.NDArray[np.float64]) -> int:
         """Return in how many rows a column is the guess rounded to its decimals; 0 if not in all."""
@@ -153,7 +156,7 @@ class _Search:
         return float(np.log10(max(spread, 1.0))) + 1.0
 
     def sums(self, terms: int) -> None:
-        for group in combinations(self.moving, terms + 1):
+        for group in self._likely_sums(terms):
             if self.done.intersection(group):
                 continue
             block = self.values[:, group]
@@ -168,6 +171,21 @@ class _Search:
                     continue
                 if self._sum(group, signed):
                     break
+
+    def _likely_sums(self, terms: int) -> list[tuple[int, ...]]:
+        """Groups of columns that add up to zero with some signs in the rows of the probe."""
+        groups = list(combinations(self.moving, terms + 1))
+        if self.probe is None or not groups:
+            return groups
+        index = np.array(groups)
+        half = np.zeros(self.values.shape[1])
+        half[self.moving] = [0.5 * 10.0 ** -self.decimals[j] for j in self.moving]
+        x = self.probe[:, index]
+        slack = half[index].sum(axis=1) + 1e-9 * np.abs(x).max(axis=2)
+        found = np.zeros(len(groups), dtype=bool)
+        for signs in product((1.0, -1.0), repeat=terms):
+            found |= (np.abs(x @ np.array([1.0, *signs])) <= slack).all(axis=0)
+        return [groups[i] for i in np.flatnonzero(found)]
 
     def _sum(self, group: tuple[int, ...], signed: npt.NDArray[np.float64]) -> bool:
         # signed @ block == 0; the calculated one shows the fewest decimals, and of those stands last.
@@ -195,11 +213,25 @@ class _Search:
         unit = 10.0 ** -self.decimals[j]
         return any(abs(z - guess) <= unit + 1e-8 * abs(z) for guess in (x / y, 100.0 * x / y, x * y))
 
+    def _likely_ratios(self, j: int) -> list[tuple[int, int]]:
+        """Pairs of columns whose ratio or product is column j in the rows of the probe."""
+        if self.probe is None:
+            return [(a, b) for a in self.moving for b in self.moving]
+        z = self.probe[:, j, None, None]
+        x, y = self.probe[:, self.moving, None], self.probe[:, None, self.moving]
+        slack = 10.0 ** -self.decimals[j] + 1e-8 * np.abs(z)
+        near = [np.abs(z - guess) <= slack for guess in (x / y, 100.0 * x / y, x * y)]
+        # A zero divisor says nothing of a ratio in that row.
+        found = np.logical_or.reduce([(n | (y == 0.0)).all(axis=0) for n in near])
+        return [(self.moving[a], self.moving[b]) for a, b in zip(*np.nonzero(found), strict=True)]
+
     def ratios(self) -> None:
         with np.errstate(divide="ignore", invalid="ignore"):
             for j in self.moving:
-                for a, b in product(self.moving, repeat=2):
-                    if j in self.done or j in (a, b) or a == b or self._digits(j) < 3:
+                if self._digits(j) < 3:
+                    continue
+                for a, b in self._likely_ratios(j):
+                    if j in self.done or j in (a, b) or a == b:
                         continue
                     x, y = self.values[:, a], self.values[:, b]
                     if not self._worth(j, a, b):
