@@ -138,6 +138,7 @@ def explainer_of(
     spec: CaseSpec | None,
     most: int | None = None,
     candidates: Sequence[Candidate] | None = None,
+    values: Array | None = None,
 ) -> Explainer | None:
     """Prepare the search for explanations in one linearisation.
 
@@ -154,6 +155,8 @@ def explainer_of(
         Replaces `max_faults`.
     candidates : sequence of Candidate, optional
         What the columns of `signatures` are; those of the model when left out.
+    values : ndarray, shape (k,), optional
+        Value of each reading, at which a sigma in percent is taken where the case states no expected value.
 
     Returns
     -------
@@ -174,7 +177,8 @@ def explainer_of(
     if most is None:
         most = min(DEFAULT_FAULTS, max(checks - 1, 1))
     chosen = model.candidates if candidates is None else candidates
-    rate, size = _priors(model, settings, spec, chosen)
+    norms = np.linalg.norm(signatures, axis=0)
+    rate, size = _priors(model, settings, spec, chosen, norms, values)
     try:
         return Explainer(
             signatures,
@@ -182,7 +186,7 @@ def explainer_of(
             fault_rate=rate,
             size_prior=size,
             max_faults=most,
-            scale=np.linalg.norm(signatures, axis=0),
+            scale=norms,
             saturated=saturated,
         )
     except Refusal as refusal:
@@ -190,39 +194,46 @@ def explainer_of(
 
 
 def _priors(
-    model: Model, settings: Settings, spec: CaseSpec | None, candidates: Sequence[Candidate]
+    model: Model,
+    settings: Settings,
+    spec: CaseSpec | None,
+    candidates: Sequence[Candidate],
+    norms: Array,
+    values: Array | None,
 ) -> tuple[Array, Array]:
     """Probability of each candidate, and the spread of its size in its unit."""
     own_rate = {t: m.options.get("fault_rate") for t, m in spec.meters.items()} if spec else {}
-    sigma = _typical_sigma(model)
+    sigma = _typical_sigma(model, values)
     by_unit: dict[str, list[float]] = {}
     for i in model.meters:
-        by_unit.setdefault(model.units[model.columns[i]], []).append(sigma[i] * abs(model.factor[i]))
-    everything = [s for v in by_unit.values() for s in v]
+        if sigma[i] > 0:
+            by_unit.setdefault(model.units[model.columns[i]], []).append(sigma[i] * abs(model.factor[i]))
+    # Where no sigma says how large a fault may be, it moves the checks as far as ten sigmas of a checked reading would.
+    moving = SIGMAS_OF_A_FAULT / np.where(norms > 0, norms, np.inf)
     rates, sizes = [], []
-    for c in candidates:
+    for c, by_checks in zip(candidates, moving, strict=True):
         if c.reading >= 0:
             r = model.readings[c.reading]
             stated = own_rate.get(r.tag) if c.rate is None else c.rate
             rates.append(settings.fault_rate if stated is None else float(stated))
-            sizes.append(SHARE_OF_SPAN * r.span if np.isfinite(r.span) else SIGMAS_OF_A_FAULT * sigma[c.reading])
+            by_sigma = SHARE_OF_SPAN * r.span if np.isfinite(r.span) else SIGMAS_OF_A_FAULT * sigma[c.reading]
+            sizes.append(by_sigma if by_sigma > 0 else by_checks)
         else:
             rates.append(settings.leak_rate if c.rate is None else c.rate)
-            near = by_unit.get(c.unit) or everything or [1.0]
-            sizes.append(SIGMAS_OF_A_FAULT * float(np.median(near)) / c.scale)
-    return np.array(rates), np.array(sizes)
+            near = by_unit.get(c.unit)
+            sizes.append(SIGMAS_OF_A_FAULT * float(np.median(near)) / c.scale if near else by_checks)
+    return np.array(rates), np.maximum(sizes, 1e-300)
 
 
-def _typical_sigma(model: Model) -> Array:
-    """Sigma of each reading at an expected value, in its own unit."""
-    value = np.array(
-        [
-            sum(c * model.design.get(model.system.column(n), 0.0) for n, c in r.reads) if r.kind == "meter" else 0.0
-            for r in model.readings
-        ]
-    )
+def _typical_sigma(model: Model, values: Array | None) -> Array:
+    """Sigma of each reading at its expected value, else at the value that is given, in its own unit; 0 if it vanishes."""
+    value = np.zeros(len(model.readings)) if values is None else np.nan_to_num(values)
+    for i, r in enumerate(model.readings):
+        columns = [model.system.column(n) for n, _ in r.reads] if r.kind == "meter" else []
+        if columns and all(k in model.design for k in columns):
+            value[i] = sum(c * model.design[k] for k, (_, c) in zip(columns, r.reads, strict=True))
     value = np.where(np.isfinite(model.constants), model.constants, value)
-    return np.maximum(model.total_sigma(value) / np.abs(model.factor), 1e-300)
+    return model.total_sigma(value) / np.abs(model.factor)
 
 
 def explain(

@@ -198,7 +198,8 @@ class Trajectory:
     def accounts(self) -> Accounts | None:
         """Explanations of the whole sequence; None without checks."""
         f, p = self.solution.signatures, self.solution.parity
-        explainer = explainer_of(self.model, f, self.settings, self.spec, candidates=self.candidates)
+        values = np.nan_to_num(self.solution.x).mean(axis=0)[self.model.columns]
+        explainer = explainer_of(self.model, f, self.settings, self.spec, candidates=self.candidates, values=values)
         return None if explainer is None else explain(explainer, p, self.model, self.settings.level, self.candidates)
 
     @cached_property

@@ -114,7 +114,8 @@ def steady_of(sequence: Sequence) -> Steady:
         )  # fmt: skip
     accounts = None
     if pool.objective > pool.limit:
-        explainer = explainer_of(model, pool.signatures, settings, result.spec)
+        values = np.mean([part.group.x[0] for part in sequence.parts], axis=0)[model.columns]
+        explainer = explainer_of(model, pool.signatures, settings, result.spec, values=values)
         accounts = None if explainer is None else explain(explainer, pool.parity, model, settings.level)
     single, without = _single(sequence) if accounts is not None and sequence.count > 2 else (None, float("nan"))
     return Steady(
