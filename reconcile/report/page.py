@@ -14,7 +14,7 @@ from .files import write_whole
 from .markup import Markup, element
 from .page_end import appendix, assumptions, figures_of_knowledge, typical, unknowable
 from .page_snapshot import explanations_part, snapshot_parts
-from .page_snapshots import one_at_a_time, overview
+from .page_snapshots import BYTES_OF_A_ROW, MOST_BYTES, one_at_a_time, over_time, overview, together
 from .palette import DARK, LIGHT, figure_style, variables
 from .words import MARKS, verdict_line
 
@@ -85,11 +85,12 @@ def render_page(result: Result, *, case: Case | None = None) -> str:
     if result.size == 1 and usable:
         sections += [*snapshot_parts(result, 0), ("explanations", "Explanations", explanations_part(result, 0))]
     elif usable:
-        details, shown = one_at_a_time(result)
-        sections += [
-            ("snapshots", "All snapshots", overview(result, shown)),
-            ("details", "One snapshot at a time", details),
-        ]
+        drawn, joint = over_time(result), together(result)
+        room = MOST_BYTES - len(drawn) - len(joint or "") - BYTES_OF_A_ROW * result.size
+        details, shown = one_at_a_time(result, room)
+        sections.append(("snapshots", "All snapshots", join(overview(result, shown), drawn)))
+        sections += [("together", "What they say together", joint)] if joint is not None else []
+        sections.append(("details", "One snapshot at a time", details))
     if usable:
         sections.append(("unknown", "What cannot be known", unknowable(result, case)))
     sections.append(("assumptions", "Assumptions", assumptions(result)))
@@ -122,6 +123,8 @@ def figures_of(result: Result, case: Case | None = None, snapshot: int | None = 
         figures.adjustments(result, index),
         figures.evidence(result),
         *figures.series(result),
+        *(figures.bias_tracks(result) if result.size > 1 and result.history.enough else []),
+        figures.error_against_flow(result) if result.size > 1 and result.history.enough else None,
         *figures_of_knowledge(result, index, case),
     ]
     return {f.name: f for f in drawn if f is not None}

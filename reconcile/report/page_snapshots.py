@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from . import figures
+from .history import history_section
 from .markup import Markup, element, join
 from .numbers import plain
 from .page_snapshot import explanations_part, figure_part, snapshot_name, snapshot_parts
@@ -14,23 +15,31 @@ from .words import MARKS, p_value, short_name, verdict_sentences
 if TYPE_CHECKING:
     from ..results import Result
 
-__all__ = ["MOST_DETAILS", "one_at_a_time", "overview"]
+__all__ = ["BYTES_OF_A_ROW", "MOST_BYTES", "one_at_a_time", "over_time", "overview", "together"]
 
-MOST_DETAILS, MOST_WITH_PRODUCTS, MOST_BYTES = 200, 40, 2_500_000
+MOST_DETAILS, MOST_WITH_PRODUCTS, MOST_BYTES = 200, 40, 4_300_000
 """A page holds no more than so many snapshots in detail (fewer where each has to be solved again for its explanations),
-and no more than so much text of them."""
+and no more than so much text in all."""
+
+MOST_UNFOLDED, BYTES_OF_A_ROW = 40, 320
+"""Longer tables of snapshots are folded; about so much text does a row of them take."""
 
 _ORDER = {"does not agree": 0, "watch": 1, "cannot tell": 2, "agrees": 3}
 
 
+def over_time(result: Result) -> Markup:
+    """Evidence and readings of all snapshots as figures."""
+    return join(figure_part(figures.evidence(result)), *(figure_part(f) for f in figures.series(result)))
+
+
 def overview(result: Result, shown: frozenset[int]) -> Markup:
-    """All snapshots: evidence over time, a sortable table, the readings over time.
+    """All snapshots in one table that can be sorted.
 
     Parameters
     ----------
     result : Result
     shown : frozenset of int
-        Snapshots that stand in detail elsewhere in the page.
+        Snapshots that stand in detail elsewhere in the page; their labels lead there.
 
     Returns
     -------
@@ -66,18 +75,38 @@ def overview(result: Result, shown: frozenset[int]) -> Markup:
     table = html_table(
         "All snapshots", header, rows, name="snapshots-table", left=(0, 5, 6), sortable=True, note=note, marked=marked
     )
-    folded = table
-    if result.size > 40:
-        folded = element("details", element("summary", f"Table of all {result.size} snapshots"), table)
+    if result.size > MOST_UNFOLDED:
+        return element("details", element("summary", f"Table of all {result.size} snapshots"), table)
+    return table
+
+
+def together(result: Result) -> Markup | None:
+    """What all snapshots say together; nothing where they are too few."""
+    history = result.history
+    if not history.enough:
+        return None
+    text = "\n".join(history_section(history)[2:]).strip("\n")
     return join(
-        figure_part(figures.evidence(result)),
-        folded,
-        *(figure_part(f) for f in figures.series(result)),
+        *(figure_part(f) for f in figures.bias_tracks(result)),
+        figure_part(figures.error_against_flow(result)),
+        element("pre", text, tabindex="0", aria_label="What all snapshots say together"),
     )
 
 
-def one_at_a_time(result: Result) -> tuple[Markup, frozenset[int]]:
-    """Each snapshot in detail, folded, and which these are; a slider where scripts run."""
+def one_at_a_time(result: Result, room: int) -> tuple[Markup, frozenset[int]]:
+    """Each snapshot in detail, folded, and which these are; a slider where scripts run.
+
+    Parameters
+    ----------
+    result : Result
+    room : int
+        Characters that the details may take; one snapshot is shown whatever it takes.
+
+    Returns
+    -------
+    markup : Markup
+    shown : frozenset of int
+    """
     usable = [i for i in range(result.size) if i not in result.table.failed]
     linear = result.model.equations.is_linear
     most = MOST_DETAILS if linear else MOST_WITH_PRODUCTS
@@ -88,7 +117,7 @@ def one_at_a_time(result: Result) -> tuple[Markup, frozenset[int]]:
     for i in ranked:
         part = _detail(result, i, opened=i == first, mixups=linear or i == first)
         size += len(part)
-        if parts and size > MOST_BYTES:
+        if parts and size > room:
             break
         parts[i] = part
     order = sorted(parts)
@@ -104,8 +133,11 @@ def one_at_a_time(result: Result) -> tuple[Markup, frozenset[int]]:
     )
     missing = result.size - len(result.table.failed) - len(parts)
     said = (
-        f"{len(parts)} of {result.size} snapshots are here in detail, those that disagree before the others; "
-        "reconcile run --snapshot prints any other."
+        join(
+            f"{len(parts)} of {result.size} snapshots are here in detail, those that disagree before the others; ",
+            element("code", "reconcile run --snapshot"),
+            " prints any other.",
+        )
         if missing
         else f"All {len(parts)} snapshots in detail."
     )

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 from .adjustments import adjustments
 from .balances import balances
-from .bias_track import bias_track
-from .closure_against_flow import closure_against_flow
+from .bias_track import bias_track, bias_tracks
+from .closure_against_flow import closure_against_flow, error_against_flow
 from .detectability import detectability
 from .evidence import evidence
 from .look_alikes import correlation_of, look_alikes
@@ -19,9 +19,11 @@ __all__ = [
     "adjustments",
     "balances",
     "bias_track",
+    "bias_tracks",
     "closure_against_flow",
     "correlation_of",
     "detectability",
+    "error_against_flow",
     "evidence",
     "look_alikes",
     "network",

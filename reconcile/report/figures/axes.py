@@ -16,7 +16,7 @@ __all__ = ["Course", "frame", "label_course", "place_of", "thinned"]
 
 Array = npt.NDArray[np.float64]
 
-WIDTH, LEFT, RIGHT, MOST_POINTS = 760.0, 78.0, 744.0, 240
+WIDTH, LEFT, RIGHT, MOST_POINTS = 760.0, 78.0, 744.0, 200
 
 _TIME = re.compile(r"\d{4}-\d\d-\d\d")
 
@@ -107,7 +107,7 @@ def label_course(c: Canvas, course: Course, bottom: float) -> None:
     most = max(2, int((course.right - course.left) / widest))
     chosen = sorted({round(k) for k in np.linspace(0, count - 1, min(most, count))})
     for i in chosen:
-        text = cut(course.labels[i], 150, 12)
+        text = cut(course.labels[i].replace("T", " ") if course.timed else course.labels[i], 150, 12)
         half = text_width(text, 12) / 2
         x = min(max(course.x[i], half + 2), course.width - half - 2)
         c.line((course.x[i], bottom), (course.x[i], bottom + 4), "line")

@@ -3,16 +3,22 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
 
+from ...diagnose.track import DECISION
 from ..canvas import Canvas, Scale, ticks
 from ..numbers import plain, signed
 from .axes import frame, label_course, place_of, thinned
 from .sheet import Figure
 
-__all__ = ["bias_track"]
+__all__ = ["bias_track", "bias_tracks"]
+
+if TYPE_CHECKING:
+    from ...over_time.tracks import Drift
+    from ...results import Result
 
 Array = npt.NDArray[np.float64]
 
@@ -28,7 +34,7 @@ def bias_track(
     up: Array,
     down: Array,
     limit: float,
-    onset: tuple[int, int, int] | None = None,
+    onsets: Sequence[tuple[int, int, int]] = (),
 ) -> Figure:
     """Draw the bias of each snapshot with ±2 sigmas, below it the cumulative sums with their alarm line.
 
@@ -43,8 +49,8 @@ def bias_track(
         One-sided cumulative sums in sigmas, both positive.
     limit : float
         Where they alarm.
-    onset : (int, int, int), optional
-        Most likely snapshot of the onset, and the ends of its interval.
+    onsets : sequence of (int, int, int), optional
+        Of each change the most likely first snapshot, and the ends of its interval.
 
     Returns
     -------
@@ -62,13 +68,12 @@ def bias_track(
         c.text((course.left - 8, y(v) + 4), f"{v:g}", "soft", 12, "end")
     sums = np.concatenate([up[np.isfinite(up)], down[np.isfinite(down)], [limit]])
     z = Scale(0.0, 1.1 * float(sums.max()), HEIGHT - 34, MIDDLE + 16)
-    if onset is not None:
-        a, b = course.x[onset[1]], course.x[onset[2]]
+    for k, (most_likely, earliest, latest) in enumerate(onsets, 1):
+        a, b = course.x[earliest], course.x[latest]
         c.box(a, top - 8, max(b - a, 3.0), HEIGHT - 34 - top + 8, "glow")
-        c.line((course.x[onset[0]], top - 8), (course.x[onset[0]], HEIGHT - 34), "mark", 1.5, "2 3")
-        anchor = "end" if course.x[onset[0]] > 0.7 * course.right else "start"
-        side = -6 if anchor == "end" else 6
-        c.text((course.x[onset[0]] + side, top - 14), "onset", "mark", 12, anchor, bold=True)
+        at = course.x[most_likely]
+        c.line((at, top - 8), (at, HEIGHT - 34), "mark", 1.5, "2 3")
+        c.text((at, top - 14), "onset" if len(onsets) == 1 else str(k), "mark", 12, "middle", bold=True)
     spots = thinned(bias, course)
     for i in spots:
         c.line((course.x[i], y(bias[i] - 2 * sigma[i])), (course.x[i], y(bias[i] + 2 * sigma[i])), "line", 1)
@@ -77,16 +82,16 @@ def bias_track(
     frame(c, course, MIDDLE, HEIGHT - 34)
     c.line((course.left, z(limit)), (course.right, z(limit)), "mark", 1.5, "6 4")
     c.text((course.left - 8, z(limit) + 4), "alarm", "mark", 12, "end")
-    c.text((course.left - 8, z(0) + 4), "0", "soft", 12, "end")
+    if z(0) - z(limit) > 14:
+        c.text((course.left - 8, z(0) + 4), "0", "soft", 12, "end")
     for values, dash in ((up, None), (down, "5 3")):
         c.polyline([(course.x[i], z(values[i])) for i in thinned(values, course)], "ink", 1.8, dash)
     label_course(c, course, HEIGHT - 34)
     alarm = np.flatnonzero((up > limit) | (down > limit))
     told = f"the cumulative sum alarms first at {labels[int(alarm[0])]}" if alarm.size else "no alarm"
-    began = (
-        f"; it most likely began at {labels[onset[0]]}, between {labels[onset[1]]} and {labels[onset[2]]}"
-        if onset is not None
-        else ""
+    began = "".join(
+        f"; {'it most likely began' if k == 0 else 'it changed again'} at {labels[o]}, between {labels[e]} and {labels[la]}"
+        for k, (o, e, la) in enumerate(onsets)
     )
     description = f"Bias of {name} in {unit} over {len(labels)} snapshots: {told}{began}."
     rows = [
@@ -96,3 +101,29 @@ def bias_track(
     header = ("snapshot", f"bias, {unit}", "± sigma", "sum high", "sum low")
     slug = "".join(ch if ch.isalnum() else "-" for ch in name)
     return Figure(f"bias-{slug}", f"Bias of {name}", description, c, header, rows)
+
+
+def bias_tracks(result: Result) -> list[Figure]:
+    """Draw the changes that were found over all snapshots, the clearest first.
+
+    Parameters
+    ----------
+    result : Result
+
+    Returns
+    -------
+    list of Figure
+    """
+    found: dict[str, list[Drift]] = {}
+    for drift in result.history.drifts:
+        found.setdefault(drift.track.name, []).append(drift)
+    drawn = []
+    for drifts in found.values():
+        track = drifts[0].track
+        onsets = sorted((d.stretch.onset, d.stretch.earliest, d.stretch.latest) for d in drifts)
+        drawn.append(
+            bias_track(
+                track.name, track.unit, result.labels, track.sizes, track.sigmas, track.up, track.down, DECISION, onsets
+            )
+        )  # fmt: skip
+    return drawn

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
@@ -11,7 +12,10 @@ from ..canvas import Canvas, Scale, text_width, ticks
 from ..numbers import plain, signed
 from .sheet import Figure
 
-__all__ = ["closure_against_flow"]
+__all__ = ["closure_against_flow", "error_against_flow"]
+
+if TYPE_CHECKING:
+    from ...results import Result
 
 Array = npt.NDArray[np.float64]
 
@@ -29,6 +33,7 @@ def closure_against_flow(
     flow_unit: str = "",
     unit: str = "",
     labels: Sequence[str] | None = None,
+    quantity: str = "closure",
 ) -> Figure:
     """Draw the closure of a balance at several flows, and the lines of the models that compete.
 
@@ -44,6 +49,8 @@ def closure_against_flow(
         Units of flow and closure.
     labels : sequence of str, optional
         Names of the snapshots, for the table.
+    quantity : str
+        What `closure` is: the closure of a balance, or the error of a meter.
 
     Returns
     -------
@@ -64,7 +71,7 @@ def closure_against_flow(
         c.text((LEFT - 8, y(v) + 4), f"{v:g}", "soft", 12, "end")
     c.line((LEFT, y(0.0)), (RIGHT, y(0.0)), "ink")
     c.text(((LEFT + RIGHT) / 2, HEIGHT - 8), f"flow, {flow_unit}" if flow_unit else "flow", "ink", 12, "middle")
-    c.text((12, TOP - 12), f"closure, {unit}" if unit else "closure", "ink", 12)
+    c.text((12, TOP - 12), f"{quantity}, {unit}" if unit else quantity, "ink", 12)
     styles = (("main", None), ("mark", "8 4"), ("ink", "2 4"))
     at = LEFT
     for (words, a, b, left, limit), (role, dash) in zip(models, styles, strict=False):
@@ -83,8 +90,51 @@ def closure_against_flow(
         f"{words} leaves χ² {left:.2f} ({'not excluded' if left <= limit else 'excluded'}, limit {limit:.2f})"
         for words, _, _, left, limit in models
     )
-    description = f"Closure of {name} at {len(flow)} flows with ±2 spreads. {told}."
+    description = f"{quantity.capitalize()} of {name} at {len(flow)} flows with ±2 spreads. {told}."
     names = labels if labels is not None else [str(i + 1) for i in range(len(flow))]
     rows = [(n, plain(f), signed(v, s), plain(s, s)) for n, f, v, s in zip(names, flow, closure, spread, strict=True)]
-    header = ("snapshot", f"flow, {flow_unit}".rstrip(", "), f"closure, {unit}".rstrip(", "), "± spread")
-    return Figure("closure-against-flow", f"Closure of {name} against flow", description, c, header, rows)
+    header = ("snapshot", f"flow, {flow_unit}".rstrip(", "), f"{quantity}, {unit}".rstrip(", "), "± spread")
+    return Figure(
+        "closure-against-flow", f"{quantity.capitalize()} of {name} against flow", description, c, header, rows
+    )
+
+
+def error_against_flow(result: Result) -> Figure | None:
+    """Draw the error of the meter that several flow levels speak of: constant, or in proportion.
+
+    Parameters
+    ----------
+    result : Result
+
+    Returns
+    -------
+    Figure or None
+        None where nothing is wrong, or where all snapshots lie at one level.
+    """
+    levels = result.history.levels
+    if levels.outcome == "nothing" or levels.one_level or levels.tag not in result.tags:
+        return None
+    track = next((t for t in result.history.tracks if t.name == levels.tag), None)
+    if track is None:
+        return None
+    read = result.readings[:, result.tags.index(levels.tag)]
+    flow = np.asarray(read - track.sizes, dtype=float)
+    models = []
+    for shape, words in (("constant", "a constant error"), ("scale", "an error of scale")):
+        every = [m for c in levels.classes for m in c] + list(levels.rejected)
+        m = next((m for m in every if m.shape == shape and levels.tag in m.names), None)
+        if m is not None:
+            intercept, slope = (m.size, 0.0) if shape == "constant" else (0.0, m.size)
+            models.append((words, intercept, slope, m.left, m.limit))
+    seen = np.isfinite(flow)
+    return closure_against_flow(
+        levels.tag,
+        flow[seen],
+        track.sizes[seen],
+        track.sigmas[seen],
+        models,
+        flow_unit=levels.unit,
+        unit=levels.unit,
+        labels=[t for t, s in zip(result.labels, seen, strict=True) if s],
+        quantity="error",
+    )

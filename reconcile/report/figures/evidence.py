@@ -49,7 +49,8 @@ def evidence(result: Result) -> Figure | None:
             c.text((course.left - 8, y(v**0.5) + 4), f"{v:g}", "soft", 12, "end")
     c.line((course.left, y(1.0)), (course.right, y(1.0)), "mark", 1.5, "6 4")
     c.text((course.left - 8, y(1.0) + 4), "limit", "mark", 12, "end")
-    c.text((course.left, 20), "χ² as a multiple of its limit (root scale)", "soft", 12)
+    dense = "" if course.step >= 9 else "; diamonds lie beyond the limit"
+    c.text((course.left, 20), f"χ² as a multiple of its limit (root scale){dense}", "soft", 12)
     spots = thinned(ratio, course)
     radius = 4.0 if len(spots) <= 80 else 2.5
     for i in spots:
