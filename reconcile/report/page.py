@@ -11,7 +11,7 @@ from ..errors import InputError, Problem
 from . import figures
 from .canvas import HATCH
 from .files import write_whole
-from .markup import Markup, element
+from .markup import Markup, element, join
 from .page_end import appendix, assumptions, figures_of_knowledge, typical, unknowable
 from .page_snapshot import explanations_part, snapshot_parts
 from .page_snapshots import BYTES_OF_A_ROW, MOST_BYTES, one_at_a_time, over_time, overview, together
