@@ -5,6 +5,9 @@ from __future__ import annotations
 import os
 from pathlib import Path
 
+# Before numpy is loaded: threads inside products of small matrices only wait for one another.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
 import numpy as np
 import pytest
 from hypothesis import settings
@@ -13,8 +16,6 @@ ROOT = Path(__file__).resolve().parent.parent
 
 settings.register_profile("default", deadline=None, derandomize=True, max_examples=50)
 settings.load_profile("default")
-
-os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 
 @pytest.fixture(autouse=True)

@@ -10,6 +10,7 @@ from pydantic import BaseModel
 from ..campaign.options import LabModel, LineUpModel, WindowsModel
 from .models import CaseModel, KnownModel, MeterModel, SettingsModel, SharedErrorModel
 from .spec import DomainModels
+from .trajectory import TrajectoryModel
 
 __all__ = ["json_schema"]
 
@@ -51,7 +52,14 @@ def json_schema(option_models: Mapping[str, DomainModels] | None = None) -> dict
     top["figures"] = _section(top["figures"], {"type": ["string", "number"]})
     top["readings"] = {**top["readings"], "type": ["string", "object", "null"]}
     windows, lab = _model(WindowsModel, definitions), _model(LabModel, definitions)
-    for key, kinds in (("settings", [settings]), ("windows", [windows]), ("lab", [lab, {"type": "string"}])):
+    trajectory = _model(TrajectoryModel, definitions)
+    blocks = (
+        ("settings", [settings]),
+        ("windows", [windows]),
+        ("lab", [lab, {"type": "string"}]),
+        ("trajectory", [trajectory]),
+    )
+    for key, kinds in blocks:
         top[key] = {"description": top[key]["description"], "anyOf": [*kinds, {"type": "null"}]}
     top["line_ups"] = _section(top["line_ups"], _model(LineUpModel, definitions))
     return {

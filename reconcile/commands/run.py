@@ -94,6 +94,14 @@ def run(
                     "leave --report and --pictures out, or remove the inventories to see each window alone",
                 )
             )
+        if suspects != "flag":
+            raise InputError(
+                Problem(
+                    "no-decisions",
+                    f"windows that are tied by inventories know no --suspects {suspects} yet",
+                    'leave a suspect out with --exclude TAG --because "..." instead',
+                )
+            )
         return _follow(loaded, readings, out, reasons, formats, strict=strict, as_json=as_json)
     if out is not None and suspects == "flag" and snapshot is None and "xlsx" not in formats:
         from .in_pieces import run_in_pieces
