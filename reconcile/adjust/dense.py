@@ -15,7 +15,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from functools import cached_property
+from functools import cached_property, partial
 
 import numpy as np
 import numpy.typing as npt
@@ -178,8 +178,11 @@ class Adjuster:
         if self.sharp is not None:
             return self.sharp(rhs)
         target = self.transform @ rhs
-        recover = self.elimination.recover
-        return recover @ rhs - (recover @ self.measured[:, self.pivots]) @ target, target
+        return self.elimination.recover @ rhs - self._through_pivots @ target, target
+
+    @cached_property
+    def _through_pivots(self) -> Array:
+        return self.elimination.recover @ self.measured[:, self.pivots]
 
     def unmeasured(self, adjusted: Array, rhs: Array) -> Array:
         """Values of the unmeasured variables, shape (N, n_u); undetermined directions are set to zero."""
@@ -289,11 +292,7 @@ def prepare(measured: Array, unmeasured: Array, sigma: Array) -> Adjuster:
         transform = exact.apply(np.eye(len(a_m)))[1]
         form = cleaned(form, pivots)
         whole = np.maximum(np.abs(through).max(axis=1, initial=0.0, keepdims=True), 1.0)
-
-        def sharp(rhs: Array) -> tuple[Array, Array]:
-            offset, target = exact.apply((rows * rhs)[:, None])
-            return unit_u * offset[:, 0], unit[pivots] * target[:, 0]
-
+        sharp = partial(exact.constants, rows=rows, above=unit_u, below=unit[pivots])
     else:
         through = elimination.recover @ a_m
         whole = np.abs(elimination.recover).max(axis=1, initial=0.0, keepdims=True) * np.abs(a_m).max(initial=0.0)

@@ -150,6 +150,11 @@ class SharpForm:
         above[self.pivots] = solved[: self.pivots.size]
         return above, solved[self.pivots.size :]
 
+    def constants(self, rhs: Array, *, rows: Array, above: Array, below: Array) -> tuple[Array, Array]:
+        """Right-hand sides of `apply` for those of the original rows, given the scales that units ask for."""
+        upper, lower = self.apply((rows * rhs)[:, None])
+        return above * upper[:, 0], below * lower[:, 0]
+
     def elimination(self, rough: Elimination) -> Elimination:
         """The same elimination of the unmeasured variables to the last digits."""
         rest = np.setdiff1d(np.arange(self.unmeasured.shape[1]), self.pivots)

@@ -240,3 +240,27 @@ def test_one_snapshot_without_an_answer_does_not_stop_the_others(run, tmp_path):
     assert rows[3].startswith("3,3.0")
     assert "not solved" in (tmp_path / "out" / "evidence.csv").read_text()
     assert "two answers close the balances in 2 of 3 snapshots, the first 1" in flat(done.stdout)
+
+
+@pytest.mark.parametrize(
+    ("body", "code", "words"),
+    [
+        (
+            "raise ValueError('table ends at 300 K')",
+            4,
+            "plugin 'plates': its function 'law' failed: ValueError: table ends",
+        ),
+        ("return side[:0]", 4, "plugin 'plates': its function 'law' failed: ValueError"),
+        ("return side * float('nan')", 3, "balance 'square of plate' is not a finite number"),
+    ],
+)
+def test_a_function_of_a_domain_that_fails_is_named_and_nothing_is_exported(
+    run, tmp_path, monkeypatch, body, code, words
+):
+    called = PLUGIN.replace("side * side == area", "system.apply(law, side, derivatives=lambda s: [2 * s]) == area")
+    monkeypatch.setitem(globals(), "PLUGIN", f"def law(side):\n    {body}\n{called}")
+    done = run("A\n4\n")
+    assert done.exit_code == code
+    assert words in flat(done.stdout + done.stderr)
+    assert "Traceback" not in done.stdout + done.stderr
+    assert not (tmp_path / "out").exists()

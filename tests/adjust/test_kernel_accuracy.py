@@ -5,6 +5,8 @@ Figures: x within 10 (1e-16 max|x| / sigma + 1e-15) sigma; variances within 1e-1
 exactly zero (a flow that the balances force) may come out as the square of a rounding error.
 """
 
+import pickle
+
 import numpy as np
 import pytest
 from hypothesis import given
@@ -275,3 +277,13 @@ def test_two_thousand_balances_of_one_stream_pair():
     np.testing.assert_allclose(x[0], y.mean(), rtol=0, atol=1e-13 * 50)
     np.testing.assert_allclose((parity**2).sum(), ((y - y.mean()) ** 2).sum(), rtol=1e-12)
     np.testing.assert_allclose((adjuster.cover**2).sum(axis=1), 1 / n, rtol=1e-12)
+
+
+def test_a_prepared_network_can_be_sent_to_another_process():
+    a, mask, sigma, y, _ = nearly_dependent(1, 1e-9, 0.8)
+    adjuster = prepare(a[:, mask], a[:, ~mask], sigma[mask])
+    assert adjuster.sharp is not None
+    twin = pickle.loads(pickle.dumps(adjuster))
+    rhs = np.ones(len(a))
+    for one, other in zip(adjuster.adjust(y[mask][None], rhs), twin.adjust(y[mask][None], rhs), strict=True):
+        np.testing.assert_array_equal(one, other)
