@@ -169,5 +169,12 @@ def _bench(domain: type[Domain], trials: Sequence[str | Path], plugins: Plugins,
             )
     bench = Bench(domain, plugins, read, seed, runs)
     for stand in bench.stands:
-        _ = stand.case
+        if not any(True for _ in stand.own_rows()):
+            raise InputError(
+                Problem(
+                    "nothing-on-trial",
+                    f"{stand.trial.path}: domain {domain.name!r} writes no balance in this case",
+                    "name it under domains: and give it something to balance",
+                )
+            )
     return bench

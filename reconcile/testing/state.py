@@ -14,7 +14,7 @@ from ..errors import InputError, Problem, SolveError, did_you_mean
 from ..model import Model
 from ..run import Case
 from ..system import Equations, System
-from ..units import factor_offset, parse_quantity
+from ..units import UnitProblem, factor_offset, parse_quantity
 from .trial import Trial
 
 __all__ = [
@@ -76,7 +76,12 @@ def exact_state(trial: Trial, case: Case) -> State:
                 Problem("unknown-variable", f"truth names {name!r}, which is no variable", did_you_mean(name, known))
             )
         column = system.column(name)
-        x[column], stated[column] = _in_unit(told, known[name]), True
+        try:
+            x[column], stated[column] = _in_unit(told, known[name]), True
+        except UnitProblem as problem:
+            raise InputError(
+                Problem(problem.code, f"truth of {name}: {problem.args[0]}", f"write a value in {known[name]}")
+            ) from None
     free = np.flatnonzero(~stated)
     x[free] = np.where(np.isfinite(x[free]), x[free], 1.0)
     equations = system.equations

@@ -195,6 +195,10 @@ def read_trial(path: str | Path, plugins: Plugins) -> Trial:
     case = stated.case
     if isinstance(case, str):
         case, _ = read_yaml(file.parent / case, problems)
+    if not isinstance(case, dict):
+        problems.add(
+            "not-a-case", f"{stated.case!r} is no case: a case is a block of keys", "", places.where(("case",))
+        )
     problems.raise_if_any()
     case = {k: v for k, v in case.items() if k != "readings"}
     return Trial(
