@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import sys
 
 import click
@@ -16,6 +17,9 @@ from .commands.run import run
 from .commands.start import start
 
 __all__ = ["main"]
+
+# The matrices are small: threads inside their products only wait for one another. Set before numpy is loaded.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 
 @click.group(
@@ -32,5 +36,18 @@ def main() -> None:
             stream.reconfigure(errors="replace")
 
 
-for command in (run, explain, check, coverage, place, rehearse, history, domains, schema, start, new_domain, check_domain):
+for command in (
+    run,
+    explain,
+    check,
+    coverage,
+    place,
+    rehearse,
+    history,
+    domains,
+    schema,
+    start,
+    new_domain,
+    check_domain,
+):
     main.add_command(command)

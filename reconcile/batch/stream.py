@@ -151,7 +151,10 @@ def _run(
     jobs: int,
     progress: Callable[[int, int], None] | None,
 ) -> StreamedRun:
-    engine = Engine(case, chosen, left_out)
+    first = log.layouts[0].table.select([plan_of(case.parts.spec).of(t).column or t for t in case.tags])
+    good = first.usable
+    typical = np.where(good, first.values, 0.0).sum(axis=0) / np.where(good.any(axis=0), good.sum(axis=0), np.nan)
+    engine = Engine(case, chosen, left_out, typical)
     model = case.model
     position = {int(c): v for v, c in enumerate(model.shown)}
     limits = {position[c]: ends for c, ends in limits_of(model, case.parts.spec).items() if c in position}

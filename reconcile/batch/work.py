@@ -6,6 +6,7 @@ import hashlib
 import json
 import os
 from collections.abc import Callable, Mapping, Sequence
+from contextlib import suppress
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -15,9 +16,11 @@ import numpy.typing as npt
 from scipy.special import chdtrc
 
 from ..adjust.batch import Batch, BatchResult, is_linear
+from ..adjust.batch_rows import RowBatch
 from ..adjust.solve import Problem
 from ..adjust.table import adjust_table
 from ..diagnose.critical import chi2_limit
+from ..errors import SolveError
 from ..model import Model
 from ..readings.table import ReadingsTable, Status
 from ..readings.validity import SignalLimits, check_signals
@@ -54,25 +57,38 @@ class Engine:
     case : Case
     settings : Settings
     excluded : mapping of tag to reason
+    typical : ndarray, shape (number of meters,)
+        Typical readings; nan where there is none.
     """
 
-    def __init__(self, case: Case, settings: Any, excluded: Mapping[str, str]) -> None:
+    def __init__(self, case: Case, settings: Any, excluded: Mapping[str, str], typical: Array) -> None:
         self.model: Model = case.model
         self.problem: Problem = case.problem(settings)
         self.case = case
         self.out = [i for i, r in enumerate(self.model.readings) if r.tag in excluded]
         self.batch: Batch | None = None
+        self.rows: RowBatch | None = None
+        given = np.ones(len(self.model.readings), dtype=bool)
+        given[self.out] = False
+        names = {"names": case.name_of_column, "row_names": case.name_of_row}
+        shown, meters = self.model.shown, self.model.meters
         if is_linear(self.problem):
-            given = np.ones(len(self.model.readings), dtype=bool)
-            given[self.out] = False
-            self.batch = Batch(
-                self.problem,
-                given,
-                self.model.shown,
-                self.model.meters,
-                names=case.name_of_column,
-                row_names=case.name_of_row,
-            )
+            self.batch = Batch(self.problem, given, shown, meters, **names)
+        elif self._linear_but_for_sigmas():
+            with suppress(SolveError):  # a sigma that vanishes at typical values: one by one, then
+                self.rows = RowBatch(self.problem, given, self._nominal(typical), shown, meters, **names)
+
+    def _linear_but_for_sigmas(self) -> bool:
+        shared = any(any(cause.relative) for cause in self.model.shared)
+        return not shared and self.problem.equations(np.zeros(len(self.model.readings))).is_linear
+
+    def _nominal(self, typical: Array) -> Array:
+        model = self.model
+        out = model.constants.copy()
+        out[model.meters] = typical * model.factor[model.meters] + model.offset[model.meters]
+        start = self.problem.start[model.columns]
+        out = np.where(np.isfinite(out), out, start)
+        return np.where(np.isfinite(out), out, np.nanmedian(np.abs(out)) if np.isfinite(out).any() else 1.0)
 
     def adjust(self, readings: Array) -> tuple[BatchResult, dict[int, str]]:
         """Adjust readings of the meters, shape (number of meters, N); and which snapshots failed, and why."""
@@ -80,7 +96,19 @@ class Engine:
         base = np.repeat(model.constants[:, None], readings.shape[1], axis=1)
         base[model.meters] = readings * model.factor[model.meters, None] + model.offset[model.meters, None]
         base[self.out] = np.nan
-        return (self.batch.adjust(base), {}) if self.batch is not None else self._one_by_one(base)
+        if self.batch is not None:
+            return self.batch.adjust(base), {}
+        if self.rows is None:
+            return self._one_by_one(base)
+        result, left = self.rows.adjust(base)
+        if not left.any():
+            return result, {}
+        rest, failed = self._one_by_one(base[:, left])
+        result.values[:, left], result.sigmas[left] = rest.values, rest.sigmas
+        for name in ("objective", "checks", "suspect", "largest", "absent", "checked"):
+            getattr(result, name)[left] = getattr(rest, name)
+        where = np.flatnonzero(left)
+        return result, {int(where[i]): words for i, words in failed.items()}
 
     def _one_by_one(self, base: Array) -> tuple[BatchResult, dict[int, str]]:
         model, count = self.model, base.shape[1]
@@ -162,11 +190,17 @@ class Worker:
         files = {}
         for kind, write in (
             ("adjusted.csv", lambda p: number_lines(rows.labels, result.values, p)),
-            ("sigmas.csv", lambda p: pattern_lines(rows.labels, result.sigmas, result.pattern, p)),
+            ("sigmas.csv", lambda p: self._sigmas(rows, result, p)),
             ("npz", lambda p: self._numbers(p, first, rows, result, failed)),
         ):
             files[kind] = _written(self.folder / f"{number:06d}.{kind}", write)
         return {"part": number, "rows": rows.values.shape[1], "files": files}
+
+    def _sigmas(self, rows: Rows, result: BatchResult, path: Path) -> None:
+        if self.engine.batch is None:
+            number_lines(rows.labels, result.sigmas.T, path)
+        else:
+            pattern_lines(rows.labels, result.sigmas, result.pattern, path)
 
     def _judged(self, rows: Rows) -> Rows:
         """Leave out what single readings cannot be."""

@@ -97,7 +97,9 @@ def test_parts_that_are_there_are_not_computed_again(campaign, tmp_path):
         run_streamed(case, folder / "log.csv", tmp_path, least=0, chunk=BLOCK, progress=stop_after(3))
     assert bytes_of(tmp_path) == {}
     calls = []
-    done = run_streamed(case, folder / "log.csv", tmp_path, least=0, chunk=BLOCK, progress=lambda d, n: calls.append((d, n)))
+    done = run_streamed(
+        case, folder / "log.csv", tmp_path, least=0, chunk=BLOCK, progress=lambda d, n: calls.append((d, n))
+    )
     assert done.taken_up == 3 * BLOCK
     assert calls[0] == (3 * BLOCK, PARTS * BLOCK - 100)
     assert len(calls) == 1 + PARTS - 3
@@ -209,7 +211,9 @@ def test_a_full_disk(campaign, tmp_path, size, kept):
     assert bytes_of(out) == want
 
 
-@pytest.mark.parametrize("way", ["a file has the folder's name", "a file has the parts' name", "a folder has a table's name"])
+@pytest.mark.parametrize(
+    "way", ["a file has the folder's name", "a file has the parts' name", "a folder has a table's name"]
+)
 def test_something_in_the_way(campaign, tmp_path, way):
     case, folder, _ = campaign
     out = tmp_path / "out"
@@ -273,7 +277,7 @@ def test_a_source_that_vanishes(campaign, tmp_path):
 
 
 def test_one_of_several_sources_vanishes(campaign, tmp_path):
-    case, folder, _ = campaign
+    case, _, _ = campaign
     frame = skid_log(4 * BLOCK)
     frame.iloc[: 2 * BLOCK].to_csv(tmp_path / "log1.csv", index=False)
     frame.iloc[2 * BLOCK :].to_csv(tmp_path / "log2.csv", index=False)
