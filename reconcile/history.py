@@ -18,7 +18,7 @@ from .over_time.one_sided import OneSided, one_sided_of
 from .over_time.second_opinion import SecondOpinion, second_opinion_of
 from .over_time.sequence import Sequence
 from .over_time.sigmas import About, SigmaAudit, audit_of
-from .over_time.steady import Steady, Stretch, steady_of, stretches_of
+from .over_time.steady import Steady, Stretch, steady_of, stretches_of, without_steady
 from .over_time.tracks import Drift, Track, TrackStretch, drifts_of, tracks_of, watched
 
 if TYPE_CHECKING:
@@ -120,11 +120,16 @@ class History:
         Nothing is named while a balance is off to one side in every record: what is missing there scatters, too.
         """
         about: About = "zero"
-        if self.drifts:
+        if not self.enough:
+            pass
+        elif self.drifts:
             about = "pairs" if self._sequence.one_linearisation else "mean"
         elif not self.steady.agrees:
             about = "mean"
-        found = audit_of(without_scale(self._sequence, self.levels), about)
+        granted = without_scale(self._sequence, self.levels)
+        if about == "mean" and granted is self._sequence and not self._sequence.one_linearisation:
+            granted = without_steady(granted, self.steady)
+        found = audit_of(granted, about)
         if any(o.structural for o in self.one_sided):
             return dataclasses.replace(found, status="structural", named=(), together=())
         return found

@@ -38,7 +38,10 @@ def read_calibrations(value: Any, tag: str, places: Places, problems: Problems) 
         entries, spots = value, [(*path, i) for i in range(len(value))]
     else:
         problems.add(
-            "wrong-type", f"calibrated of meter {tag!r} is no list of dates", f"write e.g. {_EXAMPLE}", places.where(path)
+            "wrong-type",
+            f"calibrated of meter {tag!r} is no list of dates",
+            f"write e.g. {_EXAMPLE}",
+            places.where(path),
         )
         return ()
     found: list[datetime] = []

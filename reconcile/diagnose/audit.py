@@ -91,6 +91,7 @@ class Audit:
         The same from changing this sigma alone; nan where it cannot be audited.
     factor, factor_low, factor_high : ndarray
         Factor on the sigma if it is the only one that is wrong, and its interval; nan where it cannot be audited.
+        Readings that are alike have the same gain, and each the factor that it would need alone.
     share : ndarray
         Share checked, averaged over the vectors.
     seen : ndarray of int
@@ -98,7 +99,7 @@ class Audit:
     limit : float
         For the largest gain, for the number of readings with any check (Bonferroni).
     best : int
-        Reading with the largest gain, -1 where there is none.
+        Reading with the largest gain, the first of those that are alike; -1 where there is none.
     alike : tuple of tuple of int
         Readings whose factors cannot be separated, because their signatures are parallel in every vector.
     """
@@ -134,8 +135,10 @@ class Audit:
 
     @property
     def auditable(self) -> npt.NDArray[np.bool_]:
-        """Whether anything can be said of each reading."""
-        return np.isfinite(self.gain)
+        """Whether anything can be said of each reading by itself."""
+        out = np.isfinite(self.gain)
+        out[[i for members in self.alike for i in members]] = False
+        return out
 
 
 def scatter(parity: Array, signatures: Array, sigma: Array, *, about: str = "zero") -> Scatter:
@@ -207,8 +210,6 @@ def audit(parts: Sequence[Scatter], *, level: float = 0.05) -> Audit:
     seen = np.array([p.snapshots for p in used]) @ (share > 0)
     can = (mean_share > 0) & (seen >= LEAST_SNAPSHOTS)
     alike = _alike(used, np.flatnonzero(can))
-    for members in alike:
-        can[list(members)] = False
     k = share.shape[1]
     gain, factor, lowest, highest = (np.full(k, np.nan) for _ in range(4))
     drop = float(chdtri(1, level))
@@ -410,7 +411,9 @@ def select_factors(parts: Sequence[Scatter], found: Audit) -> JointFactors:
     """
     chosen: list[int] = []
     best = joint_factors(parts, chosen)
-    open_ = [int(i) for i in np.flatnonzero(found.auditable)]
+    # Of readings that are alike the first stands for all.
+    others = {i for members in found.alike for i in members[1:]}
+    open_ = [int(i) for i in np.flatnonzero(np.isfinite(found.gain)) if i not in others]
     while open_:
         tried = [joint_factors(parts, [*chosen, i]) for i in open_]
         top = max(tried, key=lambda j: j.gain)

@@ -16,6 +16,9 @@ __all__ = ["FlowLevels", "LevelModel", "NextLevel", "levels_of", "without_scale"
 
 Array = npt.NDArray[np.float64]
 
+TOO_NOISY = 0.04
+"""Values whose squared error is a larger share of their mean square are no regressor: the fit would explain itself."""
+
 SAME_LEVEL = 0.05
 """Values within this share of the largest count as one level."""
 
@@ -89,6 +92,8 @@ class FlowLevels:
     noise : float
         Error of the values over their root mean square, squared: by so much the scales may be off.
     next : NextLevel or None
+    untried : tuple of str
+        Meters for which no error of scale can be tried: what they should read is not known well enough.
     """
 
     count: int
@@ -106,6 +111,7 @@ class FlowLevels:
     slope: Fit | None
     noise: float
     next: NextLevel | None
+    untried: tuple[str, ...]
 
     @property
     def gain(self) -> float:
@@ -175,6 +181,7 @@ def levels_of(sequence: Sequence) -> FlowLevels:
         slope=pair[1] if pair else None,
         noise=c.noise.get(candidate, np.nan),
         next=_next(sequence, c, alive) if outcome == "either" else None,
+        untried=tuple(sequence.candidates[i].name for i in c.meters if not c.noise[i] <= TOO_NOISY),
     )
 
 
@@ -269,6 +276,8 @@ def _models(sequence: Sequence, c: _Columns, level: float) -> list[LevelModel]:
             shape, kind, item, unit = "constant", one.kind, one.item, one.unit
             possible = one.side == 0 or one.side * fit.size > 0
         elif j < len(c.constant) + len(c.meters):
+            if not c.noise[c.meters[j - len(c.constant)]] <= TOO_NOISY:
+                continue
             one = sequence.candidates[c.meters[j - len(c.constant)]]
             shape, names, kind, item, unit, possible = "scale", (one.name,), "scale", one.item, "", True
         else:

@@ -30,7 +30,8 @@ class SigmaFactor:
     share : float
         Share checked, with the sigmas as declared.
     factor, low, high : float
-        Factor on the sigma if it is the only wrong one, and its 95 % interval at level 0.05; nan if not auditable.
+        Factor on the sigma if it is the only wrong one, and its 95 % interval at level 0.05; nan if not auditable,
+        unless that is for a tie.
     gain : float
         Twice the gain in log likelihood.
     reason : str
@@ -121,7 +122,7 @@ def audit_of(sequence: Sequence, about: About) -> SigmaAudit:
         reason = "tied" if i in tied else "" if np.isfinite(found.gain[i]) else "share"
         if few or (0 < found.seen[i] < LEAST_SNAPSHOTS):
             reason = "few"
-        known = not reason
+        known = reason in ("", "tied")
         meters.append(
             SigmaFactor(
                 tag,
@@ -180,22 +181,11 @@ def _hangs_on(sequence: Sequence, about: About) -> tuple[str, ...]:
 def _scatters(sequence: Sequence, about: About) -> list[Scatter]:
     model = sequence.result.model
     meters = model.meters
-    if about == "pairs" or (about == "mean" and sequence.one_linearisation):
-        return [
-            scatter(p.parity, p.group.signatures[:, meters], p.group.sigma[meters], about=about)
-            for p in sequence.parts
-            if len(p.rows) > 1
-        ] or _scatters(sequence, "zero")
-    if about == "zero":
-        return [scatter(p.parity, p.group.signatures[:, meters], p.group.sigma[meters]) for p in sequence.parts]
-    # Every snapshot has its own linearisation: take out the steady sizes that fit the pool best.
-    pool = sequence.pooled
-    norm = np.linalg.norm(pool.signatures, axis=0)
-    unit = np.where(norm > 0, norm, 1.0)
-    sizes = np.linalg.pinv(pool.signatures / unit, rcond=1e-9) @ pool.parity / unit
-    left = sequence.checks / max(sequence.checks - pool.checks, 1)
-    out = []
-    for p in sequence.parts:
-        t = (p.parity - p.signatures @ sizes) * np.sqrt(left)
-        out.append(scatter(t, p.group.signatures[:, meters], p.group.sigma[meters]))
-    return out
+    if about == "mean" and not sequence.one_linearisation:
+        # Every snapshot has a basis of its own, and no mean: the caller has taken out the steady fault that was named.
+        about = "zero"
+    parts = [p for p in sequence.parts if about == "zero" or len(p.rows) > 1]
+    return [
+        scatter(p.parity, p.group.signatures[:, meters], p.group.sigma[meters], about=about)
+        for p in parts or sequence.parts
+    ]

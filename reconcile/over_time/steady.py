@@ -10,7 +10,7 @@ from ..accounts import Accounts, explain, explainer_of
 from ..diagnose.critical import smallest_detectable
 from .sequence import Sequence
 
-__all__ = ["Steady", "SteadyFault", "Stretch", "steady_of", "stretches_of"]
+__all__ = ["Steady", "SteadyFault", "Stretch", "steady_of", "stretches_of", "without_steady"]
 
 LEAST_IN_A_STRETCH = 10
 MOST_STRETCHES = 6
@@ -122,6 +122,16 @@ def steady_of(sequence: Sequence) -> Steady:
         pool.count, pool.objective, pool.checks, pool.limit, pool.p,
         pool.contrast, pool.contrast_checks, pool.contrast_p, tuple(faults), accounts, single, without,
     )  # fmt: skip
+
+
+def without_steady(sequence: Sequence, steady: Steady) -> Sequence:
+    """Return the evidence with the best explanation of the pool granted, where there is one."""
+    standing = steady.accounts.standing if steady.accounts else ()
+    place = {c.name: i for i, c in enumerate(sequence.candidates)}
+    out = sequence
+    for fault in standing[0].alternatives[0].faults if standing else ():
+        out = out.minus(np.full(sequence.result.size, fault.size), place[fault.candidate.name])
+    return out
 
 
 def _single(sequence: Sequence) -> tuple[str | None, float]:

@@ -85,7 +85,7 @@ def _steady(history: History) -> list[str]:
             out.append(wrap(f"A steady error would be noticed (chance {power:.0f} %) from: {told}.", "    "))
     else:
         out.append(wrap(f"Pooled, something is off ({test}). " + " ".join(named_in_short(s.accounts)), "    "))
-        if s.single is not None:
+        if s.single is not None and not history.drifts:
             out.append(
                 wrap(f"It is all in one snapshot: without {s.single} the pool agrees (χ² {s.without_it:.2f}).", "    ")
             )
@@ -107,7 +107,7 @@ def _steady(history: History) -> list[str]:
     if s.contrast_checks and s.contrast_p < 0.01:
         out.append(
             wrap(
-                f"Snapshots with different readings absent contradict each other (χ² {s.contrast:.2f}, "
+                f"Snapshots contradict each other (χ² {s.contrast:.2f}, "
                 f"{s.contrast_checks} checks, p {_p(s.contrast_p)}) in a way that no steady fault explains.",
                 "    ",
             )
@@ -220,20 +220,18 @@ def drift_in_words(d: Drift, history: History) -> list[str]:
             else "."
         )
     out = [text]
+    same = [r for r in d.rivals if abs(r.correlation) >= 1 - PARALLEL and not r.excluded]
+    if same:
+        told = ", or ".join(_rival_phrase(r, history) for r in same)
+        out.append(f"Cannot tell it from: {told}; they look exactly alike in these readings.")
     groups: list[list[Rival]] = []
-    for r in d.rivals:
+    for r in (r for r in d.rivals if r not in same):
         near = groups and abs(groups[-1][0].behind - r.behind) <= 1e-6 * (1 + abs(r.behind))
         if near and abs(abs(groups[-1][0].correlation) - abs(r.correlation)) <= 1e-9:
             groups[-1].append(r)
         else:
             groups.append([r])
-    for g in groups[:MOST_LISTED]:
-        if abs(g[0].correlation) >= 1 - PARALLEL and not g[0].excluded:
-            told = ", or ".join(_rival_phrase(r, history) for r in g)
-            out.append(f"Cannot tell it from: {told}; they look exactly alike in these readings.")
-        else:
-            out.append(_rival(g, d, history))
-    return out
+    return out + [_rival(g, d, history) for g in groups[:MOST_LISTED]]
 
 
 def _rival_phrase(r: Rival, history: History) -> str:

@@ -29,7 +29,7 @@ def levels_in_words(history: History) -> list[str]:
 def level_sentences(history: History) -> list[str]:
     """Sentences on flow levels; none where nothing is wrong."""
     f = history.levels
-    if f.outcome == "nothing" or not f.tag or (history.drifts and f.outcome != "neither"):
+    if f.outcome == "nothing" or not (f.rejected or f.classes) or (history.drifts and f.outcome != "neither"):
         return []
     if f.outcome == "neither":
         if history.drifts or history.steady.agrees or history.steady.single is not None:
@@ -39,7 +39,7 @@ def level_sentences(history: History) -> list[str]:
             "Neither a constant error nor one of scale of any one meter, nor a constant loss, accounts for all snapshots: "
             f"the best, {_phrase(best, history)}, leaves χ² {best.left:.1f}, limit {best.limit:.1f}."
         )
-        return [text]
+        return [text, *_untried(f)]
     out = [_either(f, history) if f.outcome == "either" else _settled(f, history)]
     if f.outcome == "either":
         out.append(_next(f))
@@ -52,10 +52,21 @@ def level_sentences(history: History) -> list[str]:
             f"The values themselves are uncertain (their error is {100 * f.noise:.0f} % of their mean square): so far "
             "are the shares off."
         )
-    return out
+    return out + _untried(f)
+
+
+def _untried(f: FlowLevels) -> list[str]:
+    if not f.untried:
+        return []
+    untried = ", ".join(f.untried)
+    return [
+        f"Errors of scale were not tried for {untried}: what they should read is not known well enough from others."
+    ]
 
 
 def _span(f: FlowLevels) -> str:
+    if not f.tag:
+        return f"over {f.count} snapshots"
     if f.one_level:
         return f"at the one level of {plain(0.5 * (f.lowest + f.highest), _digit(f))} {f.unit}"
     return f"at every level from {plain(f.lowest, _digit(f))} to {plain(f.highest, _digit(f))} {f.unit}"
