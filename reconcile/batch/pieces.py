@@ -4,68 +4,21 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from glob import glob, has_magic
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from ..errors import InputError, Location, MissingExtra, Problem
-from ..readings.assemble import RawTable, assemble
-from ..readings.cells import Marks, clean
-from ..readings.columns import Roles, match_columns
-from ..readings.csv_source import find_header, is_units_row, raw_from_records
-from ..readings.csv_text import Records, choose_delimiter, decode, split_records
-from ..readings.options import CappedProblems, ReadOptions
-from ..readings.table import ReadingsTable
+from ..errors import InputError, Location, Problem
+from ..readings.csv_text import Records, split_records
+from ..readings.options import ReadOptions
+from .heads import Layout, Unsuited, head_of, parquet_library, vanished
 
-__all__ = ["Layout", "Log", "Piece", "Unsuited", "open_log"]
+__all__ = ["Log", "Piece", "open_log", "records_of"]
 
-INTERVALS = "some values are known as intervals only (below a limit), which are entered one by one"
-
-HEAD = 1 << 22
-SAMPLE = 5000
 READ = 1 << 22
-_CSV = (".csv", ".tsv", ".txt", ".dat")
-_PARQUET = (".parquet", ".pq")
-
-
-class Unsuited(Exception):
-    """The input cannot be worked through in pieces; the message says why. The way through memory still can."""
-
-
-@dataclass(frozen=True)
-class Layout:
-    """What the head of a file says about all of it.
-
-    Attributes
-    ----------
-    name : str
-    header : list of str
-    tags : dict of tag to position
-    time, label : int or None
-    delimiter, encoding : str
-    marks : Marks
-    body_line : int
-        Line of the first row, counted from 1.
-    options : ReadOptions
-        With everything that was found out filled in.
-    table : ReadingsTable
-        The first rows, as the way through memory would read them.
-    """
-
-    name: str
-    header: list[str]
-    tags: dict[str, int]
-    time: int | None
-    label: int | None
-    delimiter: str
-    encoding: str
-    marks: Marks
-    body_line: int
-    options: ReadOptions
-    table: ReadingsTable
 
 
 @dataclass(frozen=True)
@@ -119,7 +72,7 @@ class Log:
             try:
                 now = path.stat()
             except OSError as error:
-                raise _vanished(path, error) from None
+                raise vanished(path, error) from None
             if (now.st_size, now.st_mtime_ns) != (size, stamp):
                 raise InputError(
                     Problem(
@@ -138,7 +91,7 @@ class Log:
             try:
                 cursor = _ParquetRows(path) if layout.encoding == "" else _Lines(path, layout)
             except OSError as error:
-                raise _vanished(path, error) from None
+                raise vanished(path, error) from None
             try:
                 while done < rows:
                     take = min(size - held, rows - done)
@@ -150,22 +103,11 @@ class Log:
                             yield number, gathered
                         number, held, gathered = number + 1, 0, []
             except OSError as error:
-                raise _vanished(path, error) from None
+                raise vanished(path, error) from None
             finally:
                 cursor.close()
         if held and wanted[number]:
             yield number, gathered
-
-
-def _vanished(path: Path, error: OSError) -> InputError:
-    return InputError(
-        Problem(
-            "source-vanished",
-            f"the file cannot be read any more ({error.strerror or error})",
-            "bring it back and give the same command: finished parts are kept",
-            Location(file=str(path)),
-        )
-    )
 
 
 # ------------------------------------------------------------------ opening
@@ -215,10 +157,9 @@ def open_log(
         raise Unsuited("")
     layouts = []
     for path in paths:
-        suffix = path.suffix.casefold()
-        if suffix in own or suffix not in (*_CSV, *_PARQUET):
-            raise Unsuited(f"files ending in {suffix!r} are read whole")
-        layouts.append(_head_of_parquet(path, settings) if suffix in _PARQUET else _head_of_csv(path, settings))
+        if path.suffix.casefold() in own:
+            raise Unsuited(f"files ending in {path.suffix!r} are read whole")
+        layouts.append(head_of(path, settings))
     order = _order(layouts)
     paths, layouts = [paths[i] for i in order], [layouts[i] for i in order]
     counted = [_count(p, layout) for p, layout in zip(paths, layouts, strict=True)]
@@ -234,7 +175,7 @@ def _size(path: Path) -> int:
     except FileNotFoundError:
         raise Unsuited("") from None  # the other way has the words for it
     except OSError as error:
-        raise _vanished(path, error) from None
+        raise vanished(path, error) from None
 
 
 def _order(layouts: Sequence[Layout]) -> list[int]:
@@ -251,116 +192,6 @@ def _order(layouts: Sequence[Layout]) -> list[int]:
     if len({s.tz is None for s in starts}) > 1:
         raise Unsuited("some files have stamps with a zone, others without")
     return sorted(range(len(layouts)), key=lambda i: (starts[i], layouts[i].name))
-
-
-def _finished(raw: RawTable, settings: ReadOptions) -> tuple[Roles, ReadingsTable]:
-    problems = CappedProblems(raw.file)
-    roles = match_columns(raw.header, raw.columns, settings, raw.file, raw.header_line, problems)
-    try:
-        problems.raise_if_any()
-        table = assemble(raw, settings, problems)
-    except InputError:
-        # The way through memory finds these mistakes, and all others with them.
-        raise Unsuited("the first rows have mistakes in them") from None
-    if any(position is None for position in roles.tags.values()):
-        raise Unsuited("a meter has no column")
-    return roles, table
-
-
-def _known(settings: ReadOptions, header: Sequence[str], roles: Roles, marks: Marks) -> ReadOptions:
-    named = {i for i in roles.tags.values() if i is not None} | {i for i in (roles.time, roles.label) if i is not None}
-    return replace(
-        settings,
-        decimal=marks.decimal,
-        thousands=marks.thousands,
-        units_row=False,
-        encoding="utf-8",
-        time_column=None if roles.time is None else header[roles.time],
-        label_column=None if roles.label is None else header[roles.label],
-        keep=(),
-        ignore=tuple(h for i, h in enumerate(header) if i not in named),
-    )
-
-
-def _layout(raw: RawTable, settings: ReadOptions, delimiter: str, encoding: str, body_line: int) -> Layout:
-    roles, table = _finished(raw, settings)
-    words = next((line for line in table.echo if line.startswith("time: column")), "")
-    if roles.time is not None and settings.day_first is None and ("day first" in words or "month first" in words):
-        raise Unsuited("whether the day or the month comes first is judged on all stamps; declare day_first")
-    tags = {t: i for t, i in roles.tags.items() if i is not None}
-    header = [clean(h) for h in raw.header]
-    known = _known(settings, header, roles, raw.marks)
-    return Layout(
-        raw.file, header, tags, roles.time, roles.label, delimiter, encoding, raw.marks, body_line, known, table
-    )
-
-
-def _head_of_csv(path: Path, settings: ReadOptions) -> Layout:
-    try:
-        with path.open("rb") as file:
-            head = file.read(HEAD)
-    except OSError as error:
-        raise _vanished(path, error) from None
-    if len(head) == HEAD:
-        head = head[: head.rfind(b"\n") + 1]
-    if head.count(b"\r") != head.count(b"\r\n"):
-        raise Unsuited("its lines end in carriage returns")
-    problems = CappedProblems(str(path))
-    decoded = decode(head, settings.encoding, problems)
-    if decoded is None or decoded.encoding.replace("_", "-").casefold() not in (
-        "utf-8",
-        "utf8",
-        "ascii",
-        "cp1252",
-        "latin-1",
-    ):
-        raise Unsuited("its encoding is not a plain one")
-    delimiter = settings.delimiter or choose_delimiter(decoded.text, problems, settings.expected)
-    records = split_records(decoded.text, delimiter or ",", problems, limit=SAMPLE)
-    if problems or delimiter is None or len(records.rows) < 2:
-        raise Unsuited("the first rows have mistakes in them")
-    top = find_header(records.rows, settings.expected)
-    header = [clean(c) for c in records.rows[top]]
-    if {"date", "time"} <= {h.casefold() for h in header}:
-        raise Unsuited("day and time of day stand in two columns")
-    first = top + 1
-    if settings.units_row or (settings.units_row is None and is_units_row(header, records.rows[first])):
-        first += 1
-    lines = records.lines[first:]
-    if not lines or lines != list(range(lines[0], lines[0] + len(lines))):
-        raise Unsuited("there are blank lines, or cells with line breaks, in it")
-    raw = raw_from_records(records, str(path), delimiter, settings, problems)
-    if problems or len(raw.header) != len(header):
-        raise Unsuited("the first rows have mistakes in them")
-    return _layout(raw, settings, delimiter, decoded.encoding, lines[0])
-
-
-def _head_of_parquet(path: Path, settings: ReadOptions) -> Layout:
-    parquet = _parquet_library(path)
-    from ..readings.frames import raw_from_frame
-
-    try:
-        file = parquet.ParquetFile(path)
-        batch = next(file.iter_batches(batch_size=SAMPLE), None)
-    except Exception:
-        raise Unsuited("it is no parquet file") from None
-    if batch is None:
-        raise Unsuited("it has no rows")
-    frame = batch.to_pandas()
-    raw = raw_from_frame(frame, str(path), settings)
-    if list(raw.header) != [str(n) for n in batch.schema.names]:
-        raise Unsuited("its index is not a plain count")
-    if any(isinstance(c, list) for i, c in enumerate(raw.columns) if raw.header[i] in (settings.expected or ())):
-        raise Unsuited("readings stand in it as text")
-    return _layout(raw, settings, "", "", 1)
-
-
-def _parquet_library(path: Path) -> Any:
-    try:
-        from pyarrow import parquet
-    except ImportError:
-        raise MissingExtra("pyarrow", "parquet", f"reading {path}") from None
-    return parquet
 
 
 def _count(path: Path, layout: Layout) -> tuple[int, str, int, int]:
@@ -387,10 +218,10 @@ def _count(path: Path, layout: Layout) -> tuple[int, str, int, int]:
                     before = int(ends[-1]) + offset if ends.size else before
                     offset, end = offset + len(block), block[-1:]
     except OSError as error:
-        raise _vanished(path, error) from None
+        raise vanished(path, error) from None
     stamp = digest.hexdigest(), state.st_size, state.st_mtime_ns
     if not layout.encoding:
-        return int(_parquet_library(path).ParquetFile(path).metadata.num_rows), *stamp
+        return int(parquet_library(path).ParquetFile(path).metadata.num_rows), *stamp
     if end != b"\n":
         lines, filled = lines + 1, lines + 1
     if blanks and blanks != lines - filled:
@@ -435,7 +266,7 @@ class _ParquetRows:
     """Rows of a parquet file, so many at a time, whatever the size of its row groups."""
 
     def __init__(self, path: Path) -> None:
-        self.handle = _parquet_library(path).ParquetFile(path)
+        self.handle = parquet_library(path).ParquetFile(path)
         self.batches = self.handle.iter_batches(batch_size=1 << 15, use_threads=False)
         self.rest: Any = None
 

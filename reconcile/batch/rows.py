@@ -20,7 +20,8 @@ from ..readings.csv_source import raw_from_records
 from ..readings.frames import raw_from_frame
 from ..readings.options import CappedProblems
 from ..readings.table import ReadingsTable
-from .pieces import INTERVALS, Piece, Unsuited, records_of
+from .heads import INTERVALS, Unsuited
+from .pieces import Piece, records_of
 
 __all__ = ["Rows", "rows_of"]
 

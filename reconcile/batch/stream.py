@@ -23,10 +23,12 @@ from ..errors import InputError, Problem
 from ..readings.options import CappedProblems
 from ..readings.table import Status
 from ..readings.validity import SignalLimits
-from .finish import Finish, Flagged, put_in_place, refuse_folders_in_the_way
+from .evidence import Flagged
+from .finish import Finish, put_in_place, refuse_folders_in_the_way
+from .heads import INTERVALS, Unsuited
 from .journal import FOLDER, Journal
 from .lines import writer_name
-from .pieces import INTERVALS, Log, Unsuited, open_log
+from .pieces import Log, open_log
 from .totals import gather
 from .work import Engine, Worker
 

@@ -13,7 +13,8 @@ import numpy as np
 import numpy.typing as npt
 
 from ..errors import InputError, Location, Notice, Problem
-from .pieces import Log, Unsuited
+from .heads import Unsuited
+from .pieces import Log
 from .work import DETAILED
 
 __all__ = ["GAP", "Told", "Totals", "gather", "parts_of"]
