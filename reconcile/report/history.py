@@ -246,6 +246,8 @@ def _rival(tied: list[Rival], d: Drift, history: History) -> str:
     word = (
         f"leaves χ² {r.behind:.1f} more and is rejected" if r.excluded else f"is not excluded (χ² {r.behind:.1f} more)"
     )
+    if r.excluded and abs(r.correlation) >= 1 - PARALLEL:
+        word += ", as it would not have ended with a calibration"
     parts = [
         f"{name} would open {' and '.join(balances)}"
         for name, balances in ((r.name, r.touches), (d.track.name, r.instead))
