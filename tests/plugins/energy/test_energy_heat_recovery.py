@@ -46,3 +46,16 @@ def test_no_section_without_reason():
     case = load_case(FOLDER)
     table = case.read()
     assert section(case.run(dict(zip(table.columns, table.values[0], strict=True)))) == []
+
+
+def test_swapped_hours_are_solved_and_do_not_agree(result):
+    assert not result.table.failed
+    assert (result.objective[8:] > 1e4).all()
+
+
+def test_the_readings_put_right_agree(result):
+    case = load_case(FOLDER)
+    table = case.read()
+    read = dict(zip(table.columns, table.values[8], strict=True))
+    read["TT-3"], read["TT-4"] = read["TT-4"], read["TT-3"]
+    assert case.run(read).objective[0] == pytest.approx(1.25, abs=5e-3)
