@@ -44,7 +44,7 @@ def case_text(paths, sigma):
 
 @pytest.mark.parametrize(
     ("name", "hours", "repeats", "seed"),
-    [("Net1", 24, 20, 8), ("Net2", 24, 20, 10), pytest.param("Net3", 12, 40, 9, marks=pytest.mark.slow)],
+    [("Net1", 24, 20, 8), ("Net2", 24, 20, 10), ("Net3", 12, 40, 9)],
 )
 def test_true_flows_lie_inside_the_stated_intervals(name, hours, repeats, seed, write_case, tmp_path):
     paths, truth = simulated(name, hours, tmp_path)
