@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 from .. import export
@@ -20,6 +20,8 @@ if TYPE_CHECKING:
     from ..run import Case
 
 __all__ = ["Account"]
+
+_OF_READINGS = ("sigma-above-reading", "counted-twice", "two-answers")
 
 
 @dataclass
@@ -44,6 +46,9 @@ class Account:
         """Machine-readable summary; safe for JSON."""
         out = export.summary_of(result)
         notices = [*self._notices(result, patterns), *self._told_notices(chosen)]
+        if self.totals.size > len(chosen):
+            # The chosen snapshots are the conspicuous ones: no history of the log can be read from them.
+            out.pop("history", None)
         out["verdict"] = self._verdict()
         out["notices"] = [{"code": n.code, "message": n.message} for n in notices]
         out["campaign"] = {
@@ -96,6 +101,9 @@ class Account:
         seen: list[Notice] = []
         of_files = [n for layout in self.log.layouts for n in layout.table.notices if n.code != "irregular-step"]
         of_result = [n for n in result.notices if n.code != "bound-violated"]
+        if self.totals.size > result.size:
+            words = " (seen in the explained snapshots)"
+            of_result = [replace(n, message=n.message + words) if n.code in _OF_READINGS else n for n in of_result]
         for n in [*of_result, *of_files, *self.totals.notices, *self._cell_notices(), *self._bound_notices()]:
             if n not in seen:
                 seen.append(n)

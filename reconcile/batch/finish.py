@@ -32,6 +32,7 @@ if TYPE_CHECKING:
 __all__ = ["Finish", "put_in_place", "refuse_folders_in_the_way"]
 
 ROW_GROUP = 1 << 16
+_OF_CHOSEN = ("variables", "suspects", "balances", "figures")
 
 
 @dataclass
@@ -92,7 +93,7 @@ class Finish:
         self.flagged = evidence.flagged
         evidence_fields = [(c, _EVIDENCE.get(c, "string"), None) for c in export.EVIDENCE_COLUMNS]
         resources["evidence"] = [self._resource("evidence", folder / "evidence.csv", evidence_fields)]
-        small = {k: v for k, v in tables.items() if k not in resources}
+        small = {k: v for k, v in tables.items() if k in _OF_CHOSEN}
         small["flagged"] = evidence.frame()
         for stem, frame in small.items():
             export.WRITERS["csv"](frame, folder / f"{stem}.csv")
