@@ -165,10 +165,12 @@ def _suspects(result: Result) -> pd.DataFrame:
 def _balances(result: Result) -> pd.DataFrame:
     import pandas as pd
 
+    from .snapshot import balances_of
+
     rows = [
         (result.labels[i], b.name, b.kind, b.unit, b.domain, b.before, b.spread, b.ratio, b.after, b.scale)
         for i in _adjusted_snapshots(result)
-        for b in result.snapshot(i).balances
+        for b in balances_of(result, i)
     ]
     columns = ["snapshot", "balance", "kind", "unit", "domain", "before", "spread", "ratio", "after", "largest_term"]
     return pd.DataFrame(rows, columns=columns)

@@ -32,7 +32,7 @@ from .model import Candidate, Model
 if TYPE_CHECKING:
     from .results import Result
 
-__all__ = ["FRAME_COLUMNS", "BalanceLine", "FaultLine", "ReadingLine", "Snapshot", "VariableLine", "look"]
+__all__ = ["FRAME_COLUMNS", "BalanceLine", "FaultLine", "ReadingLine", "Snapshot", "VariableLine", "balances_of", "look"]
 
 Array = npt.NDArray[np.float64]
 
@@ -511,6 +511,12 @@ def sum_in_words(terms: dict[str, float]) -> str:
         sign = (" - " if c < 0 else " + ") if text else ("-" if c < 0 else "")
         text += f"{sign}{name}" if abs(c) == 1 else f"{sign}{abs(c):.4g} * {name}"
     return text
+
+
+def balances_of(result: Result, index: int) -> tuple[BalanceLine, ...]:
+    """Balances of one snapshot before and after, without the tests of everything else that `look` makes."""
+    group = result.group(index)
+    return _balances(result, index, group, group.x[int(np.flatnonzero(group.rows == index)[0])])[0]
 
 
 def _balances(

@@ -13,7 +13,7 @@ from datetime import datetime
 import numpy as np
 import numpy.typing as npt
 
-from ..errors import InputError, Notice, Problem, did_you_mean
+from ..errors import InputError, Location, Notice, Problem, did_you_mean
 from ..readings.lab import join_lab
 from ..readings.table import ReadingsTable
 from ..readings.time_order import seconds_of
@@ -185,12 +185,24 @@ class _Preparation(Signals):
         """What adds to the law of each meter: scatter of the mean or readings at both ends, and what is estimated."""
         if plan.scatter == "included":
             return found.guessed
+        self._scatter_unknown(found)
         out = np.nan_to_num(found.sigma)
         for tag, rule in self.spec.readings.items():
             if rule.noise is not None and tag in found.table.columns:
                 j = found.table.index(tag)
                 out[:, j] = sigma_of_mean(rule.noise, 0.0, np.nan_to_num(found.effective[:, j], nan=1.0))
         return out
+
+    def _scatter_unknown(self, found: Windows) -> None:
+        """Tell which means stand on one sample: nothing shows their scatter, and none is assumed."""
+        alone = (found.effective == 1.0) & np.isnan(found.sigma) & found.used[:, None]
+        for tag, count in zip(found.table.columns, alone.sum(axis=0).tolist(), strict=True):
+            if count and self.spec.of(tag).noise is None:
+                words = (
+                    f"{tag} has a single sample in {count} of {len(alone)} windows: its scatter is not known there and "
+                    f"not counted; state it (reading: {{noise: ...}}), or write scatter: included under windows"
+                )
+                self.add(Notice("scatter-unknown", words, Location(tag=tag)))
 
     def _counters(self, found: Windows, log: ReadingsTable) -> list[Alternative]:
         out = []

@@ -17,7 +17,7 @@ if TYPE_CHECKING:
     from ..results import Result
     from .snapshots import Alternative, Interval
 
-__all__ = ["BoundCheck", "Cell", "Moved", "WhatIf", "bound_checks", "moves", "variant", "what_ifs"]
+__all__ = ["BoundCheck", "Cell", "Moved", "WhatIf", "bound_checks", "entered_intervals", "moves", "variant", "what_ifs"]
 
 _GIVEN = 1e-3
 """At an end, the reading counts as given: its sigma is this share of the interval."""
@@ -130,7 +130,20 @@ class Moved:
     sigma: float
 
 
-def moves(result: Result, snapshot: int | None = None) -> tuple[Moved, ...]:
+def entered_intervals(result: Result, snapshot: int | None = None) -> tuple[Interval, ...]:
+    """Cells that stand in the balances by the middle of their interval."""
+    cells = result.prepared.intervals if result.prepared is not None else ()
+    return tuple(
+        c
+        for c in cells
+        if c.closed
+        and (snapshot is None or c.snapshot == snapshot)
+        and c.snapshot not in result.table.failed
+        and c.tag not in result.excluded
+    )
+
+
+def moves(result: Result, snapshot: int | None = None, most: int | None = None) -> tuple[Moved, ...]:
     """Return what moves over the interval of every censored or saturated cell that was entered.
 
     Parameters
@@ -138,15 +151,10 @@ def moves(result: Result, snapshot: int | None = None) -> tuple[Moved, ...]:
     result : Result
     snapshot : int, optional
         Only this one, counted from 0.
+    most : int, optional
+        At most so many cells.
     """
-    if result.prepared is None:
-        return ()
-    out: list[Moved] = []
-    for cell in result.prepared.intervals:
-        wanted = snapshot is None or cell.snapshot == snapshot
-        if wanted and cell.closed and cell.snapshot not in result.table.failed and cell.tag not in result.excluded:
-            out.extend(_moves_of(result, cell))
-    return tuple(out)
+    return tuple(m for cell in entered_intervals(result, snapshot)[:most] for m in _moves_of(result, cell))
 
 
 def _moves_of(result: Result, cell: Interval) -> list[Moved]:

@@ -6,17 +6,20 @@ import math
 from collections import Counter
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from ..campaign.adjusted import LEFT_OUT
 from ..campaign.line_ups import zero_of_closed
-from ..campaign.variants import bound_checks, moves, what_ifs
+from ..campaign.variants import bound_checks, entered_intervals, moves, what_ifs
 from .layout import table, wrap
 from .numbers import plain, signed
 
 if TYPE_CHECKING:
+    from ..campaign.snapshots import Prepared
     from ..errors import Notice
     from ..results import Result
 
-__all__ = ["from_the_log", "grouped_notices", "not_used", "verdict_line_of", "why_not"]
+__all__ = ["from_the_log", "grouped_notices", "not_used", "plan_in_words", "verdict_line_of", "why_not"]
 
 _FEW = 3
 _MANY = 20
@@ -28,6 +31,24 @@ def why_not(result: Result, index: int) -> str:
     if error.code != LEFT_OUT or result.prepared is None:
         return "not solved"
     return f"left out: {result.prepared.left_out[index].code}"
+
+
+def plan_in_words(prepared: Prepared) -> list[str]:
+    """What the case makes of its log, before anything is adjusted."""
+    table = prepared.table
+    out = []
+    if prepared.left_out or prepared.segments or any(a != b for a, b in prepared.spans):
+        counts = Counter(left.code for left in prepared.left_out.values())
+        words = ", ".join(f"{n} {code}" for code, n in counts.items())
+        out.append(f"  windows: {len(table)}, from {table.label(0)} to {table.label(len(table) - 1)}")
+        out[-1] += f"; left out: {words}" if words else "; all used"
+        first = int(np.flatnonzero(prepared.used)[0])
+        cells = [f"{t} = {v:.6g}" for t, v in zip(table.columns, table.values[first], strict=True) if math.isfinite(v)]
+        out.append(wrap(f"first window used, {table.label(first)}: {', '.join(cells)}"))
+    for name in dict.fromkeys(prepared.line_ups.values()):
+        held = [i for i, n in prepared.line_ups.items() if n == name]
+        out.append(f"  line-up {name}: {len(held)} snapshots, {', '.join(prepared.closed[held[0]])} closed")
+    return out
 
 
 def verdict_line_of(result: Result, index: int) -> str:
@@ -87,12 +108,10 @@ def _estimated(result: Result, snapshot: int | None) -> list[str]:
 
 
 def _intervals(result: Result, snapshot: int | None) -> list[str]:
-    found = moves(result, snapshot)
-    if not found:
-        return []
+    cells = [(c.snapshot, c.tag) for c in entered_intervals(result, snapshot)]
+    found = moves(result, snapshot, _FEW)
     out: list[str] = []
-    cells = list(dict.fromkeys((m.snapshot, m.tag) for m in found))
-    for i, tag in cells[:_FEW]:
+    for i, tag in dict.fromkeys((m.snapshot, m.tag) for m in found):
         rows = [m for m in found if (m.snapshot, m.tag) == (i, tag)]
         first = rows[0]
         unit = next(r.unit for r in result.model.readings if r.tag == tag)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+from .campaign import grouped_notices, plan_in_words
 from .layout import table, wrap
 from .numbers import plain
 
@@ -67,8 +68,9 @@ def describe_case(case: Case, readings: str | Path | None = None) -> str:
         f"{len(model.meters)} meters, domains: {', '.join(spec.domains)}"
     )
     if readings is not None or case.readings_path() is not None:
-        found = case.read(readings)
-        out += ["", "READINGS", *(f"  {line}" for line in found.echo)]
-        out += [wrap(str(n)) for n in found.notices]
+        prepared = case.prepare(readings)
+        out += ["", "READINGS", *(f"  {line}" for line in prepared.table.echo)]
+        out += plan_in_words(prepared)
+        out += [wrap(line) for line in grouped_notices(prepared.table.notices)]
     out += [wrap(str(n)) for n in case.parts.notices]
     return "\n".join(out)

@@ -108,7 +108,9 @@ def test_mistakes_of_the_laboratorys_file(folder):
     (folder / "lab.csv").write_text("AF,brine salt\n4.02,10.1\n")
     with pytest.raises(reconcile.InputError, match="has no stamps to join on"):
         case_of(folder).run()
-    with pytest.raises(reconcile.InputError, match=r"case\.yaml:12.*unknown key 'befor' in lab; did you mean 'before'\?"):
+    with pytest.raises(
+        reconcile.InputError, match=r"case\.yaml:12.*unknown key 'befor' in lab; did you mean 'before'\?"
+    ):
         case_of(folder, "{file: lab.csv, befor: 3 min}")
 
 

@@ -133,3 +133,16 @@ def test_shared_errors_stay_beside_the_scatter(datasets, tmp_path):
     assert cov[r, d] == pytest.approx(1.0)
     scatter = result.prepared.table.scatter[0]
     assert cov[r, r] == pytest.approx(1.5**2 + scatter[1] ** 2 + 1.0)
+
+
+def test_a_mean_of_one_sample_has_no_scatter_to_show(datasets, tmp_path):
+    text = (datasets / "membrane_skid" / "case.yaml").read_text()
+    log = log_of(np.random.default_rng(36), 4, 1, noise=0.1, offset=0.0)
+    (tmp_path / "case.yaml").write_text(text + "windows: {rows: 1}\n")
+    result = reconcile.load_case(tmp_path).run(log)
+    told = [n.message for n in result.notices if n.code == "scatter-unknown"]
+    assert len(told) == 6
+    assert told[0].startswith("F has a single sample in 4 of 4 windows: its scatter is not known there and not counted")
+    (tmp_path / "case.yaml").write_text(text + "windows: {rows: 1, scatter: included}\n")
+    quiet = reconcile.load_case(tmp_path).run(log)
+    assert "scatter-unknown" not in {n.code for n in quiet.notices}

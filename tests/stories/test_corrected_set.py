@@ -191,3 +191,13 @@ def test_a_dead_time_is_found_and_taken_back(tmp_path):
     assert set(codes.values()) <= {"not steady", "short"}
     assert "07:20" not in codes
     assert "08:20" not in codes
+
+
+def test_the_tables_validate_with_the_standards_own_validator(datasets, tmp_path):
+    frictionless = pytest.importorskip("frictionless")
+    for name in ("membrane_log", "batch_tank", "flotation_test"):
+        write(reconcile.load_case(datasets / name).run(), tmp_path / name)
+        report = frictionless.Package(str(tmp_path / name / "datapackage.json")).validate()
+        assert report.valid, report.flatten(["type", "message"])
+        paths = {r.path for r in frictionless.Package(str(tmp_path / name / "datapackage.json")).resources}
+        assert {"readings.csv", "log.csv", "intervals.csv"} <= paths
