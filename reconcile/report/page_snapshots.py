@@ -29,7 +29,19 @@ _ORDER = {"does not agree": 0, "watch": 1, "cannot tell": 2, "agrees": 3}
 
 def over_time(result: Result) -> Markup:
     """Evidence and readings of all snapshots as figures."""
-    return join(figure_part(figures.evidence(result)), *(figure_part(f) for f in figures.series(result)))
+    drawn = figures.series(result)
+    shown = {row[0] for f in drawn for row in f.rows}
+    some = len(shown) < len(result.tags)
+    note = (
+        f"Of {len(result.tags)} meters those {len(shown)} are drawn that moved most where readings disagree."
+        if some
+        else None
+    )
+    return join(
+        figure_part(figures.evidence(result)),
+        element("p", note, class_="note") if note and drawn else None,
+        *(figure_part(f) for f in drawn),
+    )
 
 
 def overview(result: Result, shown: frozenset[int]) -> Markup:

@@ -31,7 +31,12 @@ def plant(folder: Path, rows: int, columns: int, *, snapshots: int = 1, seed: in
             balance[nodes.index(b), k] += 1
     wanted = rng.uniform(60, 140, len(names))
     flow = wanted - balance.T @ np.linalg.lstsq(balance @ balance.T, balance @ wanted, rcond=None)[0]
-    text = ["reconcile: 1", f"title: Plant of {len(names)} streams (invented)", "domains: {fluid: {unit: kg/h}}", "streams:"]
+    text = [
+        "reconcile: 1",
+        f"title: Plant of {len(names)} streams (invented)",
+        "domains: {fluid: {unit: kg/h}}",
+        "streams:",
+    ]
     text += [f"  {n}: {a} -> {b}" for n, (a, b) in streams.items()]
     text.append("meters:")
     text += [f"  F_{n}: {{reads: {n}.flow, unit: kg/h, sigma: 1 kg/h}}" for n in names]

@@ -57,9 +57,11 @@ def evidence(result: Result) -> Figure | None:
         at = (course.x[i], y(max(float(ratio[i]), 0.0) ** 0.5))
         if ratio[i] > 1.0:
             c.line((at[0], y(1.0)), at, "mark", 1.5)
-            c.text(
-                (at[0], at[1] - 4), "✗" if result.words[i] == "does not agree" else "!", "mark", 13, "middle", bold=True
-            )
+            if course.step >= 9:
+                mark = "✗" if result.words[i] == "does not agree" else "!"
+                c.text((at[0], at[1] - 4), mark, "mark", 13, "middle", bold=True)
+            else:
+                c.area([(at[0], at[1] - 5), (at[0] + 3, at[1]), (at[0], at[1] + 5), (at[0] - 3, at[1])], "mark")
         else:
             c.dot(at, radius, "main")
     for i in result.table.failed:

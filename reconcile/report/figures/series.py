@@ -22,7 +22,7 @@ __all__ = ["FLAGS", "series", "time_series"]
 
 Array = npt.NDArray[np.float64]
 
-PANEL, PANELS, MOST_FIGURES, FEW = 118.0, 6, 4, 6
+PANEL, PANELS, MOST_FIGURES, FEW = 118.0, 6, 2, 6
 
 FLAGS = {"X": "does not agree", "W": "watch", "N": "not solved"}
 """Letter of a flagged span, and what it stands for."""
@@ -35,7 +35,7 @@ def series(result: Result, tags: Sequence[str] | None = None) -> list[Figure]:
     ----------
     result : Result
     tags : sequence of str, optional
-        Meters to draw; those that explanations name first when left out, and no more than 24.
+        Meters to draw; those that explanations name first when left out, and no more than 12.
 
     Returns
     -------

@@ -96,7 +96,9 @@ class Figure:
             "div", self.svg(prefix), class_="scroll", tabindex="0", role="group", aria_label=f"Figure: {self.title}"
         )
         caption = element("figcaption", element("strong", self.title), " ", element("span", told))
-        return element("figure", caption, frame, numbers, id=name, class_="fits" if self.stretches else None)
+        return element(
+            "figure", caption, frame, numbers, id=f"{name}-figure", class_="fits" if self.stretches else None
+        )
 
     def to_svg(self) -> str:
         """Return a whole SVG file."""
