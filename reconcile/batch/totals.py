@@ -15,7 +15,7 @@ import numpy.typing as npt
 from ..errors import InputError, Location, Notice, Problem
 from .heads import Unsuited
 from .pieces import Log
-from .work import DETAILED
+from .work import DETAILED, of_each_meter
 
 __all__ = ["GAP", "Told", "Totals", "gather", "parts_of"]
 
@@ -78,7 +78,7 @@ class Totals:
             strongest: list[Told] = []
             for meter in sorted({t.suspect for t in own}):
                 ranked = sorted((t for t in own if t.suspect == meter), key=lambda t: (-t.objective, t.row))
-                strongest += ranked[: max(1, DETAILED // max(meters, 1))]
+                strongest += ranked[: of_each_meter(meters)]
             own = strongest
         rows = {t.row for t in own} | ({first} if first >= 0 else set())
         return [t for t in self.told if t.row in rows]

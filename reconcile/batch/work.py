@@ -31,12 +31,17 @@ from .rows import Rows, rows_of
 if TYPE_CHECKING:
     from ..run import Case
 
-__all__ = ["DETAILED", "Engine", "Worker", "fingerprint"]
+__all__ = ["DETAILED", "Engine", "Worker", "fingerprint", "of_each_meter"]
 
 Array = npt.NDArray[np.float64]
 
 DETAILED = 200
 """Snapshots that are explained one by one; of more suspicious ones the strongest of each meter are."""
+
+
+def of_each_meter(meters: int) -> int:
+    """How many of the snapshots in which a meter has the largest test value are explained."""
+    return max(1, DETAILED // max(meters, 1))
 
 
 def fingerprint(path: Path) -> tuple[int, str]:
@@ -261,7 +266,7 @@ class Worker:
             chosen.update(where.tolist())
         for meter in np.unique(r.suspect[where]).tolist():
             own = where[r.suspect[where] == meter]
-            chosen.update(own[np.argsort(-r.objective[own], kind="stable")][:DETAILED].tolist())
+            chosen.update(own[np.argsort(-r.objective[own], kind="stable")][: of_each_meter(len(self.tags))].tolist())
         return np.array(sorted(chosen), dtype=np.int64)
 
     def _beyond(self, r: BatchResult) -> list[list[Any]]:

@@ -128,6 +128,9 @@ def run(
                     )
                 )
             return code
+    elif chunk is not None or restart:
+        words = "--chunk and --restart need --out, and go with neither --suspects, --snapshot nor --xlsx"
+        click.echo(f"Not worked through in pieces: {words}. All rows are held in memory.", err=True)
     result = loaded.run(readings, exclude=reasons, suspects=suspects)
     if as_json:
         click.echo(json.dumps(result.to_dict(), indent=2, ensure_ascii=False))

@@ -90,6 +90,15 @@ def test_a_case_with_windows_goes_through_memory_and_says_so(run):
     assert not (out / ".parts").exists()
 
 
+def test_what_does_not_go_with_pieces_is_said(tmp_path):
+    (tmp_path / "case.yaml").write_text(SKID.replace("LEVEL", "1.0e-6"), "utf-8")
+    skid_log(20).to_csv(tmp_path / "log.csv", index=False)
+    line = ["run", str(tmp_path / "case.yaml"), "--readings", str(tmp_path / "log.csv"), "--chunk", "10"]
+    done = CliRunner().invoke(main, line)
+    assert done.exit_code == 0
+    assert "--chunk and --restart need --out" in done.stderr
+
+
 def test_where_the_log_stood_still_is_told(tmp_path):
     frame = skid_log(BLOCK + 500)
     stamps = pd.to_datetime(frame["time"])

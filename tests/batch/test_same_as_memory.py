@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -265,3 +266,29 @@ def test_options_that_need_the_whole_log(skid, tmp_path, options, says):
     skid_log(50).to_csv(tmp_path / "log.csv", index=False)
     with pytest.raises(Unsuited, match=says):
         run_streamed(skid(text=text), None, tmp_path / "out", least=0)
+
+
+def test_an_interval_far_down_is_met_only_on_the_way(skid, tmp_path):
+    lines = skid_log(3 * BLOCK + 100, missing=0.0).to_csv(index=False).split("\n")
+    stamp, *cells = lines[-10].split(",")
+    lines[-10] = ",".join([stamp, *cells[:-1], "<10.5"])
+    source = tmp_path / "log.csv"
+    source.write_text("\n".join(lines), "utf-8")
+    with pytest.raises(Unsuited, match="intervals only"):
+        run_streamed(skid(), source, tmp_path / "out", least=0, chunk=BLOCK)
+    assert not (tmp_path / "out").exists()
+
+
+def test_without_the_compiled_parser_and_writer(skid, tmp_path, monkeypatch):
+    case = skid(level=0.001)
+    source = tmp_path / "log.csv"
+    skid_log(BLOCK + 50, missing=0.01).to_csv(source, index=False)
+    with_it = run_streamed(case, source, tmp_path / "with", least=0)
+    monkeypatch.setitem(sys.modules, "pyarrow", None)
+    run_streamed(case, source, tmp_path / "whole", least=0)
+    run_streamed(case, source, tmp_path / "cut", least=0, chunk=BLOCK, jobs=2)
+    assert bytes_of(tmp_path / "whole") == bytes_of(tmp_path / "cut")
+    a, b = load_corrected(tmp_path / "with"), load_corrected(tmp_path / "whole")
+    for stem in ("adjusted", "sigmas", "evidence"):
+        pd.testing.assert_frame_equal(getattr(a, stem), getattr(b, stem), rtol=1e-15)
+    assert with_it.summary["verdict"] == b.summary["verdict"]
