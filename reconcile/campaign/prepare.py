@@ -149,6 +149,12 @@ class _Preparation(Signals):
         alternatives = self._counters(found, log)
         alternatives += self._levels(found)
         self._zero(found)
+        if plan.keep_unsteady and not rules.levels and any(n.code == "window-not-steady" for n in found.table.notices):
+            words = (
+                "windows that are not steady are kept, but no level is read: what is stored meanwhile shows as a closure, "
+                "and may look like a fault; read the level, or leave keep_unsteady out"
+            )
+            self.add(Notice("no-inventory-read", words))
         table = replace(found.table, scatter=self._scatter(plan, found))
         ends = [min(int(b), len(log) - 1) for b in found.bounds[:, 1]]
         spans = () if log.time is None else tuple(

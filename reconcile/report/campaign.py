@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from ..errors import Notice
     from ..results import Result
 
-__all__ = ["from_the_log", "grouped_notices", "not_used", "plan_in_words", "verdict_line_of", "why_not"]
+__all__ = ["from_the_log", "grouped_notices", "not_simply_read", "not_used", "plan_in_words", "verdict_line_of", "why_not"]
 
 _FEW = 3
 _MANY = 20
@@ -55,6 +55,14 @@ def verdict_line_of(result: Result, index: int) -> str:
     """One line on a snapshot without adjusted values."""
     why = why_not(result, index)
     return f"{why[0].upper()}{why[1:]}: {result.table.failed[index].message}"
+
+
+def not_simply_read(result: Result, index: int) -> dict[str, str]:
+    """Readings of a snapshot that nobody read as such: ``estimated``, or the middle of an ``interval``; by tag."""
+    if result.prepared is None:
+        return {}
+    marks = {result.tags[j]: "estimated" for i, j in result.prepared.estimated if i == index}
+    return marks | {c.tag: "interval" for c in entered_intervals(result, index)}
 
 
 def not_used(result: Result) -> list[str]:

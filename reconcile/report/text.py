@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 from ..mixups import mixups_of
 from ..refit import figures_if
-from .campaign import from_the_log, grouped_notices, verdict_line_of, why_not
+from .campaign import from_the_log, grouped_notices, not_simply_read, verdict_line_of, why_not
 from .history import history_section
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
@@ -106,7 +106,7 @@ def _detail(result: Result, index: int) -> list[str]:
     out = [wrap(f"{MARKS[word]} " + " ".join(verdict_sentences(s)), ""), "", _balances(s)]
     if math.isfinite(s.nodal.limit):
         out.append(wrap(f"A ratio is compared with {s.nodal.limit:.2f}, exact for {_tested(len(s.nodal_rows))}."))
-    out += ["", _readings(s)]
+    out += ["", _readings(s, not_simply_read(result, index))]
     out.append(
         wrap(
             f"z is compared with {s.meter_tests.limit:.2f}, exact for {_different(s.meter_tests.distinct)}. "
@@ -193,7 +193,12 @@ def _balances(s: Snapshot) -> str:
     return table(("BALANCE", "unit", "in", "out", "closure", "spread", "ratio", "after"), rows, left=(0, 1))
 
 
-def _readings(s: Snapshot) -> str:
+def _word(word: str, mark: str) -> str:
+    """Word for a reading, and how it came about where nobody read it; room is scarce."""
+    return word if not mark else mark if word == "sound so far" else f"{word}, {mark}"
+
+
+def _readings(s: Snapshot, marks: Mapping[str, str]) -> str:
     rows = []
     for r in s.readings:
         sigma = min(x for x in (r.sigma_before, r.sigma, math.inf) if math.isfinite(x) or x == math.inf)
@@ -209,7 +214,7 @@ def _readings(s: Snapshot) -> str:
                 signed(r.in_sigmas, 0.1),
                 f"{r.share:.2f}",
                 signed(r.z, 0.1),
-                r.word,
+                _word(r.word, marks.get(r.tag, "")),
             )
         )
     header = ("READING", "unit", "read", "adjusted", "±before", "±after", "moved", "in ±", "checked", "z", "")

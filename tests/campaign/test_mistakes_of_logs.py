@@ -110,6 +110,7 @@ def test_an_unsteady_window_and_one_that_is_kept(tmp_path):
     kept = case_of(tmp_path, "windows: {length: 20 min, keep_unsteady: true}\n").run(log)
     assert not kept.prepared.left_out
     assert "window-not-steady" in codes(kept)
+    assert "no level is read: what is stored meanwhile shows as a closure" in told(kept, "no-inventory-read")
     tolerant = case_of(tmp_path, "windows: {length: 20 min}\n", f="reading: {steady_within: 20 kg/h}").run(log)
     assert not tolerant.prepared.left_out
 

@@ -44,6 +44,8 @@ def test_the_restart_is_estimated_and_marked(result):
     assert "at least 3.9 passed" in step.words
     text = result.summary()
     assert "ESTIMATED, NOT READ" in text
+    line = next(line for line in text.splitlines() if line.split()[:1] == ["out_total"])
+    assert line.split()[-1] == "estimated"
     assert "-347.6" not in text
     assert -347.6 not in result.readings
 
