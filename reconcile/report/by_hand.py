@@ -89,7 +89,7 @@ def explain_node(result: Result, node: str, index: int = 0) -> str:
 
 
 def _balance(result: Result, index: int, row: int, name: str, unit: str) -> list[str]:
-    model, group = result.model, result.group(index)
+    model, group = result.model_of(index), result.group(index)
     x = group.x[int(np.flatnonzero(group.rows == index)[0])]
     read = _readings_of(result, index)
     raw = np.array([read[c].value if c in read else x[c] for c in range(model.size)])
@@ -153,7 +153,7 @@ def _steps(
     digits: int,
     unit: str,
 ) -> list[str]:
-    model, s = result.model, result.snapshot(index)
+    model, s = result.model_of(index), result.snapshot(index)
     if not spread > 0:
         return []
     touched = [c for c in read if slope[c] != 0.0]
@@ -221,7 +221,7 @@ def _spread(slope: Array, read: dict[int, _Read], covariance: Array) -> float:
 
 def _readings_of(result: Result, index: int) -> dict[int, _Read]:
     """Tag, value in base units and number of the reading that stands for each variable."""
-    model, group = result.model, result.group(index)
+    model, group = result.model_of(index), result.group(index)
     base = model.to_base(result.readings[index : index + 1])[0]
     absent = set(group.absent.tolist())
     out: dict[int, _Read] = {}

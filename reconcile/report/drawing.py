@@ -133,9 +133,9 @@ def lay_out(
     lanes, floor = _lanes(cells, streams, labels, back, floor)
     turns = _turns(cells, streams, lanes)
     for j in back:
-        a, b = (cells[k] for k in streams[j])
-        right, left = edges[a.layer][1] + turns[j][0], edges[b.layer][0] - turns[j][1]
-        strokes[j] = _recycle(a, b, ports[j], (right, left), lanes[j])
+        start, end = (cells[k] for k in streams[j])
+        right, left = edges[start.layer][1] + turns[j][0], edges[end.layer][0] - turns[j][1]
+        strokes[j] = _recycle(start, end, ports[j], (right, left), lanes[j])
     reach = [p for s in strokes if s is not None for p in s.points]
     low = min([0.0, *(x for x, _ in reach)])
     width = max([c.x + c.width / 2 for c in cells] + [x for x, _ in reach], default=0.0) + MARGIN

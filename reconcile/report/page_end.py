@@ -13,6 +13,7 @@ from ..coverage import Coverage, coverage_in
 from ..snapshot import signatures
 from . import figures
 from .by_hand import explain_node, nodes_of
+from .campaign import from_the_log, grouped_notices, not_used, plan_in_words, why_not
 from .markup import Markup, element, join
 from .numbers import plain
 from .page_snapshot import figure_part, snapshot_name
@@ -25,7 +26,7 @@ if TYPE_CHECKING:
 
 __all__ = ["appendix", "assumptions", "figures_of_knowledge", "typical", "unknowable"]
 
-MOST_ALIKE, MOST_COLUMNS, MOST_ROWS = 12, 16, 40
+MOST_ALIKE, MOST_COLUMNS, MOST_ROWS, MOST_LEFT_OUT = 12, 16, 40, 60
 WORTH_IT = 0.95
 """A meter is recommended if it lowers what it is for to less than this share."""
 
@@ -45,7 +46,7 @@ def typical(result: Result) -> int:
 def unknowable(result: Result, case: Case | None = None) -> Markup:
     """What no reading here can show, what each check is worth, and which faults look alike."""
     index = typical(result)
-    found = coverage_in(result.title, result.model, result.group(index), result.settings)
+    found = coverage_in(result.title, result.model_of(index), result.group(index), result.settings)
     points = _sentences(found)
     of = "" if result.size == 1 else f"The figures are for {snapshot_name(result, index)}."
     intro = (
@@ -77,7 +78,7 @@ def figures_of_knowledge(result: Result, index: int, case: Case | None = None) -
     -------
     list of Figure or None
     """
-    found = coverage_in(result.title, result.model, result.group(index), result.settings)
+    found = coverage_in(result.title, result.model_of(index), result.group(index), result.settings)
     return [figures.detectability(found), _alike(result, index), _advice(result, index, case)]
 
 
@@ -110,8 +111,9 @@ def _any_of(sets: tuple[tuple[str, ...], ...]) -> str:
 
 def _alike(result: Result, index: int) -> figures.Figure | None:
     """Faults that explanations name, then those that have a look-alike; no more than a page can show."""
-    shifts = signatures(result.model, result.group(index))
-    names = [c.name for c in result.model.candidates]
+    model = result.model_of(index)
+    shifts = signatures(model, result.group(index))
+    names = [c.name for c in model.candidates]
     correlation = figures.correlation_of(shifts)
     named = [names.index(x.name) for x in suspects_of(result.snapshot(index))]
     size = np.abs(np.where(np.isfinite(correlation), correlation, 0.0))
@@ -157,6 +159,7 @@ def assumptions(result: Result) -> Markup:
         _shared(result),
         _known(result),
         _left_out(result),
+        _log(result),
     ]
     settings = result.settings
     facts = [
@@ -172,7 +175,7 @@ def assumptions(result: Result) -> Markup:
     parts.append(element("ul", *(element("li", f) for f in facts)))
     if result.notices:
         parts.append(element("h3", "Notices"))
-        parts.append(element("ul", *(element("li", str(n)) for n in result.notices)))
+        parts.append(element("ul", *(element("li", n) for n in grouped_notices(result.notices))))
     return join(*parts)
 
 
@@ -243,9 +246,29 @@ def _left_out(result: Result) -> Markup | None:
             html_table("Readings not used", ("meter", "why", "snapshots"), rows, name="unused-table", left=(0, 1))
         )
     if result.table.failed:
-        rows_ = [(result.labels[i], e.message) for i, e in sorted(result.table.failed.items())]
-        parts.append(html_table("Snapshots not solved", ("snapshot", "why"), rows_, name="failed-table", left=(0, 1)))
+        rows_ = [(result.labels[i], why_not(result, i), e.message) for i, e in sorted(result.table.failed.items())]
+        caption = f"Snapshots without adjusted values: {', '.join(not_used(result))}"
+        table = html_table(
+            caption, ("snapshot", "word", "why"), rows_[:MOST_LEFT_OUT], name="failed-table", left=(0, 1, 2)
+        )
+        parts.append(table)
+        if len(rows_) > MOST_LEFT_OUT:
+            parts.append(element("p", f"{len(rows_) - MOST_LEFT_OUT} more; evidence.csv lists them.", class_="note"))
     return join(*parts) if parts else None
+
+
+def _log(result: Result) -> Markup | None:
+    """How the log became these snapshots, as the terminal says it."""
+    if result.prepared is None:
+        return None
+    lines = [*plan_in_words(result.prepared), *from_the_log(result)]
+    text = "\n".join(lines).strip("\n")
+    if not text:
+        return None
+    return join(
+        element("h3", "From the log to the snapshots"),
+        element("pre", text, tabindex="0", aria_label="From the log to the snapshots"),
+    )
 
 
 # ------------------------------------------------------------------ appendix
@@ -263,7 +286,7 @@ def appendix(result: Result) -> Markup:
 
 
 def _matrix(result: Result, index: int) -> Markup:
-    model, group = result.model, result.group(index)
+    model, group = result.model_of(index), result.group(index)
     m = model.system.equations.shape[0]
     shown = [int(c) for c in model.shown]
     matrix = group.jacobian[:m][:, shown]

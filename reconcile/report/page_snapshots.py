@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from . import figures
+from .campaign import why_not
 from .history import history_section
 from .markup import Markup, element, join
 from .numbers import plain
@@ -62,7 +63,7 @@ def overview(result: Result, shown: frozenset[int]) -> Markup:
     for i, label in enumerate(result.labels):
         if i in result.table.failed:
             marked.append(i)
-            rows.append((label, "-", "-", "-", "-", "✗ not solved", result.table.failed[i].message))
+            rows.append((label, "-", "-", "-", "-", f"– {why_not(result, i)}", result.table.failed[i].message))
             continue
         word = result.words[i]
         if word in ("watch", "does not agree"):

@@ -141,6 +141,19 @@ def test_files(skid, tmp_path):
     assert sorted(p.name for p in tmp_path.iterdir()) == ["network.png", "network.svg"]
 
 
+def test_pixels_without_their_library_are_asked_for_in_words(skid, monkeypatch):
+    monkeypatch.setitem(__import__("sys").modules, "resvg_py", None)
+    with pytest.raises(reconcile.MissingExtra, match=r"pip install 'reconcile-flows\[report\]'"):
+        figures.network(skid).to_png()
+
+
+def test_notebooks_get_colours_and_the_drawing(skid):
+    shown = figures.network(skid)._repr_html_()
+    assert shown.startswith("<style>")
+    assert "<svg" in shown
+    assert "✗ 158.60 → 154.14 kg/h" in shown
+
+
 def test_the_same_result_gives_the_same_drawing(skid_case, skid):
     again = figures_of(skid_case.run(), skid_case)
     assert {n: f.to_svg() for n, f in figures_of(skid, skid_case).items()} == {n: f.to_svg() for n, f in again.items()}

@@ -151,7 +151,7 @@ def test_sections_of_plugins_are_there_and_escaped(datasets):
 
 
 def test_pages_of_every_kind_of_case(datasets):
-    for name in ("crystalliser", "cooling_water", "stream_water", "dialysis"):
+    for name in ("crystalliser", "cooling_water", "stream_water", "dialysis", "membrane_log"):
         case = reconcile.load_case(datasets / name)
         result = case.run()
         page = Page(render_page(result, case=case))
@@ -159,6 +159,16 @@ def test_pages_of_every_kind_of_case(datasets):
         assert len(page.ids) == len(set(page.ids))
         for caution in result.cautions:
             assert caution in page.said
+
+
+def test_what_became_of_the_log_is_told(datasets):
+    case = reconcile.load_case(datasets / "membrane_log")
+    result = case.run()
+    page = Page(render_page(result, case=case))
+    assert [3, "From the log to the snapshots"] in page.headings
+    for i, error in result.table.failed.items():
+        assert error.message in page.said
+        assert f"snapshot-{i + 1}" not in page.ids
 
 
 def test_nothing_to_check_is_said(write_case):

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from ..campaign import not_used, why_not
 from ..canvas import Canvas, Scale
 from ..numbers import plain
 from .axes import frame, label_course, place_of, thinned
@@ -65,10 +66,11 @@ def evidence(result: Result) -> Figure | None:
         else:
             c.dot(at, radius, "main")
     for i in result.table.failed:
-        c.text((course.x[i], bottom - 4), "N", "mark", 12, "middle", bold=True)
+        letter = "L" if why_not(result, i).startswith("left out") else "N"
+        c.text((course.x[i], bottom - 4), letter, "mark", 12, "middle", bold=True)
     label_course(c, course, bottom)
     beyond = int((ratio > 1.0).sum())
-    failed = f", {len(result.table.failed)} could not be solved (N)" if result.table.failed else ""
+    failed = f", without adjusted values: {', '.join(not_used(result))}" if result.table.failed else ""
     description = (
         f"χ² of {result.size} snapshots as a multiple of its limit; beyond it: {beyond}{failed}, the largest at "
         f"{highest:.3g} times the limit in {result.labels[int(np.nanargmax(ratio))]}."

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from ..campaign import why_not
 from ..canvas import Canvas, Scale, cut, text_width, tick_text, ticks
 from ..markup import Markup, element
 from ..numbers import plain
@@ -24,7 +25,7 @@ Array = npt.NDArray[np.float64]
 
 PANEL, PANELS, MOST_FIGURES, FEW = 118.0, 6, 2, 6
 
-FLAGS = {"X": "does not agree", "W": "watch", "N": "not solved"}
+FLAGS = {"X": "does not agree", "W": "watch", "N": "not solved", "L": "left out"}
 """Letter of a flagged span, and what it stands for."""
 
 
@@ -46,7 +47,8 @@ def series(result: Result, tags: Sequence[str] | None = None) -> list[Figure]:
         return []
     if tags is None:
         tags = _worth(result)[: PANELS * MOST_FIGURES]
-    flags = ["N" if i in result.table.failed else _letter(result.words[i]) for i in range(result.size)]
+    failed = {i: "L" if why_not(result, i).startswith("left out") else "N" for i in result.table.failed}
+    flags = [failed.get(i) or _letter(result.words[i]) for i in range(result.size)]
     drawn = []
     for k in range(0, len(tags), PANELS):
         panels = []
