@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     from .export import load_corrected
     from .expression import Expression
     from .network import OUTSIDE, Network
+    from .report.page import write_page
     from .results import Result
     from .run import Case, load_case
     from .system import System, stack
@@ -29,6 +30,7 @@ _LAZY = {
     "Trajectory": "trajectory",
     "load_case": "run",
     "load_corrected": "export",
+    "write_page": "report.page",
 }
 
 __all__ = [
@@ -53,6 +55,7 @@ __all__ = [
     "load_case",
     "load_corrected",
     "stack",
+    "write_page",
 ]
 
 
