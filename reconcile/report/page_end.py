@@ -182,7 +182,7 @@ def assumptions(result: Result) -> Markup:
 def _sigmas(result: Result) -> Markup:
     usable = [i for i in range(result.size) if i not in result.table.failed]
     at = {r.tag: r for r in result.snapshot(typical(result)).readings} if usable else {}
-    rows = []
+    rows: list[tuple[str, ...]] = []
     for r in result.model.readings:
         if r.kind == "cause":
             continue
@@ -197,10 +197,12 @@ def _sigmas(result: Result) -> Markup:
                 r.unit,
                 plain(line.sigma_before, line.sigma_before) if line is not None else "-",
                 (said or "-") + guess,
-                r.origin,
+                r.origin if r.origin != said else "",
             )
         )
-    header = ("meter", "reads", "unit", "sigma used", "as stated", "from")
+    header: tuple[str, ...] = ("meter", "reads", "unit", "sigma used", "as stated", "from")
+    if not any(row[-1] for row in rows):
+        header, rows = header[:-1], [row[:-1] for row in rows]
     return html_table("Sigmas and where they come from", header, rows, name="sigmas-table", left=(0, 1, 2, 4, 5))
 
 
@@ -335,11 +337,14 @@ def _by_hand(result: Result, index: int) -> Markup | None:
     ratios = {b.node: abs(b.ratio) for b in s.balances if b.node in nodes and math.isfinite(b.ratio)}
     node = max(ratios, key=lambda n: ratios[n]) if ratios else nodes[0]
     others = [n for n in nodes if n != node]
-    said = f" The same for {', '.join(others[:6])}: reconcile explain node NAME CASE." if others else ""
+    why = "whose balance is furthest from closing" if ratios else "that comes first in the case"
+    rest: tuple[object, ...] = ()
+    if others:
+        rest = (f" The same for {', '.join(others[:6])}: ", element("code", "reconcile explain node NAME CASE"), ".")
     text = element("pre", explain_node(result, node, index), tabindex="0", aria_label=f"Node {node} worked by hand")
     return join(
         element("h3", "One node worked by hand"),
-        element("p", f"The node whose balance is furthest from closing, so that its numbers can be done again.{said}"),
+        element("p", f"The node {why}, so that its numbers can be done again.", *rest),
         text,
     )
 

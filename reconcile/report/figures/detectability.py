@@ -100,4 +100,4 @@ def _small(x: CoverageLine) -> str:
     if not math.isfinite(x.smallest):
         return "never"
     share = _percent(x)
-    return f"{x.smallest:.2g} {x.unit}" + (f" = {share}" if share != "-" and len(x.unit) < 7 else "")
+    return f"{float(f'{x.smallest:.2g}'):g} {x.unit}" + (f" = {share}" if share != "-" and len(x.unit) < 7 else "")
