@@ -29,7 +29,7 @@ FACTORS = (60.0, 3600.0, 24.0, 1000.0)
 """Minutes, seconds, days, and the thousand: the unit slips of the trade (common practice, no source)."""
 
 MOST_METERS = 40
-MOST_SOLVED = 60
+MOST_SOLVED = 20
 
 
 @dataclass(frozen=True)
@@ -73,11 +73,11 @@ def mixups_of(result: Result, index: int) -> tuple[Mixup, ...]:
         return ()
     trials = [t for t in _trials(result, index) if _possible(result, t)]
     group = result.group(index)
-    if group.equations.is_linear and not result.model.has_relative:
-        left = _by_parity(result, index, trials)
-    else:
-        left = _solved(result, index, trials[:MOST_SOLVED])
-        trials = trials[:MOST_SOLVED]
+    left = _by_parity(result, index, trials)
+    if not group.equations.is_linear or result.model.has_relative:
+        # To first order only a ranking: the most promising are solved in full.
+        trials = [trials[int(t)] for t in np.argsort(left, kind="stable")[:MOST_SOLVED]]
+        left = _solved(result, index, trials)
     limit = chi2_limit(result.settings.level, group.checks)
     found = [
         Mixup(kind, tags, words, float(value), limit)

@@ -265,7 +265,9 @@ def smeared(result: Result, index: int, granted: Granted) -> tuple[Smeared, ...]
     """
     off = result.adjusted[index] - granted.result.adjusted[0]
     sigma = result.sigmas[index]
+    # What is known exactly moves by rounding only.
+    least = np.maximum(sigma, 1e-9 * np.abs(result.adjusted[index]))
     with np.errstate(invalid="ignore"):
-        chosen = [int(i) for i in np.flatnonzero(np.abs(off) > np.maximum(sigma, 1e-300))]
-    chosen.sort(key=lambda i: -abs(off[i]) / max(sigma[i], 1e-300))
+        chosen = [int(i) for i in np.flatnonzero((np.abs(off) > least) & (sigma > 0))]
+    chosen.sort(key=lambda i: -abs(off[i]) / sigma[i])
     return tuple(Smeared(result.variables[i], result.units[i], float(off[i]), float(sigma[i])) for i in chosen)

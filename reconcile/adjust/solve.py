@@ -24,6 +24,8 @@ Array = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
 
 MAX_STEPS = 100
+FADED = 1e-15
+"""Share of the largest term of a balance below which a coefficient is rounding."""
 
 
 @dataclass(frozen=True)
@@ -206,6 +208,7 @@ class _Pass:
         spread = np.zeros(self.x.size)
         spread[self.step.measured] = np.linalg.norm(self.adjuster.cover, axis=1)
         spread[self.step.free] = np.nan_to_num(np.linalg.norm(self.adjuster.cover_unmeasured, axis=1))
+        spread = np.maximum(spread, self.step.least)
         return (np.abs(self.jacobian) * spread).max(axis=1, initial=0.0)
 
     def solution(self, steps: int) -> Solution:
@@ -229,6 +232,8 @@ class _Linearised:
         self.problem, self.present, self.free, self.names, self.row_names = problem, present, free, names, row_names
         self.measured = problem.columns[present]
         self.y = problem.readings[present]
+        # What counts as nothing of an unmeasured variable, for balances in which everything is zero at the solution.
+        self.least = np.zeros(problem.start.size)
 
     def at(self, x: Array, values: Array) -> _Pass:
         problem, free = self.problem, self.free
@@ -244,6 +249,8 @@ class _Linearised:
                 code="not-finite",
                 hint="check units and expected values",
             )
+        if not equations.is_linear:
+            jacobian = self._without_faded(jacobian, x, sigma)
         try:
             adjuster = prepare(jacobian[:, self.measured], jacobian[:, free], sigma[self.present])
         except (ValueError, np.linalg.LinAlgError) as error:
@@ -267,6 +274,17 @@ class _Linearised:
         return _Pass(x, target, parity[0], adjuster, jacobian, equations, sigma, self)
 
 
+    def _without_faded(self, jacobian: Array, x: Array, sigma: Array) -> Array:
+        """Drop coefficients that vanish with the values at the solution: scaling would make rounding of them count."""
+        size = np.maximum(np.abs(x), self.least)
+        size[self.measured] = np.maximum(size[self.measured], sigma[self.present])
+        weight = np.abs(jacobian) * size
+        faded = weight < FADED * weight.max(axis=1, initial=0.0, keepdims=True)
+        # Possible faults are zero here and not variables: what they would do stays.
+        faded[:, self.problem.fixed] = False
+        return np.where(faded, 0.0, jacobian)
+
+
 def _iterate(step: _Linearised, x: Array, values: Array) -> Solution:
     """Repeat the linearised solution until balances, values and sigmas have settled."""
     problem, measured, free = step.problem, step.measured, step.free
@@ -274,6 +292,7 @@ def _iterate(step: _Linearised, x: Array, values: Array) -> Solution:
     penalty = np.zeros(problem.equations(values).shape[0])
     size = np.zeros(x.size)
     size[measured], size[free] = problem.sigma(values)[step.present], np.maximum(np.abs(x[free]), 1e-6)
+    step.least[free] = 1e-9 * size[free]
     memory = Acceleration(size)
     for count in range(1, MAX_STEPS + 1):
         with np.errstate(all="ignore"):

@@ -23,6 +23,7 @@ __all__ = [
     "explanation_sentences",
     "explanations_in_words",
     "fault_phrase",
+    "label",
     "named_in_short",
     "p_value",
     "percent",
@@ -94,13 +95,21 @@ def alternative_phrase(alternative: Alternative) -> str:
     return " and ".join(fault_phrase(f) for f in alternative.faults)
 
 
+def label(fault: SizedFault) -> str:
+    """Name of a fault for people: a stated value and a shared cause are told as such."""
+    name = fault.candidate.name
+    if name.startswith("known:"):
+        return f"stated {name.removeprefix('known:')}"
+    return name.removeprefix("shared:")
+
+
 def short_name(snapshot: Snapshot) -> tuple[str, float]:
     """Name of the most likely explanation, alternatives joined by `or`, and its probability."""
     a = snapshot.accounts
     if a is None or not a.standing:
         return "no explanation found" if a is not None else "", math.nan
     best = a.standing[0]
-    return " or ".join(" and ".join(f.candidate.name for f in s.faults) for s in best.alternatives), best.probability
+    return " or ".join(alternative_name(s) for s in best.alternatives), best.probability
 
 
 def suspects_of(snapshot: Snapshot) -> tuple[Suspect, ...]:
@@ -230,8 +239,8 @@ def named_in_short(a: Accounts | None) -> list[str]:
     first = best.alternatives[0]
     if a.nothing_wrong > best.probability:
         return [
-            f"Most likely chance, and nothing is wrong (probability {percent(a.nothing_wrong)}).",
-            f"If something is: {_standing_in_short(a)}.",
+            "Faults are rare, so chance alone is likelier than any of them (nothing wrong: probability "
+            f"{percent(a.nothing_wrong)}); if one is there: {_standing_in_short(a)}."
         ]
     if a.conclusion is Conclusion.ONE:
         return [f"Most likely {alternative_phrase(first)} (probability {percent(first.probability)})."]
@@ -244,7 +253,7 @@ def named_in_short(a: Accounts | None) -> list[str]:
     if Reason.SATURATED in a.reasons and best.checks == 0:
         return [f"{least}Cannot tell: with {best.count} assumed no check is left that could contradict it."]
     rivals = ", ".join(
-        " or ".join("+".join(f.candidate.name for f in s.faults) for s in e.alternatives) for e in a.standing[1:4]
+        _names(e) for e in a.standing[1:4]
     )
     text = f"{least}{alternative_phrase(first)} fits best"
     text += f" (probability {percent(first.probability)})"
@@ -277,7 +286,9 @@ def explanations_in_words(snapshot: Snapshot, limit: int = 6) -> list[list[str]]
 
 def shown_explanations(a: Accounts, limit: int = 6) -> tuple[Account, ...]:
     """Standing explanations worth a paragraph: the first three, and others that are not quite improbable."""
-    return tuple(x for i, x in enumerate(a.standing) if i < 3 or x.probability >= 0.01)[:limit]
+    return tuple(
+        x for i, x in enumerate(a.standing) if i == 0 or x.probability >= 0.01 or (i < 3 and x.probability >= 0.001)
+    )[:limit]
 
 
 def remarks_on_explanations(snapshot: Snapshot, limit: int = 6) -> list[str]:
@@ -290,7 +301,7 @@ def remarks_on_explanations(snapshot: Snapshot, limit: int = 6) -> list[str]:
     if hidden:
         further = "1 further explanation is" if hidden == 1 else f"{hidden} further explanations are"
         out.append(f"{further} not excluded, but less probable.")
-    rejected = [x for x in a.ranked if not x.survives and x.count == 1][:3]
+    rejected = [x for x in a.ranked if not x.survives and x.count == 1 and x.left > x.limit][:3]
     if rejected and a.standing:
         out.append(
             "Rejected: "
@@ -317,7 +328,7 @@ def explanation_sentences(snapshot: Snapshot, limit: int = 6) -> list[str]:
 
 def alternative_name(alternative: Alternative) -> str:
     """Names of the faults of one set."""
-    return " and ".join(f.candidate.name for f in alternative.faults)
+    return " and ".join(label(f) for f in alternative.faults)
 
 
 def smearing_in_words(result: Result, index: int, limit: int = 3) -> list[str]:
@@ -354,7 +365,7 @@ def smearing_in_words(result: Result, index: int, limit: int = 3) -> list[str]:
 
 def _names(account: Account) -> str:
     sets = account.alternatives or account.excluded_by_sign
-    return " or ".join("+".join(f.candidate.name for f in s.faults) for s in sets)
+    return " or ".join("+".join(label(f) for f in s.faults) for s in sets)
 
 
 def plausible_alternatives(account: Account) -> tuple[tuple[Alternative, ...], int]:
