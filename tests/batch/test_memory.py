@@ -2,10 +2,8 @@
 
 from __future__ import annotations
 
-import subprocess
-import sys
-
 from conftest import SKID, skid_log
+from peak import peak_of
 
 SHORT, LONG = 60_000, 360_000
 BYTES_A_ROW = 100
@@ -13,18 +11,9 @@ BYTES_A_ROW = 100
 
 
 def peak(folder, rows):
-    """Peak resident memory of the whole command, in bytes."""
-    code = (
-        "import resource, sys\n"
-        "from reconcile.cli import main\n"
-        "try:\n    main()\n"
-        "finally:\n    print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024, file=sys.stderr)\n"
-    )
     log, out = folder / f"log{rows}.csv", folder / f"out{rows}"
     skid_log(rows, missing=0.01).to_csv(log, index=False)
-    line = [sys.executable, "-c", code, "run", str(folder / "case.yaml"), "--readings", str(log), "--out", str(out)]
-    done = subprocess.run([*line, "--chunk", "8192"], capture_output=True, text=True, check=True)
-    return int(done.stderr.split()[-1])
+    return peak_of("run", str(folder / "case.yaml"), "--readings", str(log), "--out", str(out), "--chunk", "8192")
 
 
 def test_memory_is_bounded(tmp_path):

@@ -7,14 +7,13 @@ from __future__ import annotations
 
 import json
 import os
-import subprocess
-import sys
 import time
 from pathlib import Path
 
 import numpy as np
 import pandas as pd
 import pytest
+from peak import peak_of
 
 pytestmark = pytest.mark.benchmark
 
@@ -79,20 +78,12 @@ def write_log(path, rows, seed=20260101):
 
 def run_command(folder, out, jobs):
     """Wall time and peak memory (MiB) of the whole command, and its summary."""
-    code = (
-        "import resource, sys\n"
-        "from reconcile.cli import main\n"
-        "try:\n    main()\n"
-        "finally:\n    print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss // 1024, file=sys.stderr)\n"
-    )
-    line = [sys.executable, "-c", code, "run", str(folder / "case.yaml"), "--readings", str(folder / "log.csv")]
     begun = time.perf_counter()
-    done = subprocess.run(
-        [*line, "--out", str(out), "--jobs", str(jobs)],
-        capture_output=True, text=True, check=True, env={**os.environ, "OPENBLAS_NUM_THREADS": "1"},
-    )  # fmt: skip
+    memory = peak_of(
+        "run", str(folder / "case.yaml"), "--readings", str(folder / "log.csv"), "--out", str(out), "--jobs", str(jobs)
+    )
     spent = time.perf_counter() - begun
-    return spent, int(done.stderr.split()[-1]), json.loads((out / "summary.json").read_text("utf-8"))
+    return spent, memory // 2**20, json.loads((out / "summary.json").read_text("utf-8"))
 
 
 def pandas_alone(source, out):
