@@ -274,9 +274,7 @@ class ReadingsTable:
         return pd.DataFrame(self.values, index=index, columns=list(self.columns))
 
 
-def _stack_optional(
-    parts: Sequence[ReadingsTable], name: str, empty: float = np.nan
-) -> npt.NDArray[np.float64] | None:
+def _stack_optional(parts: Sequence[ReadingsTable], name: str, empty: float = np.nan) -> npt.NDArray[np.float64] | None:
     arrays = [getattr(p, name) for p in parts]
     if all(a is None for a in arrays):
         return None

@@ -19,7 +19,15 @@ if TYPE_CHECKING:
     from ..errors import Notice
     from ..results import Result
 
-__all__ = ["from_the_log", "grouped_notices", "not_simply_read", "not_used", "plan_in_words", "verdict_line_of", "why_not"]
+__all__ = [
+    "from_the_log",
+    "grouped_notices",
+    "not_simply_read",
+    "not_used",
+    "plan_in_words",
+    "verdict_line_of",
+    "why_not",
+]
 
 _FEW = 3
 _MANY = 20
