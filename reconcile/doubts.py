@@ -94,7 +94,7 @@ def _hardly_a_reading(model: Model, readings: Array) -> list[Notice]:
 
 def _counted_twice(model: Model, network: Network, readings: Array) -> list[Notice]:
     """A reading on one side of a node that equals the sum of others on the same side."""
-    tag_of = {}
+    tag_of: dict[tuple[str, str, str], int] = {}
     for j, i in enumerate(model.meters):
         r = model.readings[i]
         if len(r.reads) == 1:

@@ -89,7 +89,18 @@ def _evidence(result: Result) -> pd.DataFrame:
     for i in range(result.size):
         if i in result.table.failed:
             rows.append(
-                (result.labels[i], np.nan, 0, np.nan, np.nan, why_not(result, i), "", np.nan, "", result.table.failed[i].message)
+                (
+                    result.labels[i],
+                    np.nan,
+                    0,
+                    np.nan,
+                    np.nan,
+                    why_not(result, i),
+                    "",
+                    np.nan,
+                    "",
+                    result.table.failed[i].message,
+                )
             )
             continue
         named, probability = most_likely(result, i)

@@ -32,7 +32,16 @@ from .model import Candidate, Model
 if TYPE_CHECKING:
     from .results import Result
 
-__all__ = ["FRAME_COLUMNS", "BalanceLine", "FaultLine", "ReadingLine", "Snapshot", "VariableLine", "balances_of", "look"]
+__all__ = [
+    "FRAME_COLUMNS",
+    "BalanceLine",
+    "FaultLine",
+    "ReadingLine",
+    "Snapshot",
+    "VariableLine",
+    "balances_of",
+    "look",
+]
 
 Array = npt.NDArray[np.float64]
 
@@ -537,10 +546,12 @@ def _balances(
     base[group.absent] = np.nan
     raw = np.full(model.size, np.nan)
     source = np.full(model.size, -1)
+    coefficient = np.ones(model.size)
     for i, r in reversed(list(enumerate(model.readings))):
         if len(r.reads) == 1 and r.kind != "cause" and np.isfinite(base[i]):
             column = model.system.column(r.reads[0][0])
             raw[column], source[column] = base[i] / r.reads[0][1], i
+            coefficient[column] = r.reads[0][1]
     for c, v in model.fixed.items():
         raw[c] = v
     m = model.system.equations.shape[0]
@@ -551,7 +562,7 @@ def _balances(
     before = e.closure(x_raw)[:m]
     covariance = model.covariance_of_readings(np.where(np.isfinite(base), base, x[model.columns]))
     read = np.flatnonzero(source >= 0)
-    part = jacobian[:, read]
+    part = jacobian[:, read] / coefficient[read]
     of_closure = part @ covariance[np.ix_(source[read], source[read])] @ part.T
     spread = np.sqrt(np.diag(of_closure))
     inflow, outflow = (t[:m] for t in e.split_terms(x_raw))

@@ -153,8 +153,13 @@ def _follow_leak(network: Network, system: System, out: Losses) -> None:
     stated = dict(zip(network.nodes, network.of_nodes("leak_of"), strict=True))
     streams = []
     for n in nodes:
-        touching = (*network.leaving(n), *network.entering(n))
-        streams.append(network.streams.index(stated[n] or touching[0]))
+        candidates = network.leaving(n) or network.entering(n)
+        if stated[n] is None and len(candidates) > 1:
+            raise ValueError(
+                f"a leak at node {n!r} would carry the material of one of {', '.join(sorted(candidates))}: write which, "
+                f"e.g. nodes: {{{n}: {{leak_of: {sorted(candidates)[0]}}}}}, or leave leaks out"
+            )
+        streams.append(network.streams.index(stated[n] or candidates[0]))
     out.elsewhere.append(len(out.carried))
     out.carried.append(
         (

@@ -106,8 +106,13 @@ def _loses_like(network: Network, node: str) -> str:
         if stated not in network.streams:
             raise ValueError(f"node {node!r} is to lose fluid like {stated!r}, which is no stream")
         return str(stated)
-    out = network.leaving(node) or network.entering(node)
-    return out[0]
+    candidates = network.leaving(node) or network.entering(node)
+    if len(candidates) > 1:
+        raise ValueError(
+            f"a leak at node {node!r} would carry the content of one of {', '.join(sorted(candidates))}: write which, "
+            f"e.g. nodes: {{{node}: {{loses_like: {sorted(candidates)[0]}}}}}, or leave leaks out with leaks: none"
+        )
+    return candidates[0]
 
 
 def _check_free(network: Network, options: PerfusionOptions) -> None:

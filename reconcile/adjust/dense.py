@@ -98,10 +98,14 @@ class Adjuster:
     # ------------------------------------------------------------------ evidence
 
     @cached_property
+    def _rows_to_whole_parity(self) -> Array:
+        """The same as `rows_to_parity` with every reading there, before absent ones are projected out."""
+        return np.asarray(solve_triangular(self.triangle, self.transform[self.order], trans="T"))
+
+    @cached_property
     def rows_to_parity(self) -> Array:
         """Matrix W, shape (r, m): a closure vector of the original rows times W is the parity vector."""
-        full = solve_triangular(self.triangle, self.transform[self.order], trans="T")
-        return self.turn.T @ full
+        return self.turn.T @ self._rows_to_whole_parity
 
     @cached_property
     def signatures(self) -> Array:
@@ -123,8 +127,8 @@ class Adjuster:
         ndarray, shape (r, k)
         """
         out = -self.rows_to_parity @ columns
-        # What is only rounding is zero: judged against the terms it is the sum of.
-        terms = np.linalg.norm(np.abs(self.rows_to_parity) @ np.abs(columns), axis=0)
+        # What is only rounding is zero: judged against the terms it is the sum of, absent readings still among them.
+        terms = np.linalg.norm(np.abs(self._rows_to_whole_parity) @ np.abs(columns), axis=0)
         out[:, np.linalg.norm(out, axis=0) <= 1e-10 * terms] = 0.0
         return out
 

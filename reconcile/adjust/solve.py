@@ -273,7 +273,6 @@ class _Linearised:
             target[free] += adjuster.unmeasured(moved, -closure)[0]
         return _Pass(x, target, parity[0], adjuster, jacobian, equations, sigma, self)
 
-
     def _without_faded(self, jacobian: Array, x: Array, sigma: Array) -> Array:
         """Drop coefficients that vanish with the values at the solution: scaling would make rounding of them count."""
         size = np.maximum(np.abs(x), self.least)

@@ -33,7 +33,7 @@ def read_calibrations(value: Any, tag: str, places: Places, problems: Problems) 
     path = ("meters", tag, "calibrated")
     if isinstance(value, str):
         entries: list[Any] = [v.strip() for v in value.split(",")]
-        spots = [path] * len(entries)
+        spots: list[tuple[Any, ...]] = [path] * len(entries)
     elif isinstance(value, list) and value:
         entries, spots = value, [(*path, i) for i in range(len(value))]
     else:

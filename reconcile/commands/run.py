@@ -28,7 +28,9 @@ __all__ = ["run"]
     "--report", is_flag=True, help="Write report.html, one page with everything: into --out, else beside the case."
 )
 @click.option(
-    "--pictures", type=click.Choice(["svg", "png"]), help="Write its figures as files: into the folder 'pictures' there."
+    "--pictures",
+    type=click.Choice(["svg", "png"]),
+    help="Write its figures as files: into the folder 'pictures' there.",
 )
 @click.option("--exclude", multiple=True, metavar="TAG", help="Leave a meter out; needs --because, one for each.")
 @click.option("--because", multiple=True, metavar="TEXT", help="Why the meter is left out; stands in the result.")
@@ -103,7 +105,16 @@ def run(
                 )
             )
         return _follow(loaded, readings, out, reasons, formats, strict=strict, as_json=as_json)
-    if out is not None and suspects == "flag" and snapshot is None and "xlsx" not in formats:
+    page = report or pictures is not None
+    if page and (chunk is not None or restart):
+        raise InputError(
+            Problem(
+                "report-too-long",
+                "a log that is worked through in pieces has no page and no pictures",
+                "leave --chunk and --restart out, or make a page of a part of the log, or of windows of it",
+            )
+        )
+    if out is not None and suspects == "flag" and snapshot is None and "xlsx" not in formats and not page:
         from .in_pieces import run_in_pieces
 
         code = run_in_pieces(
@@ -119,14 +130,6 @@ def run(
             as_json=as_json,
         )
         if code is not None:
-            if report or pictures:
-                raise InputError(
-                    Problem(
-                        "report-too-long",
-                        "a log that is worked through in pieces has no report; the corrected data set is written",
-                        "make a page of a part of it, or of windows of it",
-                    )
-                )
             return code
     elif chunk is not None or restart:
         words = "--chunk and --restart need --out, and go with neither --suspects, --snapshot nor --xlsx"

@@ -51,11 +51,11 @@ def render_coverage(found: Coverage, *, ascii_only: bool = False) -> str:
         rows = [(x.name, x.unit, _size(x.smallest), _size(x.smallest_of_all), _chance(x.named)) for x in faults]
         out += ["", table(("POSSIBLE FAULT", "unit", "smallest", "of all", "named"), rows, left=(0, 1))]
     if found.unread:
-        rows = [
+        unread = [
             (x.name, x.unit, plain(x.sigma, x.sigma), x.klass + (f": {x.reason}" if x.reason else ""))
             for x in found.unread
         ]
-        out += ["", table(("NOT READ", "unit", "±", ""), rows, left=(0, 1, 3))]
+        out += ["", table(("NOT READ", "unit", "±", ""), unread, left=(0, 1, 3))]
     out += _notes(found, readings)
     text = "\n".join(out).rstrip() + "\n"
     return to_ascii(text) if ascii_only else text

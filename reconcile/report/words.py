@@ -149,6 +149,8 @@ def p_value(p: float) -> str:
     """A p-value, small ones by their size."""
     if not math.isfinite(p):
         return "-"
+    if p < 1e-300:
+        return "under 1e-300"
     return f"{p:.1g}" if p < 0.001 else f"{p:.4f}" if p < 0.01 else f"{p:.3f}"
 
 
@@ -238,9 +240,10 @@ def named_in_short(a: Accounts | None) -> list[str]:
     best = a.standing[0]
     first = best.alternatives[0]
     if a.nothing_wrong > best.probability:
+        nothing = f"nothing wrong: probability {percent(a.nothing_wrong)}"
         return [
-            "Faults are rare, so chance alone is likelier than any of them (nothing wrong: probability "
-            f"{percent(a.nothing_wrong)}); if one is there: {_standing_in_short(a)}."
+            f"Faults are rare, so chance alone is likelier than any of them ({nothing}).",
+            f"If one is there: {_standing_in_short(a)}.",
         ]
     if a.conclusion is Conclusion.ONE:
         return [f"Most likely {alternative_phrase(first)} (probability {percent(first.probability)})."]
@@ -252,9 +255,7 @@ def named_in_short(a: Accounts | None) -> list[str]:
         return [f"{least}Cannot tell: {options}{more}."]
     if Reason.SATURATED in a.reasons and best.checks == 0:
         return [f"{least}Cannot tell: with {best.count} assumed no check is left that could contradict it."]
-    rivals = ", ".join(
-        _names(e) for e in a.standing[1:4]
-    )
+    rivals = ", ".join(_names(e) for e in a.standing[1:4])
     text = f"{least}{alternative_phrase(first)} fits best"
     text += f" (probability {percent(first.probability)})"
     if rivals:

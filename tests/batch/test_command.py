@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 import pytest
 from click.testing import CliRunner
-from conftest import SKID, skid_log
+from skid_logs import SKID, skid_log
 
 import reconcile.batch.stream
 from reconcile.adjust.batch import BLOCK

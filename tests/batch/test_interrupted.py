@@ -10,7 +10,7 @@ import time
 
 import numpy as np
 import pytest
-from conftest import SKID, skid_log
+from skid_logs import SKID, skid_log
 
 from reconcile import InputError, load_case
 from reconcile.adjust.batch import BLOCK

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from conftest import SKID, skid_log
 from peak import peak_of
+from skid_logs import SKID, skid_log
 
 SHORT, LONG = 60_000, 360_000
 BYTES_A_ROW = 100

@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
-from conftest import SKID, TAGS, skid_log
+from skid_logs import SKID, TAGS, skid_log
 
 from reconcile import load_case
 from reconcile.adjust.batch import BLOCK

@@ -86,6 +86,7 @@ DIALYSER = """
 domains:
   fluid: {unit: mL/min}
   perfusion: {solutes: {urea: {unit: mg/dL}}}
+nodes: {blood: {loses_like: bo}}
 streams:
   bi: outside -> blood
   bo: blood -> outside
@@ -147,7 +148,9 @@ def test_refusals(write_case):
     with pytest.raises(reconcile.InputError, match="no solute"):
         run(write_case, DIALYSER.replace("free_of: [urea]", "free_of: [glucose]"), {})
     with pytest.raises(reconcile.InputError, match="no stream"):
-        run(write_case, DIALYSER.replace("streams:", "nodes: {blood: {loses_like: nowhere}}\nstreams:", 1), {})
+        run(write_case, DIALYSER.replace("loses_like: bo", "loses_like: nowhere"), {})
+    with pytest.raises(reconcile.InputError, match="would carry the content of one of bo, membrane: write which"):
+        run(write_case, DIALYSER.replace("nodes: {blood: {loses_like: bo}}", ""), {})
 
 
 def test_it_says_that_it_is_no_medical_device(datasets):
