@@ -25,7 +25,7 @@ Ints = npt.NDArray[np.int64]
 
 MAX_STEPS = 100
 FADED = 1e-15
-"""Share of the largest term of a balance below which a coefficient is rounding."""
+"""Share of its typical size below which the value of an unmeasured variable is rounding."""
 
 
 @dataclass(frozen=True)
@@ -208,7 +208,7 @@ class _Pass:
         spread = np.zeros(self.x.size)
         spread[self.step.measured] = np.linalg.norm(self.adjuster.cover, axis=1)
         spread[self.step.free] = np.nan_to_num(np.linalg.norm(self.adjuster.cover_unmeasured, axis=1))
-        spread = np.maximum(spread, self.step.least)
+        spread = np.maximum(spread, 1e-9 * self.step.size)
         return (np.abs(self.jacobian) * spread).max(axis=1, initial=0.0)
 
     def solution(self, steps: int) -> Solution:
@@ -232,8 +232,8 @@ class _Linearised:
         self.problem, self.present, self.free, self.names, self.row_names = problem, present, free, names, row_names
         self.measured = problem.columns[present]
         self.y = problem.readings[present]
-        # What counts as nothing of an unmeasured variable, for balances in which everything is zero at the solution.
-        self.least = np.zeros(problem.start.size)
+        # Typical sizes of unmeasured variables, for those that are zero at the solution.
+        self.size = np.zeros(problem.start.size)
 
     def at(self, x: Array, values: Array) -> _Pass:
         problem, free = self.problem, self.free
@@ -241,7 +241,8 @@ class _Linearised:
         _check_sigma(sigma[self.present], lambda i: self.names(int(self.measured[i])))
         equations = problem.equations(values)
         closure = equations.closure(x)
-        jacobian = equations.jacobian(x).toarray()
+        # A value that is only rounding is none: scaling would make a coefficient of it count.
+        jacobian = equations.jacobian(np.where(np.abs(x) < FADED * self.size, 0.0, x)).toarray()
         if not np.all(np.isfinite(closure)) or not np.all(np.isfinite(jacobian)):
             bad = np.flatnonzero(~np.isfinite(closure) | ~np.isfinite(jacobian).all(axis=1))
             raise SolveError(
@@ -249,8 +250,6 @@ class _Linearised:
                 code="not-finite",
                 hint="check units and expected values",
             )
-        if not equations.is_linear:
-            jacobian = self._without_faded(jacobian, x, sigma)
         try:
             adjuster = prepare(jacobian[:, self.measured], jacobian[:, free], sigma[self.present])
         except (ValueError, np.linalg.LinAlgError) as error:
@@ -273,16 +272,6 @@ class _Linearised:
             target[free] += adjuster.unmeasured(moved, -closure)[0]
         return _Pass(x, target, parity[0], adjuster, jacobian, equations, sigma, self)
 
-    def _without_faded(self, jacobian: Array, x: Array, sigma: Array) -> Array:
-        """Drop coefficients that vanish with the values at the solution: scaling would make rounding of them count."""
-        size = np.maximum(np.abs(x), self.least)
-        size[self.measured] = np.maximum(size[self.measured], sigma[self.present])
-        weight = np.abs(jacobian) * size
-        faded = weight < FADED * weight.max(axis=1, initial=0.0, keepdims=True)
-        # Possible faults are zero here and not variables: what they would do stays.
-        faded[:, self.problem.fixed] = False
-        return np.where(faded, 0.0, jacobian)
-
 
 def _iterate(step: _Linearised, x: Array, values: Array) -> Solution:
     """Repeat the linearised solution until balances, values and sigmas have settled."""
@@ -291,7 +280,7 @@ def _iterate(step: _Linearised, x: Array, values: Array) -> Solution:
     penalty = np.zeros(problem.equations(values).shape[0])
     size = np.zeros(x.size)
     size[measured], size[free] = problem.sigma(values)[step.present], np.maximum(np.abs(x[free]), 1e-6)
-    step.least[free] = 1e-9 * size[free]
+    step.size[free] = size[free]
     memory = Acceleration(size)
     for count in range(1, MAX_STEPS + 1):
         with np.errstate(all="ignore"):
