@@ -244,6 +244,11 @@ class Snapshot:
         named = np.nanmax(np.abs(self.meter_tests.z), initial=0.0) > self.meter_tests.limit
         return "does not agree" if word == "watch" and named else word
 
+    @property
+    def unread(self) -> tuple[VariableLine, ...]:
+        """Variables that have no line among the readings: no meter reads them, and nothing is stated of them."""
+        return tuple(v for v in self.variables if not v.meters and v.klass not in ("checked", "not checked"))
+
     def reading(self, tag: str) -> ReadingLine:
         """Line of a meter by its tag."""
         return next(r for r in self.readings if r.tag == tag)

@@ -222,7 +222,7 @@ def _few(names: list[str]) -> str:
 
 
 def _unread(s: Snapshot, prefix: str, of: str) -> Markup | None:
-    unread = [v for v in s.variables if not v.meters]
+    unread = s.unread
     if not unread:
         return None
     why = any(v.reason for v in unread)

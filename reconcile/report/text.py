@@ -115,7 +115,7 @@ def _detail(result: Result, index: int) -> list[str]:
         if s.meter_tests.worst >= 0
         else ""
     )
-    unread = [v for v in s.variables if not v.meters]
+    unread = s.unread
     if unread:
         out += ["", _unread(unread)]
     told = explanations_in_words(s)
