@@ -80,7 +80,7 @@ def run(
         raise InputError(
             Problem(
                 "no-reason",
-                f"{len(exclude)} meters are left out, but {len(because)} reasons are given",
+                f"meters left out: {len(exclude)}; reasons given: {len(because)}",
                 'write --exclude TAG --because "..." for each',
             )
         )
