@@ -9,10 +9,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..campaign.adjusted import LEFT_OUT
-from ..campaign.line_ups import zero_of_closed
-from ..campaign.variants import bound_checks, entered_intervals, moves, what_ifs
+from ..campaign.variants import entered_intervals
 from .layout import table, wrap
-from .numbers import plain, signed
+from .log_parts import log_parts
 
 if TYPE_CHECKING:
     from ..campaign.snapshots import Prepared
@@ -30,7 +29,6 @@ __all__ = [
 ]
 
 _FEW = 3
-_MANY = 20
 
 
 def why_not(result: Result, index: int) -> str:
@@ -95,124 +93,14 @@ def from_the_log(result: Result, snapshot: int | None = None) -> list[str]:
     snapshot : int, optional
         Only this one, counted from 0.
     """
-    prepared = result.prepared
-    if prepared is None:
-        return []
-    parts = (_estimated, _intervals, _bounds, _zero, _rejected)
-    return [line for part in parts for line in part(result, snapshot)]
-
-
-def _estimated(result: Result, snapshot: int | None) -> list[str]:
-    """Cells that count as readings although nobody read them."""
-    prepared = result.prepared
-    assert prepared is not None
-    cells = [(i, j) for i, j in prepared.estimated if snapshot is None or i == snapshot]
-    if not cells:
-        return []
-    units = {r.tag: r.unit for r in result.model.readings}
-    out = ["", "ESTIMATED, NOT READ"]
-    for i, j in cells[:_MANY]:
-        where = f"{result.labels[i]}: " if result.size > 1 else ""
-        tag, more = result.tags[j], 0.0 if prepared.table.scatter is None else float(prepared.table.scatter[i, j])
-        value = f"{plain(float(result.readings[i, j]), more)} {units[tag]}"
-        out.append(
-            wrap(f"{where}{tag} {value}: {prepared.table.reason(i, j)}, {plain(more, more)} {units[tag]} unsure.")
-        )
-    if len(cells) > _MANY:
-        out.append(wrap(f"{len(cells) - _MANY} more; readings.csv of --out lists them."))
-    return out
-
-
-def _intervals(result: Result, snapshot: int | None) -> list[str]:
-    cells = [(c.snapshot, c.tag) for c in entered_intervals(result, snapshot)]
-    found = moves(result, snapshot, _FEW)
     out: list[str] = []
-    for i, tag in dict.fromkeys((m.snapshot, m.tag) for m in found):
-        rows = [m for m in found if (m.snapshot, m.tag) == (i, tag)]
-        first = rows[0]
-        unit = next(r.unit for r in result.model.readings if r.tag == tag)
-        where = f" in {result.labels[i]}" if result.size > 1 else ""
-        out += ["", f"OVER THE INTERVAL OF {tag}{where}, {first.low:g} to {first.high:g} {unit}"]
-        lines = [
-            (
-                m.name,
-                m.unit,
-                plain(m.at_low, step),
-                plain(m.at_high, step),
-                plain(m.entered, step),
-                plain(m.sigma, m.sigma),
-            )
-            for m in rows
-            for step in (0.2 * abs(m.at_high - m.at_low) or math.nan,)
-        ]
-        header = ("FIGURE OR VARIABLE", "unit", f"at {first.low:g}", f"at {first.high:g}", "middle", "±")
-        out.append(table(header, sorted(lines, key=lambda r: r[1] != ""), left=(0, 1)))
-        out.append(
-            wrap(
-                "The answer is the range: only its ends are known of this reading. The middle, with the rectangular "
-                "sigma (b - a)/sqrt(12), is what the files carry."
-            )
-        )
-    if len(cells) > _FEW:
-        out.append(wrap(f"{len(cells) - _FEW} more cells are intervals; intervals.csv of --out lists them."))
-    return out
-
-
-def _bounds(result: Result, snapshot: int | None) -> list[str]:
-    found = [b for b in bound_checks(result) if snapshot is None or b.snapshot == snapshot]
-    if not found:
-        return []
-    out = ["", "ONLY A BOUND WAS READ"]
-    for b in found[:_MANY]:
-        where = f"{result.labels[b.snapshot]}: " if result.size > 1 else ""
-        value = (
-            "not determined" if not math.isfinite(b.value) else f"{plain(b.value, b.sigma)} ± {plain(b.sigma, b.sigma)}"
-        )
-        out.append(wrap(f"{where}{b.tag} is {b.side} {b.bound:g} {b.unit}; the balances give {value}: {b.word}."))
-    if len(found) > _MANY:
-        out.append(wrap(f"{len(found) - _MANY} more; intervals.csv of --out lists them."))
-    return out
-
-
-def _zero(result: Result, snapshot: int | None) -> list[str]:
-    checks = (*(result.prepared.zero_checks if result.prepared else ()), *zero_of_closed(result))
-    if not checks:
-        return []
-    units = {r.tag: r.unit for r in result.model.readings}
-    rows = []
-    for z in checks[:_MANY]:
-        known = math.isfinite(z.sigma) and z.sigma > 0
-        spread = z.sigma if known else 0.1 * abs(z.mean) or math.nan
-        rows.append(
-            (z.label, z.tag, units.get(z.tag, ""), signed(z.mean, spread), plain(z.sigma, z.sigma) if known else "-")
-        )
-    out = ["", "ZERO CHECKS (what meters show while nothing flows)"]
-    out.append(table(("WINDOW", "meter", "unit", "offset", "±"), rows, left=(0, 1, 2)))
-    if len(checks) > _MANY:
-        out.append(wrap(f"{len(checks) - _MANY} more; log.csv of --out lists them."))
-    return out
-
-
-def _rejected(result: Result, snapshot: int | None) -> list[str]:
-    if result.prepared is None or (snapshot is None and result.size > _MANY):
-        return []
-    found = what_ifs(result, snapshot)
-    if not found:
-        return []
-    rows = [
-        (
-            w.alternative.words
-            if result.size == 1
-            else f"{result.labels[w.alternative.snapshot]}: {w.alternative.words}",
-            f"{signed(w.closure, abs(w.closure / w.ratio) if w.ratio else math.nan)} {w.unit}" if w.balance else "-",
-            signed(w.ratio, 1.0),
-            f"{w.objective:.1f}",
-        )
-        for w in found
-    ]
-    out = ["", "WHAT IF THE LOG WERE READ OTHERWISE"]
-    for words, closure, ratio, objective in rows:
-        out.append(wrap(f"{words}: closure {closure}, {ratio} spreads, χ² {objective}."))
+    for part in log_parts(result, snapshot):
+        out += ["", f"{part.title.upper()}{part.of}"]
+        if part.sentences:
+            out += [wrap(sentence) for sentence in part.sentences]
+        else:
+            out.append(table((part.header[0].upper(), *part.header[1:]), part.rows, left=part.left))
+        out += [wrap(note) for note in part.notes]
     return out
 
 

@@ -13,6 +13,7 @@ from .canvas import HATCH
 from .files import write_whole
 from .markup import Markup, element, join
 from .page_end import appendix, assumptions, figures_of_knowledge, typical, unknowable
+from .page_log import log_section
 from .page_snapshot import explanations_part, snapshot_parts
 from .page_snapshots import BYTES_OF_A_ROW, MOST_BYTES, one_at_a_time, over_time, overview, together
 from .palette import DARK, LIGHT, figure_style, variables
@@ -91,6 +92,9 @@ def render_page(result: Result, *, case: Case | None = None) -> str:
         sections.append(("snapshots", "All snapshots", join(overview(result, shown), drawn)))
         sections += [("together", "What they say together", joint)] if joint is not None else []
         sections.append(("details", "One snapshot at a time", details))
+    way = log_section(result)
+    if way is not None:
+        sections.append(("log", "From the log to the snapshots", way))
     if usable:
         sections.append(("unknown", "What cannot be known", unknowable(result, case)))
     sections.append(("assumptions", "Assumptions", assumptions(result)))

@@ -13,7 +13,7 @@ from ..coverage import Coverage, coverage_in
 from ..snapshot import signatures
 from . import figures
 from .by_hand import explain_node, nodes_of
-from .campaign import from_the_log, grouped_notices, not_used, plan_in_words, why_not
+from .campaign import grouped_notices
 from .markup import Markup, element, join
 from .numbers import plain
 from .page_snapshot import figure_part, snapshot_name
@@ -26,7 +26,7 @@ if TYPE_CHECKING:
 
 __all__ = ["appendix", "assumptions", "figures_of_knowledge", "typical", "unknowable"]
 
-MOST_ALIKE, MOST_COLUMNS, MOST_ROWS, MOST_LEFT_OUT = 12, 16, 40, 60
+MOST_ALIKE, MOST_COLUMNS, MOST_ROWS, MOST_DECIDED = 12, 16, 40, 60
 WORTH_IT = 0.95
 """A meter is recommended if it lowers what it is for to less than this share."""
 
@@ -159,7 +159,6 @@ def assumptions(result: Result) -> Markup:
         _shared(result),
         _known(result),
         _left_out(result),
-        _log(result),
     ]
     settings = result.settings
     facts = [
@@ -241,36 +240,26 @@ def _left_out(result: Result) -> Markup | None:
                 left=(0, 1),
             )
         )
+    if result.decisions:
+        decided = [(result.labels[i], d.words) for i, d in sorted(result.decisions.items())]
+        note = f"{len(decided) - MOST_DECIDED} more." if len(decided) > MOST_DECIDED else None
+        parts.append(
+            html_table(
+                "Decided about suspects",
+                ("snapshot", "what"),
+                decided[:MOST_DECIDED],
+                name="decided-table",
+                left=(0, 1),
+                note=note,
+            )
+        )
     if result.statuses:
         counted = Counter((tag, why) for (_, tag), why in result.statuses.items())
         rows = [(tag, why, str(n)) for (tag, why), n in sorted(counted.items())]
         parts.append(
             html_table("Readings not used", ("meter", "why", "snapshots"), rows, name="unused-table", left=(0, 1))
         )
-    if result.table.failed:
-        rows_ = [(result.labels[i], why_not(result, i), e.message) for i, e in sorted(result.table.failed.items())]
-        caption = f"Snapshots without adjusted values: {', '.join(not_used(result))}"
-        table = html_table(
-            caption, ("snapshot", "word", "why"), rows_[:MOST_LEFT_OUT], name="failed-table", left=(0, 1, 2)
-        )
-        parts.append(table)
-        if len(rows_) > MOST_LEFT_OUT:
-            parts.append(element("p", f"{len(rows_) - MOST_LEFT_OUT} more; evidence.csv lists them.", class_="note"))
     return join(*parts) if parts else None
-
-
-def _log(result: Result) -> Markup | None:
-    """How the log became these snapshots, as the terminal says it."""
-    if result.prepared is None:
-        return None
-    lines = [*plan_in_words(result.prepared), *from_the_log(result)]
-    text = "\n".join(lines).strip("\n")
-    if not text:
-        return None
-    return join(
-        element("h3", "From the log to the snapshots"),
-        element("pre", text, tabindex="0", aria_label="From the log to the snapshots"),
-    )
 
 
 # ------------------------------------------------------------------ appendix

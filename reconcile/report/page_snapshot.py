@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 from ..mixups import mixups_of
 from . import figures
+from .campaign import not_simply_read
 from .markup import Markup, element, join
 from .numbers import plain, signed
 from .symbols import symbol_of
@@ -146,6 +147,7 @@ def _readings_part(result: Result, index: int, prefix: str) -> Markup:
     caption = "Readings" + _of(result, index)
     rows: list[tuple[str, ...]] = []
     marked: list[int] = []
+    not_read = not_simply_read(result, index)
     for r in s.readings:
         sigma = min((x for x in (r.sigma_before, r.sigma) if math.isfinite(x) and x > 0), default=math.nan)
         if r.word in NAMED:
@@ -162,7 +164,7 @@ def _readings_part(result: Result, index: int, prefix: str) -> Markup:
                 signed(r.in_sigmas, 0.1),
                 f"{100 * r.share:.0f} %",
                 signed(r.z, 0.1),
-                f"{symbol_of(r.word)} {r.word}",
+                f"{symbol_of(r.word)} {r.word}" + (f", {not_read[r.tag]}" if r.tag in not_read else ""),
             )
         )
     header = (

@@ -62,7 +62,6 @@ def overview(result: Result, shown: frozenset[int]) -> Markup:
     marked = []
     for i, label in enumerate(result.labels):
         if i in result.table.failed:
-            marked.append(i)
             rows.append((label, "-", "-", "-", "-", f"– {why_not(result, i)}", result.table.failed[i].message))
             continue
         word = result.words[i]
@@ -80,7 +79,7 @@ def overview(result: Result, shown: frozenset[int]) -> Markup:
                 named.replace("known:", "").replace("shared:", ""),
             )
         )
-    header = ("snapshot", "χ²", "limit", "checks", "p", "word", "most likely")
+    header = ("snapshot", "χ²", "limit", "checks", "p", "word", "most likely, or why not")
     note = (
         f"χ² sums the squares of what the checks find; the limit is exceeded by chance in "
         f"{100 * result.settings.level:g} % of sound snapshots."

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from html import unescape
 from html.parser import HTMLParser
 from itertools import pairwise
 
@@ -13,6 +14,7 @@ from plants import plant
 import reconcile
 from reconcile.cli import main
 from reconcile.report.by_hand import explain_node
+from reconcile.report.log_parts import log_parts
 from reconcile.report.page import MOST_SNAPSHOTS, render_page, write_page
 from reconcile.report.words import verdict_line
 
@@ -165,10 +167,66 @@ def test_what_became_of_the_log_is_told(datasets):
     case = reconcile.load_case(datasets / "membrane_log")
     result = case.run()
     page = Page(render_page(result, case=case))
-    assert [3, "From the log to the snapshots"] in page.headings
+    assert [2, "From the log to the snapshots"] in page.headings
     for i, error in result.table.failed.items():
         assert error.message in page.said
         assert f"snapshot-{i + 1}" not in page.ids
+
+
+def rows_of(text, name):
+    """Cells of a table of the page, row by row, as text."""
+    body = re.search(rf'<table[^>]*id="{name}".*?</table>', text, re.DOTALL).group(0)
+    return [
+        [unescape(re.sub("<[^>]*>", "", cell)) for cell in re.findall(r"<t[hd][^>]*>(.*?)</t[hd]>", row, re.DOTALL)]
+        for row in re.findall(r"<tr.*?</tr>", body, re.DOTALL)
+    ]
+
+
+@pytest.mark.parametrize("name", ["membrane_log", "batch_tank", "flotation_test"])
+def test_the_page_tells_of_the_log_what_the_terminal_tells(datasets, name):
+    case = reconcile.load_case(datasets / name)
+    result = case.run()
+    text = render_page(result, case=case)
+    parts = list(log_parts(result))
+    assert parts
+    printed = result.summary()
+    for part in parts:
+        assert f"{part.title.upper()}{part.of}" in printed
+        assert rows_of(text, f"log-{part.name}") == [list(part.header), *(list(row) for row in part.rows)]
+        assert all(note in Page(text).said for note in part.notes)
+    decided = rows_of(text, "decisions-table")
+    assert [(row[0], row[-1]) for row in decided[1:]] == [(e.rule, e.words) for e in result.prepared.log]
+
+
+def test_windows_left_out_say_why_wherever_they_stand(datasets):
+    result = reconcile.load_case(datasets / "membrane_log").run()
+    text = render_page(result)
+    told = {row[0]: row[1:] for row in rows_of(text, "failed-table")[1:]}
+    listed = {row[0]: row[-2:] for row in rows_of(text, "snapshots-table")[1:]}
+    assert list(told) == ["6", "7"]
+    for label, left in zip(("6", "7"), (result.prepared.left_out[i] for i in (5, 6)), strict=True):
+        assert told[label][0] == f"left out: {left.code}"
+        assert listed[label] == [f"– left out: {left.code}", told[label][1]]
+    assert "not solved" not in text
+
+
+def test_readings_that_nobody_read_are_marked(datasets):
+    text = render_page(reconcile.load_case(datasets / "batch_tank").run())
+    words = {row[0]: row[-1] for row in rows_of(text, "readings-table")[1:]}
+    assert words["out_total"].endswith(", estimated")
+    assert "estimated" not in words["feed_total"]
+    assert words["level"].endswith("sound so far")
+
+
+def test_a_case_without_a_log_has_no_section_on_it(skid_page):
+    assert "From the log" not in skid_page
+
+
+def test_suspects_that_were_decided_about_are_listed(datasets):
+    result = reconcile.load_case(datasets / "membrane_log").run(suspects="exclude")
+    assert result.decisions
+    told = rows_of(render_page(result), "decided-table")[1:]
+    assert told == [[result.labels[i], d.words] for i, d in sorted(result.decisions.items())]
 
 
 def test_nothing_to_check_is_said(write_case):
