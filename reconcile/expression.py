@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -19,6 +20,9 @@ from .errors import PluginError
 __all__ = ["Balance", "Call", "Expression", "stack"]
 
 Array = npt.NDArray[np.float64]
+
+REMEMBERED = 8
+"""Points at which the values of a function are kept."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,11 +56,31 @@ class Call:
 
     def arguments(self, x: Array) -> list[Array]:
         """Arguments at x, each of shape (k,)."""
-        return [_widen(m, x.size) @ x + c for m, c in zip(self.matrices, self.constants, strict=True)]
+        # A case may have appended columns that the function does not know of.
+        return [m @ x[: m.shape[1]] + c for m, c in zip(self.matrices, self.constants, strict=True)]
 
     def value(self, x: Array) -> Array:
-        """Values at x, shape (k,)."""
-        return self._ask(self.function, x, lambda out: np.broadcast_to(np.asarray(out, dtype=float), (self.size,)))
+        """Values at x, shape (k,); not to be written to."""
+        key = x.tobytes()
+        known = self._remembered.get(key)
+        if known is None:
+            known = self._ask(self.function, x, lambda out: np.broadcast_to(np.array(out, dtype=float), (self.size,)))
+            if len(self._remembered) >= REMEMBERED:
+                self._remembered.clear()
+            self._remembered[key] = known
+        return known
+
+    @cached_property
+    def _remembered(self) -> dict[bytes, Array]:
+        """Values at the latest points: closure, scale and merit of one step ask for the same ones."""
+        return {}
+
+    @cached_property
+    def _pattern(self) -> Pattern:
+        return Pattern.of(self.matrices)
+
+    def __getstate__(self) -> dict[str, Any]:
+        return {k: v for k, v in self.__dict__.items() if k not in ("_remembered", "_pattern")}
 
     def jacobian(self, x: Array) -> sp.csr_array:
         """Derivatives with respect to x, shape (k, n)."""
@@ -67,10 +91,9 @@ class Call:
                 raise ValueError(f"{len(each)} derivatives for {len(self.matrices)} arguments")
             return each
 
-        total = sp.csr_array((self.size, x.size))
-        for slope, matrix in zip(self._ask(self.derivatives, x, slopes), self.matrices, strict=True):
-            total = total + sp.diags_array(slope) @ _widen(matrix, x.size)
-        return sp.csr_array(total)
+        each = self._ask(self.derivatives, x, slopes)
+        terms = [s.repeat(np.diff(m.indptr)) * m.data for s, m in zip(each, self.matrices, strict=True)]
+        return self._pattern.filled(terms, x.size)
 
     def _ask(self, function: Callable[..., Any], x: Array, shaped: Callable[[Any], Any]) -> Any:
         """Call a function of the domain; whatever goes wrong in there is reported under the domain's name."""
@@ -83,6 +106,34 @@ class Call:
                 f"{type(error).__name__}: {error}",
                 hint="the arguments may be outside its range: check the readings, or state expected values under design:",
             ) from error
+
+
+@dataclass(frozen=True)
+class Pattern:
+    """Where the entries of a sum of sparse matrices stand, worked out once for any values of theirs."""
+
+    indptr: npt.NDArray[np.integer[Any]]
+    indices: npt.NDArray[np.integer[Any]]
+    places: tuple[npt.NDArray[np.int64], ...]
+
+    @classmethod
+    def of(cls, matrices: Sequence[sp.csr_array]) -> Pattern:
+        """Pattern of the sum of matrices with as many rows."""
+        count, width = matrices[0].shape[0], max(m.shape[1] for m in matrices)
+        rows = [np.repeat(np.arange(count, dtype=np.int64), np.diff(m.indptr)) for m in matrices]
+        keys = np.concatenate([r * width + m.indices for r, m in zip(rows, matrices, strict=True)])
+        found, place = np.unique(keys, return_inverse=True)
+        ends = np.cumsum([m.nnz for m in matrices])[:-1]
+        indptr = np.searchsorted(found, np.arange(count + 1, dtype=np.int64) * width)
+        indices = (found % max(width, 1)).astype(matrices[0].indices.dtype)
+        return cls(indptr.astype(indices.dtype), indices, tuple(np.split(place.ravel(), ends)))
+
+    def filled(self, terms: Sequence[Array], columns: int) -> sp.csr_array:
+        """Sum with these entries of each matrix, in their order, and with so many columns."""
+        data = np.zeros(self.indices.size)
+        for place, term in zip(self.places, terms, strict=True):
+            np.add.at(data, place, term)
+        return sp.csr_array((data, self.indices, self.indptr), shape=(self.indptr.size - 1, columns))
 
 
 def _widen(matrix: sp.csr_array, columns: int) -> sp.csr_array:

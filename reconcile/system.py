@@ -17,7 +17,7 @@ import numpy as np
 import numpy.typing as npt
 import scipy.sparse as sp
 
-from .expression import Balance, Call, Expression, stack
+from .expression import Balance, Call, Expression, Pattern, stack
 
 __all__ = ["Equations", "FaultKind", "Prior", "System", "stack"]
 
@@ -136,16 +136,20 @@ class Equations:
         """Exact derivatives of the closures at x, shape (m, n)."""
         out = self.linear
         if self.products.nnz:
-            i, j = self.pairs[:, 0], self.pairs[:, 1]
-            p = np.arange(len(self.pairs))
-            inner = sp.csr_array(
-                (np.concatenate([x[j], x[i]]), (np.concatenate([p, p]), np.concatenate([i, j]))),
-                shape=(len(self.pairs), self.shape[1]),
-            )
-            out = out + self.products @ inner
+            slopes = [x[self.pairs[:, 1]], x[self.pairs[:, 0]]]
+            out = out + self.products @ self._of_pairs.filled(slopes, self.shape[1])
         for coefficient, call in self.calls:
             out = out + coefficient @ call.jacobian(x)
         return sp.csr_array(out)
+
+    @cached_property
+    def _of_pairs(self) -> Pattern:
+        """Where the derivatives of the products by their first and by their second variable stand."""
+        each = np.arange(len(self.pairs) + 1)
+        shape = (len(self.pairs), self.shape[1])
+        return Pattern.of(
+            [sp.csr_array((np.ones(len(self.pairs)), column, each), shape=shape) for column in self.pairs.T]
+        )
 
     def largest_term(self, x: Array) -> Array:
         """Largest absolute term of each balance at x, shape (m,): the scale a closure is judged by."""

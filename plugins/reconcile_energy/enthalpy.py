@@ -63,9 +63,15 @@ def _each(state: Callable[[float, float], tuple[float, ...]], count: int, a: Arr
     return tuple(out)
 
 
+_REMEMBERED = 4096
+"""States kept: iterations ask for the enthalpy and its slopes at the same temperatures and pressures again and again."""
+
+
+@lru_cache(maxsize=2)
 def _region(number: int, limits: tuple[float, float]) -> Callable[[float, float], tuple[float, ...]]:
     formula = getattr(tables(), f"_Region{number}")
 
+    @lru_cache(maxsize=_REMEMBERED)
     def state(temperature: float, pressure: float) -> tuple[float, ...]:
         kelvin, mpa = temperature + KELVIN, pressure * _BAR
         if not (limits[0] <= kelvin <= limits[1] and 0.0 < mpa <= 100.0):
@@ -110,11 +116,18 @@ def steam_slopes(temperature: Array, pressure: Array) -> tuple[Array, Array]:
     return by_t, by_p
 
 
+@lru_cache(maxsize=_REMEMBERED)
+def _both_phases(mpa: float) -> tuple[float, float]:
+    """Specific enthalpies of boiling water and of dry steam on the saturation line."""
+    liquid, vapour = (float(tables()._Region4(mpa, x)["h"]) for x in (0, 1))
+    return liquid, vapour
+
+
 def _two_phases(pressure: float, quality: float) -> tuple[float, ...]:
     mpa = pressure * _BAR
     if not _SATURATION[0] <= mpa <= _SATURATION[1]:
         return np.nan, np.nan
-    liquid, vapour = (float(tables()._Region4(mpa, x)["h"]) for x in (0, 1))
+    liquid, vapour = _both_phases(mpa)
     return liquid + quality * (vapour - liquid), vapour - liquid
 
 
