@@ -3,21 +3,20 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from importlib.resources import files
 from pathlib import Path
 from typing import TYPE_CHECKING, Literal
 
 from ..errors import InputError, Problem
 from . import figures
-from .canvas import HATCH
 from .files import write_whole
 from .markup import Markup, element, join
-from .page_end import appendix, assumptions, figures_of_knowledge, typical, unknowable
+from .page_assumptions import assumptions
+from .page_document import document, verdict_box
+from .page_end import appendix, figures_of_knowledge, typical, unknowable
 from .page_log import log_section
 from .page_snapshot import explanations_part, snapshot_parts
 from .page_snapshots import BYTES_OF_A_ROW, MOST_BYTES, one_at_a_time, over_time, overview, together
-from .palette import DARK, LIGHT, figure_style, variables
-from .words import MARKS, verdict_line
+from .words import verdict_line
 
 if TYPE_CHECKING:
     from ..hookspecs import Section
@@ -28,7 +27,6 @@ __all__ = ["figures_of", "render_page", "write_figures", "write_page"]
 
 MOST_SNAPSHOTS = 20_000
 
-_CLASSES = {"agrees": "is-yes", "watch": "is-watch named", "does not agree": "is-no named", "cannot tell": "is-open"}
 _WORST = ("does not agree", "watch", "cannot tell", "agrees")
 
 
@@ -100,7 +98,7 @@ def render_page(result: Result, *, case: Case | None = None) -> str:
     sections.append(("assumptions", "Assumptions", assumptions(result)))
     sections += [(f"plugin-{k}", s.title, _plugin(s)) for k, s in enumerate(_sections_of_plugins(result, case), 1)]
     sections.append(("appendix", "Appendix for auditors", appendix(result)))
-    return _document(result, sections)
+    return document(result.title, _verdict(result), sections, result.provenance)
 
 
 def figures_of(result: Result, case: Case | None = None, snapshot: int | None = None) -> dict[str, figures.Figure]:
@@ -171,68 +169,12 @@ def _plugin(section: Section) -> Markup:
     return element("div", *(element("p", part) for part in section.text.split("\n\n")), class_="plugin")
 
 
-def _document(result: Result, sections: Sequence[tuple[str, str, Markup]]) -> str:
-    style = (
-        f":root{{{variables(LIGHT)}}}"
-        f"@media (prefers-color-scheme: dark){{:root{{{variables(DARK)}}}}}"
-        f"@media print{{:root{{{variables(LIGHT)}}}}}" + _asset("page.css") + figure_style()
-    )
-    head = element(
-        "head",
-        element("meta", charset="utf-8"),
-        element("meta", name="viewport", content="width=device-width, initial-scale=1"),
-        element("title", f"{result.title}: reconciled readings"),
-        element("link", rel="icon", href="data:,"),
-        element("style", Markup(style)),
-    )
-    hatching = element(
-        "svg", element("defs", HATCH), width="0", height="0", style="position:absolute", aria_hidden="true"
-    )
-    contents = element(
-        "nav",
-        element("ul", *(element("li", element("a", title, href=f"#{name}")) for name, title, _ in sections)),
-        aria_label="Contents",
-    )
-    body = element(
-        "body",
-        element("a", "Skip to the findings", href="#verdict", class_="skip"),
-        hatching,
-        element(
-            "div",
-            element("header", element("h1", result.title), _verdict(result), contents),
-            element(
-                "main",
-                *(
-                    element(
-                        "section",
-                        element("h2", title, id=f"{name}-heading"),
-                        part,
-                        id=name,
-                        aria_labelledby=f"{name}-heading",
-                    )
-                    for name, title, part in sections
-                ),
-            ),
-            _footer(result),
-            class_="wrap",
-        ),
-        element("script", Markup(_asset("page.js"))),
-    )
-    return "<!DOCTYPE html>\n" + element("html", head, body, lang="en") + "\n"
-
-
 def _verdict(result: Result) -> Markup:
     words = [result.words[i] for i in range(result.size) if i not in result.table.failed]
     word = next((w for w in _WORST if w in words), "cannot tell")
     text = verdict_line(result)
     said = word if result.size == 1 else _of_many(words, word, result.size)
-    return element(
-        "div",
-        element("span", MARKS[word], class_="sign", aria_hidden="true"),
-        element("p", element("span", said[0].upper() + said[1:], class_="word"), text),
-        class_=f"verdict {_CLASSES[word]}",
-        id="verdict",
-    )
+    return verdict_box(word, said, text)
 
 
 def _of_many(words: Sequence[str], word: str, size: int) -> str:
@@ -245,20 +187,3 @@ def _of_many(words: Sequence[str], word: str, size: int) -> str:
         if word == "watch"
         else (f"{count} of {size} {'does' if count == 1 else 'do'} not agree" if word == "does not agree" else word)
     )
-
-
-def _footer(result: Result) -> Markup:
-    p = result.provenance
-    stamped = f"Made by {p.get('program', 'reconcile-flows')}. " if p else ""
-    return element(
-        "footer",
-        element(
-            "p",
-            f"{stamped}Reconciled numbers are estimates. A flagged reading is a reason to look, not a reason to act; where "
-            "a legal meter or a device alarm exists, that one counts.",
-        ),
-    )
-
-
-def _asset(name: str) -> str:
-    return files(__package__).joinpath("assets", name).read_text(encoding="utf-8")

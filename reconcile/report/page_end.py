@@ -1,11 +1,11 @@
-"""The rest of the page: what cannot be known, what was assumed, and what an auditor wants to do again."""
+"""The rest of the page: what cannot be known, and what an auditor wants to do again."""
 
 from __future__ import annotations
 
 import json
 import math
-from collections import Counter
-from typing import TYPE_CHECKING
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -13,20 +13,20 @@ from ..coverage import Coverage, coverage_in
 from ..snapshot import signatures
 from . import figures
 from .by_hand import explain_node, nodes_of
-from .campaign import grouped_notices
 from .markup import Markup, element, join
-from .numbers import plain
 from .page_snapshot import figure_part, snapshot_name
 from .tables import html_table
 from .words import suspects_of
 
 if TYPE_CHECKING:
+    from ..case.spec import CaseSpec
     from ..results import Result
     from ..run import Case
+    from ..trajectory import Trajectory
 
-__all__ = ["appendix", "assumptions", "figures_of_knowledge", "typical", "unknowable"]
+__all__ = ["appendix", "appendix_of_any", "figures_of_knowledge", "typical", "unknowable"]
 
-MOST_ALIKE, MOST_COLUMNS, MOST_ROWS, MOST_DECIDED = 12, 16, 40, 60
+MOST_ALIKE, MOST_COLUMNS, MOST_ROWS = 12, 16, 40
 WORTH_IT = 0.95
 """A meter is recommended if it lowers what it is for to less than this share."""
 
@@ -146,122 +146,6 @@ def _advice(result: Result, index: int, case: Case | None) -> figures.Figure | N
     return figures.placements(found, 8) if found is not None and helps else None
 
 
-# ------------------------------------------------------------------ assumptions
-
-
-def assumptions(result: Result) -> Markup:
-    """Sigmas and where they come from, what errors share, what was left out, settings, cautions."""
-    parts: list[Markup | None] = [
-        element("div", *(element("p", element("strong", "Caution: "), c) for c in result.cautions), class_="caution")
-        if result.cautions
-        else None,
-        _sigmas(result),
-        _shared(result),
-        _known(result),
-        _left_out(result),
-    ]
-    settings = result.settings
-    facts = [
-        f"Tests may take {100 * settings.level:g} % false alarms.",
-        f"The smallest detectable fault is noticed with {100 * settings.power:g} % chance.",
-        f"Before any reading a given meter is at fault with probability {settings.fault_rate:g}; explanations weigh it.",
-        f"Before any reading a given node leaks with probability {settings.leak_rate:g}.",
-        "Errors of different meters are taken as independent unless they share a cause above, and as normal.",
-    ]
-    if result.model.has_relative:
-        at = "the adjusted value" if settings.percent_at == "adjusted" else "the reading"
-        facts.append(f"Sigmas in percent are evaluated at {at}.")
-    parts.append(element("ul", *(element("li", f) for f in facts)))
-    if result.notices:
-        parts.append(element("h3", "Notices"))
-        parts.append(element("ul", *(element("li", n) for n in grouped_notices(result.notices))))
-    return join(*parts)
-
-
-def _sigmas(result: Result) -> Markup:
-    usable = [i for i in range(result.size) if i not in result.table.failed]
-    at = {r.tag: r for r in result.snapshot(typical(result)).readings} if usable else {}
-    rows: list[tuple[str, ...]] = []
-    for r in result.model.readings:
-        if r.kind == "cause":
-            continue
-        spec = result.spec.meters.get(r.tag) if result.spec is not None else None
-        said = " and ".join(p.text for p in spec.sigma.components) if spec is not None else ""
-        guess = " (a guess)" if spec is not None and spec.sigma.marked_guess else ""
-        line = at.get(r.tag)
-        rows.append(
-            (
-                r.tag.removeprefix("known:"),
-                " + ".join(n for n, _ in r.reads),
-                r.unit,
-                plain(line.sigma_before, line.sigma_before) if line is not None else "-",
-                (said or "-") + guess,
-                r.origin if r.origin != said else "",
-            )
-        )
-    header: tuple[str, ...] = ("meter", "reads", "unit", "sigma used", "as stated", "from")
-    if not any(row[-1] for row in rows):
-        header, rows = header[:-1], [row[:-1] for row in rows]
-    return html_table("Sigmas and where they come from", header, rows, name="sigmas-table", left=(0, 1, 2, 4, 5))
-
-
-def _shared(result: Result) -> Markup | None:
-    spec = result.spec
-    if spec is None or not spec.shared_errors:
-        return element("p", "No errors are shared: the covariance of the readings is diagonal.")
-    rows = []
-    for name, shared in spec.shared_errors.items():
-        sizes = dict.fromkeys(" and ".join(p.text for p in s.components) for s in shared.sigma)
-        kind = "fully together" if shared.correlations is None else "with the stated correlations"
-        rows.append((name, ", ".join(shared.meters), "; ".join(sizes), kind))
-    return html_table(
-        "Errors that meters share", ("cause", "meters", "sigma", "how"), rows, name="shared-table", left=(0, 1, 2, 3)
-    )
-
-
-def _known(result: Result) -> Markup | None:
-    model = result.model
-    faults = set(model.fault_columns.tolist())
-    rows = [(model.names[c], plain(v), model.units[c]) for c, v in sorted(model.fixed.items()) if c not in faults]
-    if not rows:
-        return None
-    return html_table("Taken as exactly known", ("variable", "value", "unit"), rows, name="known-table", left=(0, 2))
-
-
-def _left_out(result: Result) -> Markup | None:
-    parts: list[Markup | None] = []
-    if result.excluded:
-        parts.append(
-            html_table(
-                "Meters left out",
-                ("meter", "because"),
-                list(result.excluded.items()),
-                name="excluded-table",
-                left=(0, 1),
-            )
-        )
-    if result.decisions:
-        decided = [(result.labels[i], d.words) for i, d in sorted(result.decisions.items())]
-        note = f"{len(decided) - MOST_DECIDED} more." if len(decided) > MOST_DECIDED else None
-        parts.append(
-            html_table(
-                "Decided about suspects",
-                ("snapshot", "what"),
-                decided[:MOST_DECIDED],
-                name="decided-table",
-                left=(0, 1),
-                note=note,
-            )
-        )
-    if result.statuses:
-        counted = Counter((tag, why) for (_, tag), why in result.statuses.items())
-        rows = [(tag, why, str(n)) for (tag, why), n in sorted(counted.items())]
-        parts.append(
-            html_table("Readings not used", ("meter", "why", "snapshots"), rows, name="unused-table", left=(0, 1))
-        )
-    return join(*parts) if parts else None
-
-
 # ------------------------------------------------------------------ appendix
 
 
@@ -272,8 +156,12 @@ def appendix(result: Result) -> Markup:
     if usable:
         index = typical(result)
         parts += [_matrix(result, index), _checks(result, index), _by_hand(result, index)]
-    parts += [_streams(result), _glossary(), _provenance(result)]
-    return join(*parts)
+    return join(*parts, appendix_of_any(result))
+
+
+def appendix_of_any(found: Result | Trajectory) -> Markup:
+    """Streams, words, versions and hashes: what the appendix of every kind of answer holds."""
+    return join(_streams(found.spec), _glossary(), _provenance(found.provenance))
 
 
 def _matrix(result: Result, index: int) -> Markup:
@@ -338,10 +226,10 @@ def _by_hand(result: Result, index: int) -> Markup | None:
     )
 
 
-def _streams(result: Result) -> Markup | None:
-    if result.spec is None or not result.spec.streams:
+def _streams(spec: CaseSpec | None) -> Markup | None:
+    if spec is None or not spec.streams:
         return None
-    rows = [(n, s.source, s.target) for n, s in result.spec.streams.items()]
+    rows = [(n, s.source, s.target) for n, s in spec.streams.items()]
     return join(
         element("h3", "Streams"),
         html_table(
@@ -371,12 +259,12 @@ def _glossary() -> Markup:
     return join(element("h3", "Words"), element("dl", *pairs))
 
 
-def _provenance(result: Result) -> Markup | None:
-    if not result.provenance:
+def _provenance(provenance: Mapping[str, Any]) -> Markup | None:
+    if not provenance:
         return None
     rows = [
         (k.replace("_", " "), v if isinstance(v, str) else json.dumps(v, ensure_ascii=False, sort_keys=True))
-        for k, v in result.provenance.items()
+        for k, v in provenance.items()
         if v
     ]
     return join(

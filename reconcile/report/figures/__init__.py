@@ -7,7 +7,7 @@ from .balances import balances
 from .bias_track import bias_track, bias_tracks
 from .closure_against_flow import closure_against_flow, error_against_flow
 from .detectability import detectability
-from .evidence import evidence
+from .evidence import evidence, evidence_over
 from .look_alikes import correlation_of, look_alikes
 from .network import network
 from .placements import placements
@@ -25,6 +25,7 @@ __all__ = [
     "detectability",
     "error_against_flow",
     "evidence",
+    "evidence_over",
     "look_alikes",
     "network",
     "placements",

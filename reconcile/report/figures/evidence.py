@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
+import numpy.typing as npt
 
 from ..campaign import not_used, why_not
 from ..canvas import Canvas, Scale
@@ -15,7 +17,9 @@ from .sheet import Figure
 if TYPE_CHECKING:
     from ...results import Result
 
-__all__ = ["evidence"]
+__all__ = ["evidence", "evidence_over"]
+
+Array = npt.NDArray[np.float64]
 
 HEIGHT = 230.0
 
@@ -32,11 +36,46 @@ def evidence(result: Result) -> Figure | None:
     Figure or None
         None for one snapshot, or where nothing can be checked.
     """
+    letters = {i: "L" if why_not(result, i).startswith("left out") else "N" for i in result.table.failed}
+    failed = f", without adjusted values: {', '.join(not_used(result))}" if result.table.failed else ""
+    return evidence_over(result.labels, result.objective, result.limit, result.words, letters, failed)
+
+
+def evidence_over(
+    labels: Sequence[str],
+    objective: Array,
+    limit: Array,
+    words: Sequence[str],
+    letters: Mapping[int, str] | None = None,
+    without: str = "",
+    noun: str = "snapshots",
+) -> Figure | None:
+    """Draw objectives as multiples of their limits.
+
+    Parameters
+    ----------
+    labels : sequence of str, length N
+    objective, limit : ndarray, shape (N,)
+        nan where there is nothing to check.
+    words : sequence of str, length N
+        Word of evidence of each.
+    letters : mapping of int to str, optional
+        Letters at the base line, where there is no objective.
+    without : str
+        What is said of those.
+    noun : str
+        What the labels are labels of.
+
+    Returns
+    -------
+    Figure or None
+        None for one label, or where nothing can be checked.
+    """
     with np.errstate(invalid="ignore", divide="ignore"):
-        ratio = np.asarray(result.objective / result.limit, dtype=float)
-    if result.size < 2 or not np.isfinite(ratio).any():
+        ratio = np.asarray(objective / limit, dtype=float)
+    if len(labels) < 2 or not np.isfinite(ratio).any():
         return None
-    course = place_of(result.labels)
+    course = place_of(labels)
     c = Canvas(course.width, HEIGHT)
     top, bottom = 34.0, HEIGHT - 34.0
     # Far outliers would flatten everything else: a root scale keeps both readable, zero stays zero.
@@ -59,32 +98,35 @@ def evidence(result: Result) -> Figure | None:
         if ratio[i] > 1.0:
             c.line((at[0], y(1.0)), at, "mark", 1.5)
             if course.step >= 9:
-                mark = "✗" if result.words[i] == "does not agree" else "!"
+                mark = "✗" if words[i] == "does not agree" else "!"
                 c.text((at[0], at[1] - 4), mark, "mark", 13, "middle", bold=True)
             else:
                 c.area([(at[0], at[1] - 5), (at[0] + 3, at[1]), (at[0], at[1] + 5), (at[0] - 3, at[1])], "mark")
         else:
             c.dot(at, radius, "main")
-    for i in result.table.failed:
-        letter = "L" if why_not(result, i).startswith("left out") else "N"
+    for i, letter in (letters or {}).items():
         c.text((course.x[i], bottom - 4), letter, "mark", 12, "middle", bold=True)
     label_course(c, course, bottom)
     beyond = int((ratio > 1.0).sum())
-    failed = f", without adjusted values: {', '.join(not_used(result))}" if result.table.failed else ""
     description = (
-        f"χ² of {result.size} snapshots as a multiple of its limit; beyond it: {beyond}{failed}, the largest at "
-        f"{highest:.3g} times the limit in {result.labels[int(np.nanargmax(ratio))]}."
+        f"χ² of {len(labels)} {noun} as a multiple of its limit; beyond it: {beyond}{without}, the largest at "
+        f"{highest:.3g} times the limit in {labels[int(np.nanargmax(ratio))]}."
     )
     rows = [
         (
-            result.labels[i],
-            plain(result.objective[i], 0.1),
-            plain(result.limit[i], 0.1),
+            labels[i],
+            plain(objective[i], 0.1),
+            plain(limit[i], 0.1),
             plain(ratio[i], 0.1),
-            result.words[i],
+            words[i],
         )
         for i in spots
     ]
     return Figure(
-        "evidence", "Do the readings agree?", description, c, ("snapshot", "χ²", "limit", "ratio", "word"), rows
+        "evidence",
+        "Do the readings agree?",
+        description,
+        c,
+        (noun.removesuffix("s"), "χ²", "limit", "ratio", "word"),
+        rows,
     )

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -25,7 +25,7 @@ Array = npt.NDArray[np.float64]
 
 PANEL, PANELS, MOST_FIGURES, FEW = 118.0, 6, 2, 6
 
-FLAGS = {"X": "does not agree", "W": "watch", "N": "not solved", "L": "left out"}
+FLAGS = {"X": "does not agree", "W": "watch", "N": "not solved", "L": "left out", "S": "stands out"}
 """Letter of a flagged span, and what it stands for."""
 
 
@@ -68,7 +68,10 @@ def time_series(
     panels: Sequence[tuple[str, str, Array, Array, Array]],
     flags: Sequence[str],
     *,
+    own: Mapping[str, Sequence[str]] | None = None,
     name: str = "series",
+    title: str = "",
+    noun: str = "snapshots",
 ) -> Figure:
     """Draw panels of raw and adjusted values with a band of two sigmas.
 
@@ -79,30 +82,35 @@ def time_series(
         Arrays of shape (N,), nan where there is nothing.
     flags : sequence of str, length N
         A letter of `FLAGS` for each snapshot, or an empty text.
-    name : str
-        Name of the figure.
+    own : mapping of tag to such letters, optional
+        Instead of `flags` in the panel of that tag.
+    name, title : str
+        Of the figure.
+    noun : str
+        What the labels are labels of.
 
     Returns
     -------
     Figure
     """
+    own = own or {}
     course = place_of(labels)
     height = 34 + PANEL * len(panels) + 30
     c = Canvas(course.width, height)
-    _key(c, course, flags)
+    _key(c, course, [f for per in (flags, *own.values()) for f in per])
     rows = []
     for k, (tag, unit, raw, value, sigma) in enumerate(panels):
         top, bottom = 34 + PANEL * k + 26, 34 + PANEL * (k + 1) - 6
-        rows += _panel(c, course, (top, bottom), tag, unit, raw, value, sigma, flags)
+        rows += _panel(c, course, (top, bottom), tag, unit, raw, value, sigma, own.get(tag, flags))
     label_course(c, course, 34 + PANEL * len(panels) - 6)
-    flagged = sum(1 for f in flags if f)
+    flagged = sum(any(per[i] for per in (flags, *own.values())) for i in range(len(labels)))
     description = (
         f"Raw readings (dots), adjusted values (line) and their band of ±2 sigmas for {', '.join(p[0] for p in panels)} over "
-        f"{len(labels)} snapshots, {flagged} of them flagged."
+        f"{len(labels)} {noun}, {flagged} of them flagged."
         + (" Of each short stretch the extremes are drawn." if len(labels) > 240 else "")
     )
-    header = ("meter", "snapshot", "unit", "raw", "adjusted", "± sigma", "flag")
-    title = "Readings over the snapshots" if len(panels) > 1 else f"{panels[0][0]} over the snapshots"
+    header = ("meter", noun.removesuffix("s"), "unit", "raw", "adjusted", "± sigma", "flag")
+    title = title or f"{'Readings' if len(panels) > 1 else panels[0][0]} over the {noun}"
     return Figure(name, title, description, c, header, rows)
 
 
