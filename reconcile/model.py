@@ -317,7 +317,20 @@ class Model:
         """Return the rows with the shared errors at these values of the readings."""
         if not self.shared:
             return self.equations
-        part = sp.coo_array(self.shared_part(base))
+        shared = self.shared_part(base)
+        key = shared.tobytes()
+        if key not in self._latest_shared:
+            # One is enough: the steps of a solution ask for the same rows several times, then for the next ones.
+            self._latest_shared.clear()
+            self._latest_shared[key] = self._rows_with(sp.coo_array(shared))
+        return self._latest_shared[key]
+
+    @cached_property
+    def _latest_shared(self) -> dict[bytes, Equations]:
+        return {}
+
+    def _rows_with(self, part: sp.coo_array) -> Equations:
+        """Rows in which each reading holds so much of each shared error."""
         e = self.equations
         rows = self.system.equations.shape[0] + self.row_of_reading[part.row]
         first_cause = self.size - len(self.shared)

@@ -130,7 +130,7 @@ def decide(result: Result, policy: Literal["exclude", "compensate"]) -> Result:
 
 
 def grant(result: Result, index: int, alternative: Alternative) -> Granted | None:
-    """Solve one snapshot again with the faults of an explanation free.
+    """Solve one snapshot again with the faults of an explanation free; kept with the result.
 
     Parameters
     ----------
@@ -144,6 +144,13 @@ def grant(result: Result, index: int, alternative: Alternative) -> Granted | Non
     Granted or None
         None where no consistent answer is found.
     """
+    key = (index, tuple((f.candidate.name, f.size) for f in alternative.faults))
+    if key not in result._granted:
+        result._granted[key] = _solved_with(result, index, alternative)
+    return result._granted[key]
+
+
+def _solved_with(result: Result, index: int, alternative: Alternative) -> Granted | None:
     model = result.model_of(index)
     names = {f.candidate.name for f in alternative.faults}
     free = {f.candidate.column for f in alternative.faults if f.candidate.column >= 0}
@@ -183,7 +190,7 @@ def grant(result: Result, index: int, alternative: Alternative) -> Granted | Non
 
 
 def granted_all(result: Result, index: int, limit: int = 4) -> tuple[tuple[Alternative, Granted], ...]:
-    """Solve one snapshot again for every alternative of its standing explanations; kept with the result.
+    """Solve one snapshot again for every alternative of its standing explanations.
 
     Parameters
     ----------
@@ -201,14 +208,12 @@ def granted_all(result: Result, index: int, limit: int = 4) -> tuple[tuple[Alter
     accounts = result.snapshot(index).accounts
     if accounts is None or not result.suspicious[index]:
         return ()
-    if index not in result._granted:
-        solved = (
-            (alternative, grant(result, index, alternative))
-            for account in accounts.standing[:limit]
-            for alternative in account.alternatives
-        )
-        result._granted[index] = tuple((a, g) for a, g in solved if g is not None)
-    return result._granted[index]
+    solved = (
+        (alternative, grant(result, index, alternative))
+        for account in accounts.standing[:limit]
+        for alternative in account.alternatives
+    )
+    return tuple((a, g) for a, g in solved if g is not None)
 
 
 def figures_if(result: Result, index: int) -> list[tuple[Alternative, tuple[FigureValue, ...]]]:

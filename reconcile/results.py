@@ -18,7 +18,6 @@ from .model import Model
 if TYPE_CHECKING:
     import pandas as pd
 
-    from .accounts import Alternative
     from .campaign.snapshots import Prepared
     from .case.spec import CaseSpec
     from .diagnose.explain import Explainer
@@ -105,7 +104,7 @@ class Result:
     _explainers: dict[tuple[int, int | None], Explainer | None] = field(default_factory=dict, repr=False, compare=False)
     _models: dict[int, Model] = field(default_factory=dict, repr=False, compare=False)
     _looked_at: dict[int, Snapshot] = field(default_factory=dict, repr=False, compare=False)
-    _granted: dict[int, tuple[tuple[Alternative, Granted], ...]] = field(
+    _granted: dict[tuple[int, tuple[tuple[str, float], ...]], Granted | None] = field(
         default_factory=dict, repr=False, compare=False
     )
 
