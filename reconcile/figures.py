@@ -11,6 +11,7 @@ import math
 import re
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -133,6 +134,12 @@ def parse_figure(text: str, where: Location | None = None) -> Figure:
     return Figure(text, tuple(aliases.values()), tree, aliases)
 
 
+@lru_cache(maxsize=256)
+def _parsed(text: str) -> Figure:
+    """The same figure serves every snapshot."""
+    return parse_figure(text)
+
+
 def _allowed(node: ast.expr, aliases: Mapping[str, str]) -> None:
     match node:
         case ast.Constant(value=int() | float()) if not isinstance(node.value, bool):
@@ -211,7 +218,7 @@ def evaluate(name: str, text: str, result: Result, index: int) -> FigureValue:
     InputError
         If the figure uses a name that is no variable.
     """
-    figure = parse_figure(text)
+    figure = _parsed(text)
     position = {v: i for i, v in enumerate(result.variables)}
     for used in figure.names:
         if used not in position:

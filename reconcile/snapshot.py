@@ -332,21 +332,23 @@ def look(result: Result, index: int) -> Snapshot:
     accounts = _accounts(result, index, parity, test)
     faults = _faults(candidates, tests, shifts, settings)
     readings = _readings(result, index, group, x, meter_tests, shifts, accounts)
-    balances, closure, covariance, rows = _balances(result, index, group, x)
+    balances = _balances(result, index, group, x)
+    rows = balances.tested()
+    closure, covariance = balances.closure[rows], balances.covariance[np.ix_(rows, rows)]
     return Snapshot(
         label=result.labels[index],
         readings=readings,
         variables=_variables(model, group, x),
-        balances=balances,
+        balances=balances.lines,
         faults=faults,
         test=test,
         tests=tests,
         meter_tests=meter_tests,
         accounts=accounts,
         candidates=candidates,
-        nodal=nodal_test(closure[rows], covariance[np.ix_(rows, rows)], settings.level),
+        nodal=nodal_test(closure, covariance, settings.level),
         nodal_rows=tuple(int(i) for i in rows),
-        components=principal_component_test(closure[rows], covariance[np.ix_(rows, rows)], settings.level),
+        components=principal_component_test(closure, covariance, settings.level),
         checks_in_words=checks_in_words(model, group),
         dependent=dependent_in_words(model, group),
         steps=group.steps,
@@ -530,22 +532,38 @@ def sum_in_words(terms: dict[str, float]) -> str:
 def balances_of(result: Result, index: int) -> tuple[BalanceLine, ...]:
     """Balances of one snapshot before and after, without the tests of everything else that `look` makes."""
     group = result.group(index)
-    return _balances(result, index, group, group.x[int(np.flatnonzero(group.rows == index)[0])])[0]
+    return _balances(result, index, group, group.x[int(np.flatnonzero(group.rows == index)[0])]).lines
 
 
-def _balances(
-    result: Result, index: int, group: Group, x: Array
-) -> tuple[tuple[BalanceLine, ...], Array, Array, npt.NDArray[np.int64]]:
-    """Closure of every balance of the domains, before with the raw readings where they suffice, and after.
+@dataclass(frozen=True)
+class _Balances:
+    """Balances of one snapshot.
 
-    Returns
-    -------
+    Attributes
+    ----------
     lines : tuple of BalanceLine
     closure, covariance : ndarray, shapes (m,) and (m, m)
         Of the raw closures.
-    rows : ndarray of int
-        Balances that can be tested alone: formed from readings only, and not implied by others.
+    alone : ndarray of int
+        Balances that are formed from readings only.
+    part : ndarray, shape (m, number of columns read)
+        Their coefficients.
     """
+
+    lines: tuple[BalanceLine, ...]
+    closure: Array
+    covariance: Array
+    alone: npt.NDArray[np.int64]
+    part: Array
+
+    def tested(self) -> npt.NDArray[np.int64]:
+        """Balances that can be tested alone: formed from readings only, and not implied by others."""
+        implied = dependent_rows(self.part[self.alone])
+        return np.delete(self.alone, [int(np.flatnonzero(row)[-1]) for row in implied])
+
+
+def _balances(result: Result, index: int, group: Group, x: Array) -> _Balances:
+    """Closure of every balance of the domains, before with the raw readings where they suffice, and after."""
     model, e = result.model_of(index), group.equations
     base = model.to_base(result.readings[index : index + 1])[0]
     base[group.absent] = np.nan
@@ -562,16 +580,17 @@ def _balances(
     m = model.system.equations.shape[0]
     formed = np.isfinite(raw)
     x_raw = np.where(formed, raw, np.nan_to_num(x))
-    jacobian = e.jacobian(x_raw)[:m].toarray()
+    jacobian = e.jacobian(x_raw).toarray()[:m]
     complete = ~np.any((jacobian != 0) & ~formed, axis=1)
     before = e.closure(x_raw)[:m]
     covariance = model.covariance_of_readings(np.where(np.isfinite(base), base, x[model.columns]))
     read = np.flatnonzero(source >= 0)
-    part = jacobian[:, read] / coefficient[read]
-    of_closure = part @ covariance[np.ix_(source[read], source[read])] @ part.T
+    scaled = jacobian[:, read] / coefficient[read]
+    of_closure = scaled @ covariance[np.ix_(source[read], source[read])] @ scaled.T
     spread = np.sqrt(np.diag(of_closure))
     inflow, outflow = (t[:m] for t in e.split_terms(x_raw))
-    after, scale = e.closure(np.nan_to_num(x))[:m], e.largest_term(np.nan_to_num(x))[:m]
+    x = np.nan_to_num(x)
+    after, scale = e.closure(x)[:m], e.largest_term(x)[:m]
     out = []
     for block in model.system.row_blocks:
         for j, name in enumerate(block.names):
@@ -596,9 +615,7 @@ def _balances(
                 )
             )
     alone = np.flatnonzero(complete & (spread > 0))
-    implied = dependent_rows(jacobian[np.ix_(alone, read)])
-    rows = np.delete(alone, [int(np.flatnonzero(row)[-1]) for row in implied])
-    return tuple(out), before, of_closure, rows
+    return _Balances(tuple(out), before, of_closure, alone, jacobian[:, read])
 
 
 def _faults(

@@ -133,7 +133,9 @@ class Equations:
         return out
 
     def jacobian(self, x: Array) -> sp.csr_array:
-        """Exact derivatives of the closures at x, shape (m, n)."""
+        """Exact derivatives of the closures at x, shape (m, n); not to be written to."""
+        if self.is_linear:
+            return self.linear
         out = self.linear
         if self.products.nnz:
             slopes = [x[self.pairs[:, 1]], x[self.pairs[:, 0]]]
