@@ -32,6 +32,7 @@ __all__ = ["Corrected", "load_corrected", "summary_of", "write"]
 Array = npt.NDArray[np.float64]
 
 MISSING = ""
+TABLES = ("adjusted", "sigmas", "variables", "evidence", "suspects", "balances", "figures")
 EVIDENCE_COLUMNS = (
     "snapshot", "objective", "checks", "limit", "p_value", "word", "explanation", "probability", "decision", "reason",
 )  # fmt: skip
@@ -568,15 +569,17 @@ def load_corrected(folder: str | Path) -> Corrected:
             )
     # Before its version 3, pandas read the last digit of a number exactly only when asked to.
     exact: dict[str, Any] = {"float_precision": "round_trip"} if int(pd.__version__.split(".")[0]) < 3 else {}
-    read = {
-        stem: pd.read_csv(base / f"{stem}.csv", dtype={"snapshot": str}, **exact)
-        for stem in ("adjusted", "sigmas", "variables", "evidence", "suspects", "balances", "figures")
+    texts = {
+        r["path"]: [f["name"] for f in r["schema"]["fields"] if f["type"] == "string"]
+        for r in package["resources"]
+        if "schema" in r
     }
-    as_text = {"snapshot": str, "start": str, "end": str, "input": str, "case": str}
-    there = {r["path"] for r in package["resources"]}
-    for stem in ("readings", "log", "intervals"):
-        if f"{stem}.csv" in there:
-            read[stem] = pd.read_csv(base / f"{stem}.csv", dtype=as_text, **exact)
+    read = {}
+    for stem in (*TABLES, *(t for t in ("readings", "log", "intervals") if f"{t}.csv" in texts)):
+        columns = texts[f"{stem}.csv"]
+        frame = pd.read_csv(base / f"{stem}.csv", dtype=dict.fromkeys(columns, str), **exact)
+        # An empty text is a text: nothing was decided, no reason was needed.
+        read[stem] = frame.assign(**{c: frame[c].fillna("") for c in columns})
     with np.load(base / "covariance.npz") as arrays:
         names = tuple(str(n) for n in arrays["variables"])
         group_of = arrays["group_of_snapshot"]
