@@ -182,7 +182,8 @@ def plan_of(model: Model, group: Group) -> Plan:
     of_faults = np.zeros((n, columns.size))
     moved = -a.sigma[:, None] * (a.q1 @ group.signatures_of(columns))
     of_faults[group.columns[group.present]] = moved
-    of_faults[group.free] = a.elimination.recover @ (group.jacobian[:, columns] - a.measured @ moved)
+    for j, column in enumerate(columns):
+        of_faults[group.free, j] = a.unmeasured(moved[:, j], group.jacobian[:, column])[0]
     response = np.hstack([of_readings, of_faults]) * scale
     length = np.linalg.norm(shifts, axis=0)
     whole = np.where(length > 0, length, 1.0)

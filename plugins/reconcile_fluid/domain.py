@@ -6,6 +6,7 @@ from typing import ClassVar
 
 import numpy as np
 import numpy.typing as npt
+import scipy.sparse as sp
 from pydantic import BaseModel
 
 from reconcile import Domain, Expression, Network, System, units
@@ -74,11 +75,12 @@ class Fluid(Domain):
 
 def _inventories(network: Network, system: System, options: FluidOptions, closure: Expression) -> Expression:
     for key, quantity, lower in (("stores", "accumulation", -np.inf), ("evaporates", "evaporation", 0.0)):
-        nodes = [n for n, chosen in zip(network.nodes, network.of_nodes(key, False), strict=True) if chosen]
-        if nodes:
+        where = np.flatnonzero([bool(chosen) for chosen in network.of_nodes(key, False)])
+        if where.size:
+            nodes = [network.nodes[k] for k in where]
             term = system.variables(quantity, nodes, unit=options.unit, lower=lower)
-            place = np.zeros((len(network.nodes), len(nodes)))
-            place[[network.nodes.index(n) for n in nodes], range(len(nodes))] = 1.0
+            shape = (len(network.nodes), where.size)
+            place = sp.csr_array((np.ones(where.size), (where, np.arange(where.size))), shape=shape)
             closure = closure - place @ term
     return closure
 
