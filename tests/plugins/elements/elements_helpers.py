@@ -6,8 +6,6 @@ from reconcile_elements import Elements
 from reconcile_elements.options import ElementsNode, ElementsOptions, ElementsStream
 
 from reconcile import Network, System
-from reconcile.adjust.solve import Problem, solve
-from reconcile.model import Reading, build_model
 
 FERMENTATION = {
     "glucose": "C6H12O6",
@@ -67,32 +65,6 @@ def checks(system, measured, x=None):
 def projector(rows):
     basis = scipy.linalg.orth(np.asarray(rows, dtype=float).T, rcond=1e-10)
     return basis @ basis.T
-
-
-def adjust(system, readings, fixed=None):
-    """Adjust {variable: (value, sigma)}; return values by name, and the solution."""
-    tags = [Reading(n, ((n, 1.0),), system.unit(system.column(n)), 0.0, s) for n, (_, s) in readings.items()]
-    model = build_model(system, tags, fixed=fixed)
-    meters = np.array([[v for v, _ in readings.values()]])
-    start = system.starts.copy()
-    start[list(model.fixed)] = list(model.fixed.values())
-    solution = solve(
-        Problem(
-            equations=model.with_shared,
-            sigma=model.sigma,
-            columns=model.columns,
-            readings=model.to_base(meters)[0],
-            fixed=np.array(sorted(model.fixed), dtype=np.int64),
-            start=start,
-            value_dependent=False,
-            settle=False,
-            lower=model.lower,
-            upper=model.upper,
-        ),
-        names=lambda c: model.names[c],
-        row_names=lambda r: model.row_names[r],
-    )
-    return dict(zip(model.names, solution.x, strict=True)), solution
 
 
 def objective(solution):

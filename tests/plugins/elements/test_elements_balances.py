@@ -2,7 +2,8 @@
 
 import numpy as np
 import pytest
-from elements_helpers import CHEMOSTAT, FERMENTATION, STORY, adjust, build, checks, chemostat, objective, projector
+from bare_systems import adjust
+from elements_helpers import CHEMOSTAT, FERMENTATION, STORY, build, checks, chemostat, objective, projector
 from reconcile_elements.masses import FARADAY
 
 READINGS = dict(zip(STORY, [(10.1, 0.2), (28.2, 0.9), (26.4, 0.9), (30.6, 1.2)], strict=True))

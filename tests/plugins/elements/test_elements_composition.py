@@ -2,7 +2,8 @@
 
 import numpy as np
 import pytest
-from elements_helpers import CHEMOSTAT, FERMENTATION, STORY, adjust, build, chemostat, objective
+from bare_systems import adjust
+from elements_helpers import CHEMOSTAT, FERMENTATION, STORY, build, chemostat, objective
 
 READINGS = dict(zip(STORY, [(10.1, 0.2), (28.2, 0.9), (26.4, 0.9), (30.6, 1.2)], strict=True))
 NO_WATER = {k: v for k, v in CHEMOSTAT.items() if k != "base"} | {"harvest": ("reactor", "outside", "biomass")}

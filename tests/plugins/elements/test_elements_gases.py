@@ -2,7 +2,8 @@
 
 import numpy as np
 import pytest
-from elements_helpers import adjust, build, objective
+from bare_systems import adjust
+from elements_helpers import build, objective
 from reconcile_elements.gas import conditions as at
 from reconcile_elements.gas import inert_balance, molar_volume, wet_fraction
 

@@ -3,7 +3,8 @@
 import pickle
 
 import pytest
-from elements_helpers import CHEMOSTAT, FERMENTATION, STORY, adjust, build, chemostat
+from bare_systems import adjust
+from elements_helpers import CHEMOSTAT, FERMENTATION, STORY, build, chemostat
 from pydantic import ValidationError
 from reconcile_elements import Elements
 from reconcile_elements.options import ElementsNode, ElementsOptions, ElementsStream, unit_parts

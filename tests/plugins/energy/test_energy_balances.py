@@ -2,7 +2,8 @@
 
 import numpy as np
 import pytest
-from energy_helpers import adjust, build, network, point, relative_closure
+from bare_systems import adjust, point, relative_closure
+from energy_helpers import build, network
 from hypothesis import given
 from hypothesis import strategies as st
 from reconcile_energy import Energy

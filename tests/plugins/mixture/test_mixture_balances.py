@@ -2,9 +2,10 @@
 
 import numpy as np
 import pytest
+from bare_systems import adjust, point, relative_closure
 from hypothesis import given
 from hypothesis import strategies as st
-from mixture_helpers import adjust, build, network, point, relative_closure
+from mixture_helpers import build, network
 from reconcile_fluid import Fluid
 from reconcile_fluid.domain import FluidOptions
 

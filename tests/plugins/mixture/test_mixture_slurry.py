@@ -2,7 +2,8 @@
 
 import numpy as np
 import pytest
-from mixture_helpers import adjust, build, network, point, relative_closure
+from bare_systems import adjust, point, relative_closure
+from mixture_helpers import build, network
 from reconcile_mixture import pulp_density, solids_fraction
 from test_mixture_balances import check_jacobian
 
