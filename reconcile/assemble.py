@@ -13,7 +13,7 @@ from .bounds import refuse_conflicts
 from .case.load import read_what_stands
 from .case.references import check_references
 from .case.spec import CaseSpec, DomainModels, KnownSpec, MeterSpec, SharedErrorSpec
-from .case.trajectory import TrajectorySpec, check_rates
+from .case.trajectory import TrajectorySpec, check_log, check_rates
 from .domains import Plugins
 from .doubts import doubts_of_case
 from .errors import InputError, Notice, Problems
@@ -127,6 +127,7 @@ def option_models(plugins: Plugins) -> dict[str, DomainModels]:
 def _inventories(spec: CaseSpec, trajectory: TrajectorySpec, system: System, problems: Problems) -> None:
     """Declare the inventories that tie windows; one window alone says nothing of them but their reading."""
     check_rates(trajectory, system.units(), spec.where, problems)
+    check_log(trajectory, spec.campaign, spec.meters, spec.where, problems)
     problems.raise_if_any()
     with system.written_by("trajectory"):
         for inventory in trajectory.inventories.values():

@@ -201,7 +201,16 @@ class Case:
         samples = read_samples(spec, table, self._readers())
         plan = plan_of(spec)
         units = {t: m.unit if (stated := plan.of(t).column_unit) is None else stated for t, m in spec.meters.items()}
-        return prepare(plan, table, self.tags, lab=samples, units=units, file=str(spec.path))
+        held: tuple[str, ...] = ()
+        at_end = False
+        if spec.trajectory is not None:
+            from .campaign.tied import keep_moving
+
+            held, at_end = spec.trajectory.held(spec.meters), spec.trajectory.at_end
+            plan = keep_moving(plan, linear=self.model.equations.is_linear)
+        return prepare(
+            plan, table, self.tags, lab=samples, units=units, file=str(spec.path), held=held, held_at_end=at_end
+        )
 
     def _readers(self) -> dict[str, Any]:
         """Readers of measured data that plugins offer, by suffix or scheme."""

@@ -11,6 +11,8 @@ import numpy.typing as npt
 
 from .adjust.sequence import Chain, Push, Sequence, solve_sequence
 from .adjust.table import adjust_table
+from .campaign.source import plan_of
+from .campaign.tied import Row, in_a_row
 from .case.trajectory import TrajectorySpec, change_factor
 from .errors import InputError, Location, Notice, Problem
 from .model import Candidate, Model
@@ -64,17 +66,28 @@ def run_trajectory(case: Case, readings: Any = None, *, exclude: Mapping[str, st
                 Location(file=str(spec.path)),
             )
         )
-    table = case.read(readings)
+    prepared = case.prepare(readings)
+    table, plan = prepared.table, plan_of(spec)
     left_out = case._excluded(exclude or {})
-    values = np.where(table.usable, table.values, np.nan)[:, [table.columns.index(t) for t in case.tags]]
+    counters = [t for t in case.tags if plan.of(t).counter is not None]
+    row_of_windows = in_a_row(prepared, case.tags, tied.held(spec.meters), counters, at_end=tied.at_end)
+    values = row_of_windows.values
     picked = values.copy()
     picked[:, [case.tags.index(t) for t in left_out]] = np.nan
-    lengths, outer_known, notices = _lengths(table, tied, spec)
+    if row_of_windows.lengths is None:
+        lengths, outer_known, notices = _lengths(table, tied, spec)
+    else:
+        lengths, outer_known, notices = _lengths_of_windows(row_of_windows, tied, spec)
     chain, base = _chain(model, tied, spec, picked, lengths)
+    chain = replace(chain, own=_of_all_readings(model, row_of_windows.own, np.nan),
+                    scatter=_of_all_readings(model, row_of_windows.scatter, 0.0))  # fmt: skip
     column, row = case.name_of_column, case.name_of_row
     start = None
     if not model.equations.is_linear:
-        alone = adjust_table(problem_of(model, spec.settings), model.to_base(picked), names=column, row_names=row)
+        alone = adjust_table(
+            problem_of(model, spec.settings), model.to_base(picked), names=column, row_names=row, sigmas=chain.own,
+            scatter=chain.scatter,
+        )  # fmt: skip
         start = np.full((len(base), model.size), np.nan)
         for group in alone.groups:
             start[group.rows] = group.x
@@ -88,15 +101,21 @@ def run_trajectory(case: Case, readings: Any = None, *, exclude: Mapping[str, st
         candidates=lasting,
         readings=values,
         base=base,
-        labels=tuple(table.label(i) for i in range(len(table))),
+        labels=row_of_windows.labels,
         lengths=lengths,
         outer_known=outer_known,
         settings=spec.settings,
         spec=spec,
         excluded=left_out,
-        statuses={(i, table.columns[j]): table.reason(i, j) for i, j in zip(*np.nonzero(~table.usable), strict=True)},
+        statuses=row_of_windows.statuses,
         cautions=case.parts.cautions,
-        notices=(*case.parts.notices, *table.notices, *notices),
+        notices=(
+            *case.parts.notices,
+            *table.notices,
+            *row_of_windows.notices,
+            *notices,
+            *_border_notices(chain, counters, solution.sigma, model, case.tags),
+        ),
         provenance=case._provenance(table, spec.settings, "flag"),
     )
     singles, more = _singles(found)
@@ -165,6 +184,62 @@ def _lengths(table: ReadingsTable, tied: TrajectorySpec, spec: CaseSpec) -> tupl
             )
         )
     return lengths, False, tuple(notices)
+
+
+def _lengths_of_windows(row: Row, tied: TrajectorySpec, spec: CaseSpec) -> tuple[Array, bool, tuple[Notice, ...]]:
+    """Lengths that the windows of a log have, checked against a stated step."""
+    assert row.lengths is not None
+    notices: tuple[Notice, ...] = ()
+    if tied.at_end:
+        words = (
+            f"what is held is read at the end of each window, so what was held when window {row.labels[0]} began is not used; "
+            "write read_at: start to use it"
+        )
+        notices = (Notice("first-level-not-used", words),)
+    if tied.step is None:
+        # The log does not tell how long the last window goes on; it does tell when the first one began.
+        return row.lengths, tied.at_end, notices
+    length = tied.step[0] * difference_factor(tied.step[1], "s")
+    differs = np.abs(row.lengths - length) > 1e-3 * length
+    off = np.flatnonzero(differs[:-1])  # the log may end within the last window
+    if off.size:
+        i = int(off[0])
+        raise InputError(
+            Problem(
+                "step-differs",
+                f"the case says windows of {length:g} s, but window {row.labels[i]} lasts {row.lengths[i]:g} s"
+                + (f"; {off.size} such windows in all" if off.size > 1 else ""),
+                "leave step out, so that it is taken from the windows, or correct windows:",
+                spec.where(("trajectory", "step")),
+            )
+        )
+    return row.lengths, tied.at_end or not differs[-1], notices
+
+
+def _of_all_readings(model: Model, part: Array | None, empty: float) -> Array | None:
+    """Spread sigmas of the meters' cells, in their units, over all readings of the model in base units."""
+    if part is None or not np.any(np.nan_to_num(part)):
+        return None
+    out = np.full((len(part), len(model.readings)), empty)
+    out[:, model.meters] = part * np.abs(model.factor[model.meters])
+    return out
+
+
+def _border_notices(
+    chain: Chain, counters: list[str], sigma: Array, model: Model, tags: tuple[str, ...]
+) -> tuple[Notice, ...]:
+    """Tell where readings of a counter at the borders of windows make up much of its sigma."""
+    if chain.scatter is None:
+        return ()
+    columns = {t: int(model.meters[tags.index(t)]) for t in counters}
+    much = [t for t, c in columns.items() if np.median(chain.scatter[:, c] / sigma[:, c]) > 0.5]
+    if not much:
+        return ()
+    words = (
+        f"{', '.join(much)}: much of the sigma is that of the counter's readings at the borders of windows. Each is shared by "
+        "two windows, so their errors cancel in sums; taken as independent here, they make totals look less sure than they are"
+    )
+    return (Notice("counter-borders", words),)
 
 
 def _chain(model: Model, tied: TrajectorySpec, spec: CaseSpec, picked: Array, lengths: Array) -> tuple[Chain, Array]:

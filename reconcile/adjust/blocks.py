@@ -16,6 +16,9 @@ from .eliminate import RANK_TOLERANCE, balanced_scales, dependent_rows, independ
 
 __all__ = ["Balances", "Block", "End", "Step", "Triangle", "back", "close", "forward", "solve_balances"]
 
+ROUNDING = 1e-12
+"""Share of its terms below which a sum is nothing but their rounding."""
+
 Array = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
 Bools = npt.NDArray[np.bool_]
@@ -181,8 +184,8 @@ def forward(block: Block, before: Triangle) -> tuple[Step, Triangle, Array]:
     left : ndarray, shape (checks, p)
         The checks that the window completed: components of the parity vector and of the signatures.
     """
-    free = np.vstack([before.factor @ block.by_free, block.rows_free])
-    state = np.vstack([before.factor @ block.step, block.rows_state])
+    free = np.vstack([_product(before.factor, block.by_free), block.rows_free])
+    state = np.vstack([_product(before.factor, block.step), block.rows_state])
     target = np.vstack([before.target - before.factor @ block.shift, block.target])
     scale_free, scale_state = _scales(free), _scales(state)
     # Heavy rows first, so that weights of many orders of magnitude do not cost digits.
@@ -202,9 +205,13 @@ def forward(block: Block, before: Triangle) -> tuple[Step, Triangle, Array]:
             np.zeros((f, f - rank)),
         )
         lead, top = upper[:rank, :rank], pivots[:rank]
+        inverse = solve_triangular(lead, np.eye(rank))
         gain[top] = solve_triangular(lead, state[:rank]) * scale_state
+        # What cancels to rounding is no dependence: it would lead from what is not known to what is.
+        least = ROUNDING * np.abs(inverse).sum(axis=1)[:, None] * scale_state
+        gain[top] = np.where(np.abs(gain[top]) <= least, 0.0, gain[top])
         value[top] = solve_triangular(lead, target[:rank, 0])
-        factor[top] = solve_triangular(lead, np.eye(rank))
+        factor[top] = inverse
         null[top], null[pivots[rank:], np.arange(f - rank)] = -solve_triangular(lead, upper[:rank, rank:]), 1.0
         step = Step(value / scale_free, gain / scale_free[:, None], factor / scale_free[:, None],
                     _clean(null) / scale_free[:, None])  # fmt: skip
@@ -213,10 +220,12 @@ def forward(block: Block, before: Triangle) -> tuple[Step, Triangle, Array]:
         step = Step(np.zeros(f), np.zeros((f, state.shape[1])), np.zeros((f, 0)), np.eye(f))
     if not len(state):
         return step, Triangle(state, target), target[:0]
+    # A state of which only rounding is left is not known any more; scaled up later, it would pass for a reading.
+    state[:, np.linalg.norm(state, axis=0) <= RANK_TOLERANCE] = 0.0
     q, upper, pivots = qr(state, pivoting=True)
     rank = int(np.sum(np.abs(np.diag(upper)) > RANK_TOLERANCE))
     factor = np.zeros((rank, state.shape[1]))
-    factor[:, pivots] = upper[:rank]
+    factor[:, pivots] = np.where(np.abs(upper[:rank]) <= ROUNDING, 0.0, upper[:rank])
     target = q.T @ target
     return step, Triangle(factor * scale_state, target[:rank]), target[rank:]
 
@@ -250,18 +259,18 @@ def back(block: Block, step: Step, behind: End) -> tuple[End, Array, Bools, Arra
     """
     v = step.value - step.gain @ behind.value
     x = block.constant + block.of_state @ behind.value + block.of_free @ v
-    slope = block.of_state - block.of_free @ step.gain
+    slope = _difference(block.of_state, block.of_free, step.gain)
     cover = np.hstack([slope @ behind.cover, block.of_free @ step.factor])
-    lost = np.hstack([slope @ behind.null, block.of_free @ step.null])
+    lost = np.hstack([_product(slope, behind.null), _product(block.of_free, step.null)])
     terms = np.hstack(
         [(np.abs(block.of_state) + np.abs(block.of_free) @ np.abs(step.gain)) @ np.abs(behind.null),
          np.abs(block.of_free) @ np.abs(step.null)]
     )  # fmt: skip
     determined = ~np.any(np.abs(lost) > 1e-9 * terms.max(axis=0, initial=0.0), axis=1)
-    carry = block.step - block.by_free @ step.gain
+    carry = _difference(block.step, block.by_free, step.gain)
     value = block.step @ behind.value + block.by_free @ v + block.shift[:, 0]
     spread = np.hstack([carry @ behind.cover, block.by_free @ step.factor])
-    null = np.hstack([carry @ behind.null, block.by_free @ step.null])
+    null = np.hstack([_product(carry, behind.null), _product(block.by_free, step.null)])
     return End(value, _compressed(spread), _directions(null)), x, determined, cover, carry
 
 
@@ -281,6 +290,18 @@ def _directions(null: Array) -> Array:
     q, upper, _ = qr(null, mode="economic", pivoting=True)
     rank = int(np.sum(np.abs(np.diag(upper)) > 1e-9))
     return _clean(np.asarray(q[:, :rank]))
+
+
+def _product(a: Array, b: Array) -> Array:
+    """Product of two matrices, without what is left by rounding where its terms cancel."""
+    out = a @ b
+    return np.where(np.abs(out) <= ROUNDING * (np.abs(a) @ np.abs(b)), 0.0, out)
+
+
+def _difference(a: Array, b: Array, c: Array) -> Array:
+    """``a - b c``, likewise: a coefficient that is only rounding would lead from what is not known to what is."""
+    out = a - b @ c
+    return np.where(np.abs(out) <= ROUNDING * (np.abs(a) + np.abs(b) @ np.abs(c)), 0.0, out)
 
 
 def _clean(null: Array) -> Array:

@@ -49,6 +49,10 @@ class Chain:
         Columns that hold one value throughout the sequence.
     at_end : bool
         Whether inventories are those at the end of each window; else those at its start.
+    own : ndarray, shape (N, k), optional
+        Sigmas of single cells that replace the law of the window; nan where that holds.
+    scatter : ndarray, shape (N, k), optional
+        What adds to that law in quadrature.
     """
 
     window: Problem
@@ -57,6 +61,15 @@ class Chain:
     gains: Array
     constants: Ints
     at_end: bool
+    own: Array | None = None
+    scatter: Array | None = None
+
+    def sigma(self, values: Array) -> Array:
+        """Sigma of every reading, shape (N, k), at these values of the readings."""
+        law = np.array([self.window.sigma(v) for v in values])
+        if self.scatter is not None:
+            law = np.hypot(law, self.scatter)
+        return law if self.own is None else np.where(np.isfinite(self.own), self.own, law)
 
 
 @dataclass(frozen=True)
@@ -215,7 +228,7 @@ class _Work:
     def solve(self, x: Array | None, values: Array, steps: int) -> Sequence:
         """Linearise every window at x, and solve the whole."""
         problem = self.chain.window
-        sigma = np.array([problem.sigma(v) for v in values])
+        sigma = self.chain.sigma(values)
         present = np.isfinite(self.readings)
         bad = np.argwhere(present & (~(sigma > 0) | ~np.isfinite(sigma)))
         if bad.size:

@@ -39,6 +39,8 @@ def prepare(
     lab: ReadingsTable | None = None,
     units: Mapping[str, str] | None = None,
     file: str | None = None,
+    held: Sequence[str] = (),
+    held_at_end: bool = False,
 ) -> Prepared:
     """Turn a log into snapshots.
 
@@ -55,6 +57,8 @@ def prepare(
         Units of the columns, for messages; what the log states goes before.
     file : str, optional
         The case file, for messages without a place of their own.
+    held, held_at_end
+        Tags of what is held at the start (or end) of a window; see `WindowRules`.
 
     Returns
     -------
@@ -67,17 +71,25 @@ def prepare(
     """
     try:
         told = replace(table, units={**{t: u for t, u in (units or {}).items() if t in table.columns}, **table.units})
-        return _Preparation(spec, told, tags, lab).run()
+        return _Preparation(spec, told, tags, lab, held, at_end=held_at_end).run()
     except InputError as error:
         raise in_words_of_the_case(error, file) from None
 
 
 class _Preparation(Signals):
     def __init__(
-        self, spec: CampaignSpec, table: ReadingsTable, tags: Sequence[str], lab: ReadingsTable | None
+        self,
+        spec: CampaignSpec,
+        table: ReadingsTable,
+        tags: Sequence[str],
+        lab: ReadingsTable | None,
+        held: Sequence[str] = (),
+        *,
+        at_end: bool = False,
     ) -> None:
         super().__init__(spec, table, tags)
-        self.lab = lab
+        self.lab, self.held, self.at_end = lab, tuple(held), at_end
+        self.edges: Array | None = None
 
     def run(self) -> Prepared:
         running = self.running()
@@ -124,6 +136,8 @@ class _Preparation(Signals):
             counters={t: r.counter for t, r in readings.items() if r.counter is not None},
             levels={t: r.level for t, r in readings.items() if r.level is not None},
             level_sigma={t: r.level_sigma for t, r in readings.items() if r.level is not None},
+            held=[t for t in self.held if t in log.columns],
+            held_at_end=self.at_end,
             per={t: r.per for t, r in readings.items() if r.per is not None} or None,
             steady=plan.steady_readings,
             slope_level=plan.slope_level,
@@ -149,18 +163,24 @@ class _Preparation(Signals):
         alternatives = self._counters(found, log)
         alternatives += self._levels(found)
         self._zero(found)
-        if plan.keep_unsteady and not rules.levels and any(n.code == "window-not-steady" for n in found.table.notices):
+        if (
+            plan.keep_unsteady
+            and not rules.levels
+            and not rules.held
+            and any(n.code == "window-not-steady" for n in found.table.notices)
+        ):
             words = (
                 "windows that are not steady are kept, but no level is read: what is stored meanwhile shows as a closure, "
                 "and may look like a fault; read the level, or leave keep_unsteady out"
             )
             self.add(Notice("no-inventory-read", words))
         table = replace(found.table, scatter=self._scatter(plan, found))
+        self.edges = _edges(found, log)
         ends = [min(int(b), len(log) - 1) for b in found.bounds[:, 1]]
         spans = () if log.time is None else tuple(
             (str(log.time[int(a)]), str(log.time[e])) for a, e in zip(found.bounds[:, 0], ends, strict=True)
         )  # fmt: skip
-        long = [log.index(t) for t in (*rules.counters, *rules.levels)]
+        long = [log.index(t) for t in dict.fromkeys((*rules.counters, *rules.levels, *rules.held))]
         hashes = tuple(
             digest(
                 log, int(a), int(b), long, found.table.values[w], table.scatter[w] if table.scatter is not None else ()
@@ -248,7 +268,7 @@ class _Preparation(Signals):
     def _levels(self, found: Windows) -> list[Alternative]:
         out = []
         for tag, rule in self.spec.readings.items():
-            if rule.level is None or tag not in found.table.columns:
+            if rule.level is None or tag in self.held or tag not in found.table.columns:
                 continue
             for w, change in enumerate(found.table.column(tag)):
                 if np.isfinite(change) and change != 0.0:
@@ -307,7 +327,21 @@ class _Preparation(Signals):
             windows.segments if windows else {},
             closed,
             names,
+            self.edges,
         )
+
+
+def _edges(found: Windows, log: ReadingsTable) -> Array | None:
+    """Start of each window, end of what its rows stand for, and the row behind; see `Prepared`."""
+    if log.time is None or len(log) < 2:
+        return None
+    seconds = seconds_of(log.time)
+    step = float(np.median(np.diff(seconds)))
+    first, stop = found.bounds.T
+    behind = np.append(seconds, np.nan)[stop]
+    last = seconds[stop - 1]
+    # A row half a step late is late; one that is later than that was not written.
+    return np.column_stack([seconds[first], np.where(behind - last <= 1.5 * step, behind, last + step), behind])
 
 
 def _stamps(dates: Sequence[datetime], table: ReadingsTable) -> list[str]:

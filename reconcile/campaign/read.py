@@ -103,11 +103,14 @@ class _Reader(Texts):
                     self.refuse((*path, key), "not-for-counters", f"{owner} is a counter; {key} has no meaning", hint)
         elif model.level is not None:
             told.update(self._level(meter, model.level, (*path, "level")))
+            if model.noise is not None:
+                hint = "write each_reading in the level: block"
+                self.refuse((*path, "noise"), "not-for-levels", f"{owner} is a level; noise has no meaning", hint)
             unit = model.level.unit
         if model.counter is None:
             limits = model.limits or LimitsModel.model_validate({})
             told["limits"] = self._limits(meter, limits, unit, (*path, "limits"), plain=model.level is None)
-            for key in ("noise", "steady_within"):
+            for key in ("noise", "steady_within") if model.level is None else ("steady_within",):
                 told[key] = self.difference((*path, key), getattr(model, key), unit, f"{key} of {owner}")
         told["lag"] = self.duration((*path, "lag"), model.lag, f"lag of {owner}", "8 min", zero=True)
         if model.find_lag is not None:

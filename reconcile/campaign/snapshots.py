@@ -78,6 +78,9 @@ class Prepared:
         Streams that a line-up closes there.
     line_ups : mapping of snapshot to str
         Names of the line-ups that hold there.
+    edges : (W, 3) float64, optional
+        Of windows of a log with stamps, in seconds: first stamp; end of what the rows stand for; stamp of the row behind,
+        nan where there is none. The row behind comes later than the end only where rows are missing.
     """
 
     table: ReadingsTable
@@ -91,6 +94,7 @@ class Prepared:
     segments: Mapping[str, npt.NDArray[np.int64]] = field(default_factory=dict)
     closed: Mapping[int, tuple[str, ...]] = field(default_factory=dict)
     line_ups: Mapping[int, str] = field(default_factory=dict)
+    edges: npt.NDArray[np.float64] | None = None
 
     @property
     def used(self) -> npt.NDArray[np.bool_]:

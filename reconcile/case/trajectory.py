@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 from pydantic import BaseModel, ConfigDict, Field
 
@@ -17,7 +17,18 @@ from .sigma import read_sigma
 from .spec import KnownSpec, MeterSpec, Quantity, SharedErrorSpec
 from .validate import validated
 
-__all__ = ["InventorySpec", "TrajectoryModel", "TrajectorySpec", "change_factor", "check_rates", "read_trajectory"]
+if TYPE_CHECKING:
+    from ..campaign.spec import CampaignSpec
+
+__all__ = [
+    "InventorySpec",
+    "TrajectoryModel",
+    "TrajectorySpec",
+    "change_factor",
+    "check_log",
+    "check_rates",
+    "read_trajectory",
+]
 
 FROM_STAMPS = "from stamps"
 
@@ -83,6 +94,11 @@ class TrajectorySpec:
     step: Quantity | None
     constant_errors: tuple[SharedErrorSpec, ...]
     varying: tuple[str, ...]
+
+    def held(self, meters: Mapping[str, MeterSpec]) -> tuple[str, ...]:
+        """Tags of the meters that read nothing but inventories: they tell of one instant."""
+        names = {i.name for i in self.inventories.values()}
+        return tuple(t for t, m in meters.items() if all(n in names for n, _ in m.reads))
 
 
 def read_trajectory(
@@ -230,3 +246,71 @@ def check_rates(spec: TrajectorySpec, variables: Mapping[str, str], where: Any, 
                 "an inventory times 1/time must be of the kind of its rate, e.g. kg for kg/h",
                 where(spot),
             )
+
+
+def check_log(
+    spec: TrajectorySpec, campaign: CampaignSpec | None, meters: Mapping[str, MeterSpec], where: Any, problems: Problems
+) -> None:
+    """Refuse what a log cannot mean where inventories tie its windows.
+
+    Parameters
+    ----------
+    spec : TrajectorySpec
+    campaign : CampaignSpec or None
+        What the case says about its log.
+    meters : mapping of tag to MeterSpec
+    where : callable
+        ``where(path, key=...) -> Location``.
+    problems : Problems
+    """
+    if campaign is None:
+        return
+    names = {i.name: i for i in spec.inventories.values()}
+    held = spec.held(meters)
+    for tag, rule in campaign.readings.items():
+        if tag not in meters:
+            continue
+        reads = [n for n, _ in meters[tag].reads]
+        if rule.level is not None and tag not in held:
+            node = reads[0].split(".", 1)[0]
+            own = next((i for i in names.values() if i.rate in reads or i.name.split(".", 1)[0] == node), None)
+            problems.add(
+                "level-of-a-rate",
+                f"meter {tag!r} turns a level into its change over a window, which uses every reading twice; windows tied "
+                "by inventories take what is held at each border instead",
+                f"write reads: {own.name}, with unit and sigma in {own.unit}"
+                if own is not None
+                else f"add {node} under trajectory: inventories, and write reads: {node}.inventory",
+                where(("meters", tag, "reading", "level"), key=True),
+            )
+        for kind, given in (("counter", rule.counter is not None), ("sample", rule.sample)):
+            if given and any(n in names for n in reads):
+                problems.add(
+                    f"inventory-{kind}",
+                    f"meter {tag!r} reads an inventory, which is of one instant; a {kind} is of a whole window",
+                    "read the inventory from a level, or from a column of what is held",
+                    where(("meters", tag, "reading", kind), key=True),
+                )
+    for tag, meter in meters.items() if campaign.windows is not None else ():
+        if tag not in held and any(n in names for n, _ in meter.reads):
+            problems.add(
+                "instant-and-mean",
+                f"meter {tag!r} reads an inventory, which is of one instant, together with what is a mean over the window",
+                "read the inventory alone",
+                where(("meters", tag, "reads")),
+            )
+    if campaign.line_ups:
+        problems.add(
+            "line-up-tied",
+            "line_ups close streams in some windows, but windows tied by inventories have one network throughout",
+            "leave line_ups out, and keep the closed stream with a meter that reads its zero; or leave trajectory out",
+            where(("line_ups",), key=True),
+        )
+    if campaign.lab is not None and campaign.windows is None:
+        problems.add(
+            "samples-tied",
+            "samples of the laboratory pick moments of the log, but windows tied by inventories must cover all the time "
+            "between them",
+            "add windows:, e.g. windows: {length: 1 h}; each takes the mean of its samples",
+            where(("lab",), key=True),
+        )

@@ -12,7 +12,7 @@ import numpy.typing as npt
 
 from ..errors import InputError, Location, Notice, Problem
 from .counters import Increments, counter_increments
-from .levels import inventory_change
+from .levels import inventory, inventory_change
 from .steady import mean_sigma, r_test, slope_test
 from .table import ReadingsTable, Status
 from .time_order import seconds_of
@@ -63,7 +63,8 @@ class WindowWork:
             )
             self.counters[tag] = found
             self.notices.extend(found.notices)
-        self.averaged = [t for t in table.columns if t not in rules.counters and t not in rules.levels]
+        apart = {*rules.counters, *rules.levels, *rules.held}
+        self.averaged = [t for t in table.columns if t not in apart]
 
     # ---------------------------------------------------------------- values
 
@@ -78,14 +79,16 @@ class WindowWork:
         """Compute the row of a window."""
         a, b = self.bounds[w].tolist()
         for j, tag in enumerate(self.table.columns):
-            if tag in self.rules.counters:
+            if tag in self.rules.held:
+                self._held(w, j, tag, b if self.rules.held_at_end else a)
+            elif tag in self.rules.counters:
                 self._counter(w, j, tag, a, b)
             elif tag in self.rules.levels:
                 self._level(w, j, tag, a, b)
             else:
                 self._mean(w, j, a, b)
         if off:
-            self.status[w] = int(Status.OFF)
+            self.status[w, [t not in self.rules.held for t in self.table.columns]] = int(Status.OFF)
 
     def _mean(self, w: int, j: int, a: int, b: int) -> None:
         good = self.usable[a:b, j]
@@ -147,6 +150,19 @@ class WindowWork:
         scale = self._per(tag, a, last)
         self.values[w, j], self.sigma[w, j] = change * scale, s * scale
         self.status[w, j] = int(Status.GOOD)
+
+    def _held(self, w: int, j: int, tag: str, row: int) -> None:
+        """Take the reading of one row for what is held at that instant."""
+        if row >= len(self.table) or not self.usable[row, j]:
+            edge = "end" if self.rules.held_at_end else "start"
+            self.reasons[w, j] = f"not read at the {edge} of the window"
+            return
+        value, sigma = float(self.table.values[row, j]), self.rules.level_sigma.get(tag, 0.0)
+        if tag in self.rules.levels:
+            content, spread = inventory(value, self.rules.levels[tag], sigma)
+            value, sigma = float(content[0]), float(spread[0])
+        self.values[w, j], self.sigma[w, j] = value, sigma
+        self.status[w, j] = self.table.status[row, j]
 
     def _per(self, tag: str, a: int, last: int) -> float:
         per = self.rules.per.get(tag) if isinstance(self.rules.per, Mapping) else self.rules.per
@@ -293,7 +309,7 @@ class WindowWork:
         raise InputError(Problem("no-window-left", f"no window left: {words or 'no rows'}", hint, place))
 
     def _hold_up(self) -> None:
-        if self.rules.hold_up is None or self.seconds is None or self.rules.levels:
+        if self.rules.hold_up is None or self.seconds is None or self.rules.levels or self.rules.held:
             return
         length = self.rules.duration
         if length is None:

@@ -38,6 +38,11 @@ class WindowRules:
         These become changes of what the tank holds.
     level_sigma : mapping of tag to float
         Standard uncertainty of one reading of a level.
+    held : sequence of str
+        Columns that tell what is held at one instant: the reading at an edge of the window stands for it, no mean and no
+        difference; levels among them become contents.
+    held_at_end : bool
+        Whether that edge is the end of the window (the row behind it), else its start.
     per : float or mapping of tag to float, optional
         Seconds of the unit of time in which differences are given as rates (3600: per hour); None: amounts.
     steady : sequence of str, optional
@@ -67,6 +72,8 @@ class WindowRules:
     counters: Mapping[str, CounterRule] = field(default_factory=dict)
     levels: Mapping[str, LevelTable] = field(default_factory=dict)
     level_sigma: Mapping[str, float] = field(default_factory=dict)
+    held: Sequence[str] = ()
+    held_at_end: bool = False
     per: float | Mapping[str, float] | None = None
     steady: Sequence[str] | None = None
     slope_level: float | None = 0.001
@@ -211,6 +218,7 @@ def _check(table: ReadingsTable, rules: WindowRules) -> None:
     named = [
         *rules.counters,
         *rules.levels,
+        *rules.held,
         *rules.tolerance,
         *rules.required,
         *(rules.steady or ()),

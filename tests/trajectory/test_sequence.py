@@ -216,3 +216,22 @@ def test_a_long_sequence_covers_the_truth_as_often_as_it_says(train):
     assert 0.912 <= inside.mean() <= 0.982
     assert found.test.p > 0.001
     assert found.checks == 2 * 1999
+
+
+@pytest.mark.parametrize("read_at", ["start", "end"])
+@pytest.mark.parametrize("seed", range(40))
+def test_what_is_known_with_many_readings_missing_equals_one_large_system(train, seed, read_at):
+    rng = np.random.default_rng(seed)
+    _, y = tank_train(9, seed)
+    y[rng.random(y.shape) < rng.uniform(0.1, 0.6)] = np.nan
+    y[rng.integers(9, size=2)] = np.nan
+    case = reconcile.load_case(train(("read_at: start", f"read_at: {read_at}")))
+    chain, base = chain_of(case, pd.DataFrame(y, columns=TAGS))
+    found = solve_sequence(chain, base, names=str, row_names=str)
+    x, spread, determined, parity, _ = solve_unrolled(chain, base)
+    assert np.array_equal(found.determined, determined)
+    assert found.x[determined] == pytest.approx(x[determined], rel=1e-8, abs=1e-8)
+    ours = np.array([np.linalg.norm(c, axis=1) for c in found.covers])
+    assert ours[determined] == pytest.approx(spread[determined], rel=1e-7, abs=1e-9)
+    assert (found.parity**2).sum() == pytest.approx((parity**2).sum(), rel=1e-7, abs=1e-12)
+    assert found.parity.size == parity.size
