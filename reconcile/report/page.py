@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from ..hookspecs import Section
     from ..results import Result
     from ..run import Case
+    from ..trajectory import Trajectory
 
 __all__ = ["figures_of", "render_page", "write_figures", "write_page"]
 
@@ -30,12 +31,12 @@ MOST_SNAPSHOTS = 20_000
 _WORST = ("does not agree", "watch", "cannot tell", "agrees")
 
 
-def write_page(result: Result, path: str | Path, *, case: Case | None = None) -> Path:
+def write_page(result: Result | Trajectory, path: str | Path, *, case: Case | None = None) -> Path:
     """Write the page of a result.
 
     Parameters
     ----------
-    result : Result
+    result : Result or Trajectory
     path : path
         Its folder is made where it is missing; the file appears whole or not at all.
     case : Case, optional
@@ -56,7 +57,7 @@ def write_page(result: Result, path: str | Path, *, case: Case | None = None) ->
         raise InputError(
             Problem(
                 "report-too-long",
-                f"{result.size} snapshots are too many for a page of at most {MOST_SNAPSHOTS}",
+                f"{result.size} {_noun(result)} are too many for a page of at most {MOST_SNAPSHOTS}",
                 "make a page of a part of them, or of windows of them",
             )
         )
@@ -65,12 +66,12 @@ def write_page(result: Result, path: str | Path, *, case: Case | None = None) ->
     return target
 
 
-def render_page(result: Result, *, case: Case | None = None) -> str:
+def render_page(result: Result | Trajectory, *, case: Case | None = None) -> str:
     """Render the page of a result; the same result gives the same text.
 
     Parameters
     ----------
-    result : Result
+    result : Result or Trajectory
     case : Case, optional
         See `write_page`.
 
@@ -79,6 +80,12 @@ def render_page(result: Result, *, case: Case | None = None) -> str:
     str
         A whole HTML document.
     """
+    from ..trajectory import Trajectory
+
+    if isinstance(result, Trajectory):
+        from .page_trajectory import page_of_trajectory
+
+        return page_of_trajectory(result)
     usable = [i for i in range(result.size) if i not in result.table.failed]
     sections: list[tuple[str, str, Markup]] = []
     if result.size == 1 and usable:
@@ -101,12 +108,14 @@ def render_page(result: Result, *, case: Case | None = None) -> str:
     return document(result.title, _verdict(result), sections, result.provenance)
 
 
-def figures_of(result: Result, case: Case | None = None, snapshot: int | None = None) -> dict[str, figures.Figure]:
+def figures_of(
+    result: Result | Trajectory, case: Case | None = None, snapshot: int | None = None
+) -> dict[str, figures.Figure]:
     """Every figure that has something to show, by its name.
 
     Parameters
     ----------
-    result : Result
+    result : Result or Trajectory
     case : Case, optional
         With it, meters that would tell suspects apart are drawn, too.
     snapshot : int, optional
@@ -116,6 +125,12 @@ def figures_of(result: Result, case: Case | None = None, snapshot: int | None = 
     -------
     dict of str to Figure
     """
+    from ..trajectory import Trajectory
+
+    if isinstance(result, Trajectory):
+        from .page_trajectory import figures_of_trajectory
+
+        return {f.name: f for f in figures_of_trajectory(result)}
     if len(result.table.failed) == result.size:
         return {}
     index = typical(result) if snapshot is None else snapshot
@@ -133,13 +148,13 @@ def figures_of(result: Result, case: Case | None = None, snapshot: int | None = 
 
 
 def write_figures(
-    result: Result, folder: str | Path, suffix: Literal["svg", "png"], *, case: Case | None = None
+    result: Result | Trajectory, folder: str | Path, suffix: Literal["svg", "png"], *, case: Case | None = None
 ) -> list[Path]:
     """Write every figure into a folder.
 
     Parameters
     ----------
-    result : Result
+    result : Result or Trajectory
     folder : path
     suffix : {"svg", "png"}
     case : Case, optional
@@ -157,6 +172,12 @@ def write_figures(
         If PNG is asked for and the library for it is not installed.
     """
     return [f.save(Path(folder) / f"{name}.{suffix}") for name, f in figures_of(result, case).items()]
+
+
+def _noun(result: Result | Trajectory) -> str:
+    from ..trajectory import Trajectory
+
+    return "windows" if isinstance(result, Trajectory) else "snapshots"
 
 
 def _sections_of_plugins(result: Result, case: Case | None) -> Sequence[Section]:

@@ -103,15 +103,18 @@ def _sigmas(model: Model, spec: CaseSpec | None, used: Mapping[str, float]) -> M
 
 
 def _shared(spec: CaseSpec | None) -> Markup | None:
-    if spec is None or not spec.shared_errors:
-        return element("p", "No errors are shared: the covariance of the readings is diagonal.")
     rows = []
-    for name, shared in spec.shared_errors.items():
+    tied = spec.trajectory.constant_errors if spec is not None and spec.trajectory is not None else ()
+    for shared in (*(spec.shared_errors.values() if spec is not None else ()), *tied):
         sizes = dict.fromkeys(" and ".join(p.text for p in s.components) for s in shared.sigma)
-        kind = "fully together" if shared.correlations is None else "with the stated correlations"
-        rows.append((name, ", ".join(shared.meters), "; ".join(sizes), kind))
+        kind = "the same in all windows" if shared in tied else "fully together"
+        if shared.correlations is not None:
+            kind = "with the stated correlations"
+        rows.append((shared.name, ", ".join(shared.meters), "; ".join(sizes), kind))
+    if not rows:
+        return element("p", "No errors are shared: the covariance of the readings is diagonal.")
     return html_table(
-        "Errors that meters share", ("cause", "meters", "sigma", "how"), rows, name="shared-table", left=(0, 1, 2, 3)
+        "Errors that readings share", ("cause", "meters", "sigma", "how"), rows, name="shared-table", left=(0, 1, 2, 3)
     )
 
 

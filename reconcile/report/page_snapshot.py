@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 from ..mixups import mixups_of
@@ -14,6 +15,7 @@ from .symbols import symbol_of
 from .tables import html_table
 from .text import figures_granted
 from .words import (
+    Suspect,
     explanations_in_words,
     percent,
     remarks_on_explanations,
@@ -25,7 +27,7 @@ if TYPE_CHECKING:
     from ..results import Result
     from ..snapshot import Snapshot
 
-__all__ = ["explanations_part", "figure_part", "snapshot_name", "snapshot_parts"]
+__all__ = ["explanations_part", "figure_part", "ranked_suspects", "snapshot_name", "snapshot_parts", "told_list"]
 
 NAMED = frozenset({"suspect", "tied", "cannot tell"})
 
@@ -189,7 +191,7 @@ def _readings_part(result: Result, index: int, prefix: str) -> Markup:
             note=note,
             marked=marked,
         ),
-        _ranked(s, prefix, _of(result, index)),
+        ranked_suspects(suspects_of(s), prefix, _of(result, index)),
         figure_part(figures.adjustments(result, index), prefix, caption),
         _unread(s, prefix, _of(result, index)),
         _derived(result, index, prefix),
@@ -197,8 +199,9 @@ def _readings_part(result: Result, index: int, prefix: str) -> Markup:
     return join(*parts)
 
 
-def _ranked(s: Snapshot, prefix: str, of: str) -> Markup | None:
-    found = sorted(suspects_of(s), key=lambda x: -x.probability)[:8]
+def ranked_suspects(named: Sequence[Suspect], prefix: str = "", of: str = "") -> Markup | None:
+    """Table of suspects, the most probable first; nothing where none is named."""
+    found = sorted(named, key=lambda x: -x.probability)[:8]
     if not found:
         return None
     rows = [
@@ -267,6 +270,19 @@ def _derived(result: Result, index: int, prefix: str) -> Markup | None:
 # ------------------------------------------------------------------ explanations
 
 
+def told_list(told: Sequence[Sequence[str]]) -> Markup:
+    """Explanations in their order; the last line of each says what is left."""
+    items = [
+        element(
+            "li",
+            *(element("p", line, class_="fault") for line in lines[:-1]),
+            element("p", lines[-1], class_="left"),
+        )
+        for lines in told
+    ]
+    return element("ol", *items, class_="told")
+
+
 def explanations_part(result: Result, index: int, *, mixups: bool = True) -> Markup:
     """Explanations of one snapshot with their rivals, or that none is needed.
 
@@ -286,15 +302,7 @@ def explanations_part(result: Result, index: int, *, mixups: bool = True) -> Mar
     told = explanations_in_words(s)
     parts: list[Markup | None] = []
     if told:
-        items = [
-            element(
-                "li",
-                *(element("p", line, class_="fault") for line in lines[:-1]),
-                element("p", lines[-1], class_="left"),
-            )
-            for lines in told
-        ]
-        parts.append(element("ol", *items, class_="told"))
+        parts.append(told_list(told))
     elif s.test.status == "disagrees":
         parts.append(element("p", "No set of possible faults that was tried accounts for the readings."))
     elif s.test.checks == 0:

@@ -23,7 +23,15 @@ from .words import (
 if TYPE_CHECKING:
     from ..trajectory import Trajectory
 
-__all__ = ["render_trajectory", "suspects_of_trajectory", "verdict_of_trajectory"]
+__all__ = [
+    "beyond_of_trajectory",
+    "explanations_of_trajectory",
+    "limits_of_trajectory",
+    "meters_of_inventories",
+    "render_trajectory",
+    "suspects_of_trajectory",
+    "verdict_of_trajectory",
+]
 
 MANY = 14
 
@@ -38,6 +46,14 @@ def suspects_of_trajectory(found: Trajectory) -> tuple[Suspect, ...]:
     return suspects_of(_told(found))
 
 
+def explanations_of_trajectory(found: Trajectory) -> tuple[list[list[str]], list[str]]:
+    """Explanations of the sequence as lines, and the remarks on them; none where the readings agree."""
+    if found.test.status != "disagrees":
+        return [], []
+    told = _told(found)
+    return explanations_in_words(told), remarks_on_explanations(told)
+
+
 def verdict_of_trajectory(found: Trajectory) -> str:
     """One paragraph: how many windows, readings and checks, whether they agree, and who is suspected."""
     given = int(np.isfinite(found.base[:, found.model.meters]).sum())
@@ -50,6 +66,49 @@ def verdict_of_trajectory(found: Trajectory) -> str:
     if found.test.status == "suspiciously good":
         return head + f"agree suspiciously well ({test_phrase(_told(found))}): the sigmas are probably too large."
     return head + f"agree within their sigmas ({test_phrase(_told(found))})."
+
+
+def beyond_of_trajectory(found: Trajectory) -> str:
+    """Inventories beyond the windows, at the end that is open; empty where they cannot be told."""
+    if not found.outer:
+        return ""
+    beyond = "before the first window" if found.trajectory.at_end else "behind the last window"
+    unit = {i.name: i.unit for i in found.trajectory.inventories.values()}
+    text = ", ".join(f"{n} {plain(v, s)} ± {plain(s, s)} {unit[n]}" for n, (v, s) in found.outer.items())
+    return f"{beyond}: {text}"
+
+
+def limits_of_trajectory(found: Trajectory) -> list[str]:
+    """What the readings of a sequence cannot show, and what was taken as the same throughout."""
+    out = []
+    unchecked = [
+        tag
+        for tag, i in zip(found.tags, found.model.meters, strict=True)
+        if np.isfinite(found.base[:, i]).any() and not (found.share[:, i] > 0).any()
+    ]
+    if unchecked:
+        out.append(f"Not checked by anything in any window: {', '.join(unchecked)}.")
+    priors = [r.tag.removeprefix("known:") for r in found.model.readings if r.kind == "prior"]
+    stays = [n for n in priors if n not in found.trajectory.varying]
+    if stays:
+        out.append(f"Taken as the same in all windows: {', '.join(stays)}.")
+    if not found.model.shared:
+        out.append(
+            "Errors are taken as independent from window to window. What stays the same, such as a calibration, belongs "
+            "under trajectory: constant_errors."
+        )
+    return out
+
+
+def meters_of_inventories(found: Trajectory) -> dict[str, tuple[int, int]]:
+    """First meter that reads each inventory alone: its place among the meters and among the readings."""
+    names = {i.name for i in found.trajectory.inventories.values()}
+    out: dict[str, tuple[int, int]] = {}
+    for j, i in enumerate(found.model.meters):
+        reads = found.model.readings[i].reads
+        if len(reads) == 1 and reads[0][0] in names:
+            out.setdefault(reads[0][0], (j, int(i)))
+    return out
 
 
 def render_trajectory(found: Trajectory, *, ascii_only: bool = False) -> str:
@@ -68,32 +127,14 @@ def render_trajectory(found: Trajectory, *, ascii_only: bool = False) -> str:
     out = [found.title, "", wrap(f"{MARKS.get(found.word, '')} {verdict_of_trajectory(found)}".strip(), "")]
     at = "end" if found.trajectory.at_end else "start"
     out += ["", f"  Inventories at the {at} of each window:", "", _inventories(found)]
-    if found.outer:
-        beyond = "before the first window" if found.trajectory.at_end else "behind the last window"
-        unit = {i.name: i.unit for i in found.trajectory.inventories.values()}
-        text = ", ".join(f"{n} {plain(v, s)} ± {plain(s, s)} {unit[n]}" for n, (v, s) in found.outer.items())
-        out += ["", wrap(f"{beyond}: {text}")]
-    if found.test.status == "disagrees":
-        told = explanations_in_words(_told(found))
-        if told:
-            out += ["", "  EXPLANATIONS", *(wrap(line, "    ") for lines in told for line in lines)]
-        out += [wrap(line) for line in remarks_on_explanations(_told(found))]
-    unchecked = [
-        tag
-        for tag, i in zip(found.tags, found.model.meters, strict=True)
-        if np.isfinite(found.base[:, i]).any() and not (found.share[:, i] > 0).any()
-    ]
-    if unchecked:
-        out += ["", wrap(f"Not checked by anything in any window: {', '.join(unchecked)}.")]
-    priors = [r.tag.removeprefix("known:") for r in found.model.readings if r.kind == "prior"]
-    stays = [n for n in priors if n not in found.trajectory.varying]
-    if stays:
-        out += ["", wrap(f"Taken as the same in all windows: {', '.join(stays)}.")]
-    if not found.model.shared:
-        out += ["", wrap(
-            "Errors are taken as independent from window to window. What stays the same, such as a calibration, belongs "
-            "under trajectory: constant_errors."
-        )]  # fmt: skip
+    beyond = beyond_of_trajectory(found)
+    if beyond:
+        out += ["", wrap(beyond)]
+    told, remarks = explanations_of_trajectory(found)
+    if told:
+        out += ["", "  EXPLANATIONS", *(wrap(line, "    ") for lines in told for line in lines)]
+    out += [wrap(line) for line in remarks]
+    out += [line for sentence in limits_of_trajectory(found) for line in ("", wrap(sentence))]
     out += [wrap(f"{tag} was left out: {why}.") for tag, why in found.excluded.items()]
     out += [wrap(str(n)) for n in found.notices]
     out += [wrap(c) for c in found.cautions]
@@ -103,11 +144,7 @@ def render_trajectory(found: Trajectory, *, ascii_only: bool = False) -> str:
 
 def _inventories(found: Trajectory) -> str:
     """Each inventory of the first and last windows: read (where one meter reads it), adjusted, sigma, test value."""
-    meter_of: dict[str, tuple[int, int]] = {}
-    for j, i in enumerate(found.model.meters):
-        reads = found.model.readings[i].reads
-        if len(reads) == 1:
-            meter_of.setdefault(reads[0][0], (j, i))
+    meter_of = meters_of_inventories(found)
     shown = range(found.size)
     first = [*shown] if found.size <= MANY else [*shown][: MANY // 2]
     last = [] if found.size <= MANY else [*shown][-MANY // 2 :]
@@ -121,9 +158,8 @@ def _inventories(found: Trajectory) -> str:
             value, sigma = float(found.adjusted[t, place]), float(found.sigmas[t, place])
             read, z = math.nan, math.nan
             if inventory.name in meter_of:
-                j, i = meter_of[inventory.name]
-                stated = found.base[t, i]
-                read, z = float(stated), float(found.z[t, i])
+                _, i = meter_of[inventory.name]
+                read, z = float(found.base[t, i]), float(found.z[t, i])
             rows.append(
                 (
                     found.labels[t], inventory.name, inventory.unit, plain(read, sigma), plain(value, sigma),

@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 
 
 def plant(folder: Path, rows: int, columns: int, *, snapshots: int = 1, seed: int = 7, timed: bool = True) -> Path:
@@ -52,3 +53,37 @@ def plant(folder: Path, rows: int, columns: int, *, snapshots: int = 1, seed: in
     lines += [",".join([lab, *(f"{v:.3f}" for v in row)]) for lab, row in zip(labels, read, strict=True)]
     (folder / "readings.csv").write_text("\n".join(lines) + "\n")
     return folder / "case.yaml"
+
+
+TANKS = """\
+reconcile: 1
+title: Day tank and header tank (invented)
+domains: {fluid: {unit: kg/h}}
+nodes:
+  day: {stores: true}
+  header: {stores: true}
+streams: {make: outside -> day, transfer: day -> header, use: header -> outside}
+meters:
+  FM: {reads: make.flow, unit: kg/h, sigma: 2 kg/h}
+  FT: {reads: transfer.flow, unit: kg/h, sigma: 1.5 kg/h}
+  FU: {reads: use.flow, unit: kg/h, sigma: 2.5 kg/h}
+  LD: {reads: day.inventory, unit: kg, sigma: 1 kg}
+  LH: {reads: header.inventory, unit: kg, sigma: 1.2 kg}
+figures: {share_used: use.flow / make.flow}
+trajectory:
+  inventories: {day: kg, header: kg}
+  read_at: start
+  step: 15 min
+"""
+
+
+def tanks(windows: int, seed: int = 11) -> pd.DataFrame:
+    """Readings of two tanks in a row, window by window, with the sigmas that `TANKS` states."""
+    rng = np.random.default_rng(seed)
+    t = np.arange(windows)
+    flow = np.column_stack([80 + 8 * np.sin(t / 4), 78 + 5 * np.cos(t / 5), np.full(windows, 79.0)])
+    change = 0.25 * (flow[:, :2] - flow[:, 1:])
+    held = np.array([60.0, 90.0]) + np.vstack([np.zeros(2), np.cumsum(change, axis=0)[:-1]])
+    read = np.hstack([flow, held]) + rng.normal(size=(windows, 5)) * [2, 1.5, 2.5, 1, 1.2]
+    times = pd.date_range("2025-05-04", periods=windows, freq="15min", name="time")
+    return pd.DataFrame(read.round(3), columns=["FM", "FT", "FU", "LD", "LH"], index=times)

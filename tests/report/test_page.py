@@ -3,12 +3,11 @@
 from __future__ import annotations
 
 import re
-from html import unescape
-from html.parser import HTMLParser
 from itertools import pairwise
 
 import pytest
 from click.testing import CliRunner
+from pages import Page, rows_of
 from plants import plant
 
 import reconcile
@@ -17,38 +16,6 @@ from reconcile.report.by_hand import explain_node
 from reconcile.report.log_parts import log_parts
 from reconcile.report.page import MOST_SNAPSHOTS, render_page, write_page
 from reconcile.report.words import verdict_line
-
-
-class Page(HTMLParser):
-    """What a test wants to know of a page."""
-
-    def __init__(self, text):
-        super().__init__()
-        self.ids, self.headings, self.scripts, self.tags, self.links, self.said = [], [], 0, [], [], ""
-        self._inside = []
-        self.feed(text)
-        self.close()
-
-    def handle_starttag(self, tag, attrs):
-        found = dict(attrs)
-        self.tags.append((tag, found))
-        if "id" in found:
-            self.ids.append(found["id"])
-        if tag == "script":
-            self.scripts += 1
-        if re.fullmatch("h[1-6]", tag):
-            self.headings.append([int(tag[1]), ""])
-        self._inside.append(tag)
-
-    def handle_endtag(self, tag):
-        while self._inside and self._inside.pop() != tag:
-            pass
-
-    def handle_data(self, data):
-        if any(re.fullmatch("h[1-6]", t) for t in self._inside):
-            self.headings[-1][1] += data
-        if not {"script", "style"} & set(self._inside):
-            self.said += data
 
 
 @pytest.fixture(scope="module")
@@ -171,15 +138,6 @@ def test_what_became_of_the_log_is_told(datasets):
     for i, error in result.table.failed.items():
         assert error.message in page.said
         assert f"snapshot-{i + 1}" not in page.ids
-
-
-def rows_of(text, name):
-    """Cells of a table of the page, row by row, as text."""
-    body = re.search(rf'<table[^>]*id="{name}".*?</table>', text, re.DOTALL).group(0)
-    return [
-        [unescape(re.sub("<[^>]*>", "", cell)) for cell in re.findall(r"<t[hd][^>]*>(.*?)</t[hd]>", row, re.DOTALL)]
-        for row in re.findall(r"<tr.*?</tr>", body, re.DOTALL)
-    ]
 
 
 @pytest.mark.parametrize("name", ["membrane_log", "batch_tank", "flotation_test"])

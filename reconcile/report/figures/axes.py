@@ -106,9 +106,14 @@ def label_course(c: Canvas, course: Course, bottom: float) -> None:
     widest = min(max((text_width(t, 12) for t in course.labels), default=1.0), 150.0) + 18
     most = max(2, int((course.right - course.left) / widest))
     chosen = sorted({round(k) for k in np.linspace(0, count - 1, min(most, count))})
+    end = -np.inf
     for i in chosen:
         text = cut(course.labels[i].replace("T", " ") if course.timed else course.labels[i], 150, 12)
         half = text_width(text, 12) / 2
         x = min(max(course.x[i], half + 2), course.width - half - 2)
+        # Counts that do not divide evenly bring two labels too close to each other.
+        if x - half < end + 6:
+            continue
+        end = x + half
         c.line((course.x[i], bottom), (course.x[i], bottom + 4), "line")
         c.text((x, bottom + 18), text, "soft", 12, "middle")

@@ -183,7 +183,7 @@ def _panel(
     low, high = (float(every.min()), float(every.max())) if every.size else (0.0, 1.0)
     room = 0.08 * (high - low) or 1.0
     y = Scale(low - room, high + room, bottom, top)
-    c.text((course.left, top - 6), cut(f"{tag}, {unit}", 400, 12), "ink", 12, bold=True)
+    c.text((course.left, top - 6), cut(f"{tag}, {unit}" if unit else tag, 400, 12), "ink", 12, bold=True)
     shown = ticks(y.low, y.high, 3)
     step = shown[1] - shown[0] if len(shown) > 1 else 1.0
     for v in shown:
