@@ -11,7 +11,9 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
+import scipy.sparse as sp
 from scipy.linalg import lu, qr, solve_triangular
+from scipy.sparse.csgraph import connected_components
 
 __all__ = ["Elimination", "balanced_scales", "cleaned", "dependent_rows", "eliminate", "independent_form"]
 
@@ -203,21 +205,55 @@ def dependent_rows(rows: Array) -> Array:
         return np.zeros((0, 0))
     size = np.linalg.norm(rows, axis=1)
     size[size == 0] = 1.0
-    q, r, _ = qr(rows / size[:, None], pivoting=True)
-    rank = _rank(np.abs(np.diag(r))) if r.size else 0
-    null = q[:, rank:].T
-    if null.size == 0:
-        return np.zeros((0, m))
-    reduced = _echelon_from_the_right(null)
-    out = reduced / size
-    last = np.array([np.flatnonzero(row)[-1] for row in out])
+    scaled = rows / size[:, None]
+    found = []
+    for part in _apart(scaled):
+        reduced = _dependent(scaled[np.ix_(part, np.any(scaled[part] != 0, axis=0))])
+        spread = np.zeros((len(reduced), m))
+        spread[:, part] = reduced
+        found.append(spread)
+    out = np.vstack(found) / size
+    last = np.array([np.flatnonzero(row)[-1] for row in out], dtype=np.int64)
     out = out / out[np.arange(len(out)), last][:, None]
     return out[np.argsort(last)]
 
 
-def _echelon_from_the_right(null: Array) -> Array:
-    """Reduced echelon form with pivots as far to the right as possible."""
-    work = null[:, ::-1].copy()
+def _apart(rows: Array) -> list[npt.NDArray[np.int64]]:
+    """Sets of rows that share no variable, so that none of one set follows from those of another."""
+    i, j = np.nonzero(rows)
+    m, n = rows.shape
+    ties = sp.coo_array((np.ones(i.size), (i, m + j)), shape=(m + n, m + n))
+    which = connected_components(ties, directed=False)[1][:m]
+    order = np.argsort(which, kind="stable")
+    return np.split(order, np.flatnonzero(np.diff(which[order])) + 1)
+
+
+def _dependent(rows: Array) -> Array:
+    """`dependent_rows` for rows of length 1 that hang together, up to a factor of each combination."""
+    m, n = rows.shape
+    if m == 1:
+        return np.ones((0 if n else 1, 1))
+    few = qr(rows, mode="r", pivoting=True)[0]
+    rank = _rank(np.abs(np.diag(few)))
+    if rank == m:
+        return np.zeros((0, m))
+    if rank < m - rank:
+        # Few rows imply many: cheaper from what the rows span than from what they leave.
+        ahead = _echelon(rows.T)
+        lead = np.array([np.flatnonzero(row)[0] for row in ahead if row.any()], dtype=np.int64)
+        if lead.size == rank:
+            follows = np.setdiff1d(np.arange(m), lead)
+            out = np.zeros((follows.size, m))
+            out[:, lead] = -ahead[:rank, follows].T
+            out[np.arange(follows.size), follows] = 1.0
+            return out
+    q = qr(rows, pivoting=True)[0]
+    return _echelon(q[:, rank:].T[:, ::-1])[:, ::-1]
+
+
+def _echelon(rows: Array) -> Array:
+    """Reduced echelon form with pivots as far to the left as possible."""
+    work = rows.copy()
     row = 0
     for column in range(work.shape[1]):
         if row == len(work):
@@ -227,8 +263,9 @@ def _echelon_from_the_right(null: Array) -> Array:
             continue
         work[[row, best]] = work[[best, row]]
         work[row] /= work[row, column]
-        others = np.arange(len(work)) != row
+        others = np.flatnonzero(work[:, column])
+        others = others[others != row]
         work[others] -= np.outer(work[others, column], work[row])
         row += 1
     work[np.abs(work) < 1e-9] = 0.0
-    return work[:, ::-1]
+    return work
