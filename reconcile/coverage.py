@@ -10,12 +10,13 @@ import numpy.typing as npt
 
 from .adjust.structure import additions_to_calculate, additions_to_check, ties
 from .adjust.table import Group, adjust_table
+from .checks_in_words import checks_in_words, dependent_in_words, sum_in_words
 from .diagnose.critical import smallest_detectable
 from .diagnose.familywise import familywise_limit
 from .diagnose.lookalike import classes, near_parallel
 from .diagnose.rehearse import rehearse
 from .errors import InputError, Location, Problem
-from .snapshot import checks_in_words, dependent_in_words, signatures
+from .snapshot import signatures
 
 if TYPE_CHECKING:
     from .model import Model
@@ -344,7 +345,6 @@ def _unread(model: Model, group: Group) -> tuple[UnreadLine, ...]:
             out.append(UnreadLine(name, model.units[column], "calculated", sigma))
             continue
         tied = {model.names[group.free[j]]: v for j, v in ties(elimination, k).items()}
-        from .snapshot import sum_in_words
 
         reason = f"only {sum_in_words(tied)} is known" if len(tied) > 1 else "no balance ties it to a reading"
         found = additions_to_calculate(group.jacobian[:, group.free], k)

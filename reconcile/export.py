@@ -74,7 +74,7 @@ def _variables(result: Result) -> pd.DataFrame:
     """One row per reading or unread variable; of many snapshots, the first that could be adjusted."""
     import pandas as pd
 
-    from .snapshot import FRAME_COLUMNS
+    from .snapshot_lines import FRAME_COLUMNS
 
     chosen = _adjusted_snapshots(result)[:1]
     rows = [r for i in chosen for r in result.snapshot(i).frame_rows()]
@@ -177,7 +177,7 @@ def _suspects(result: Result) -> pd.DataFrame:
 def _balances(result: Result) -> pd.DataFrame:
     import pandas as pd
 
-    from .snapshot import balances_of
+    from .closures import balances_of
 
     rows = [
         (result.labels[i], b.name, b.kind, b.unit, b.domain, b.before, b.spread, b.ratio, b.after, b.scale)

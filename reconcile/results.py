@@ -300,7 +300,7 @@ class Result:
         """
         import pandas as pd
 
-        from .snapshot import FRAME_COLUMNS
+        from .snapshot_lines import FRAME_COLUMNS
 
         rows = [row for i in range(self.size) if i not in self.table.failed for row in self.snapshot(i).frame_rows()]
         return pd.DataFrame(rows, columns=list(FRAME_COLUMNS))

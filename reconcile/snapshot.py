@@ -10,9 +10,10 @@ import numpy as np
 import numpy.typing as npt
 
 from .accounts import MOST_FAULTS, Accounts, explain
-from .adjust.eliminate import dependent_rows
-from .adjust.structure import checks, ties
+from .adjust.structure import ties
 from .adjust.table import Group
+from .checks_in_words import checks_in_words, dependent_in_words, sum_in_words
+from .closures import closures_of
 from .diagnose.critical import smallest_detectable
 from .diagnose.tests_of_balances import (
     NodalTest,
@@ -28,165 +29,16 @@ from .diagnose.tests_of_readings import (
 )
 from .diagnose.verdict import Conclusion
 from .model import Candidate, Model
+from .snapshot_lines import BalanceLine, FaultLine, ReadingLine, VariableLine
 
 if TYPE_CHECKING:
     from .results import Result
 
-__all__ = [
-    "FRAME_COLUMNS",
-    "BalanceLine",
-    "FaultLine",
-    "ReadingLine",
-    "Snapshot",
-    "VariableLine",
-    "balances_of",
-    "look",
-]
+__all__ = ["Snapshot", "evidence", "look", "signatures"]
 
 Array = npt.NDArray[np.float64]
 
 MOST_REFITS = 8
-
-FRAME_COLUMNS = (
-    "snapshot",
-    "variable",
-    "unit",
-    "meter",
-    "class",
-    "reading",
-    "sigma_before",
-    "adjusted",
-    "sigma",
-    "adjustment",
-    "adjustment_in_sigmas",
-    "share_checked",
-    "smallest_detectable",
-)
-
-
-@dataclass(frozen=True)
-class ReadingLine:
-    """A reading before and after; all values in the unit of the meter.
-
-    Attributes
-    ----------
-    tag, reads, unit, kind : str
-    reading : float
-        nan where the meter gave nothing.
-    sigma_before : float
-        Total standard uncertainty of the reading, shared errors included.
-    adjusted, sigma : float
-        What it should have read, and its standard uncertainty.
-    adjustment, in_sigmas : float
-        adjusted - reading, and the same over `sigma_before`.
-    share : float
-        Share of an error of this reading that would show, 0 to 1.
-    z : float
-        Test value; nan where the reading is not checked.
-    smallest : float
-        Smallest bias that would be noticed at the level and power of the case; inf where none would.
-    klass : str
-        ``checked``, ``not checked``, ``calculated`` (absent, but determined by the others) or
-        ``cannot be calculated``.
-    word : str
-        ``sound so far``, ``suspect``, ``tied``, ``cannot tell``, ``not checked``, ``left out``, ``no reading``.
-    origin : str
-        Where its sigma comes from.
-    """
-
-    tag: str
-    reads: str
-    unit: str
-    kind: str
-    reading: float
-    sigma_before: float
-    adjusted: float
-    sigma: float
-    adjustment: float
-    in_sigmas: float
-    share: float
-    z: float
-    smallest: float
-    klass: str
-    word: str
-    origin: str
-
-
-@dataclass(frozen=True)
-class VariableLine:
-    """A variable of the balances, in its own unit."""
-
-    name: str
-    unit: str
-    klass: str
-    adjusted: float
-    sigma: float
-    meters: tuple[str, ...]
-    reason: str
-
-
-@dataclass(frozen=True)
-class BalanceLine:
-    """A balance before and after.
-
-    Attributes
-    ----------
-    name, kind, unit, node, domain : str
-    before : float
-        Closure of the raw readings; nan where the balance holds a variable that is not read.
-    spread : float
-        Standard deviation that the sigmas let expect.
-    ratio : float
-        before / spread.
-    after : float
-        Closure of the adjusted values.
-    scale : float
-        Largest term of the balance.
-    inflow, outflow : float
-        Sum of the positive and of the negative terms of the raw readings.
-    """
-
-    name: str
-    kind: str
-    unit: str
-    node: str
-    domain: str
-    before: float
-    spread: float
-    ratio: float
-    after: float
-    scale: float
-    inflow: float
-    outflow: float
-
-
-@dataclass(frozen=True)
-class FaultLine:
-    """A possible fault taken alone, in the unit of its size.
-
-    Attributes
-    ----------
-    candidate : Candidate
-    size, sigma : float
-        Least-squares size if this were the only fault, and its standard uncertainty.
-    low, high : float
-        95 % interval.
-    z : float
-        Test value.
-    left : float
-        Objective that remains if it is granted.
-    smallest : float
-        Smallest size that would be noticed at the level and power of the case.
-    """
-
-    candidate: Candidate
-    size: float
-    sigma: float
-    low: float
-    high: float
-    z: float
-    left: float
-    smallest: float
 
 
 @dataclass(frozen=True)
@@ -332,7 +184,7 @@ def look(result: Result, index: int) -> Snapshot:
     accounts = _accounts(result, index, parity, test)
     faults = _faults(candidates, tests, shifts, settings)
     readings = _readings(result, index, group, x, meter_tests, shifts, accounts)
-    balances = _balances(result, index, group, x)
+    balances = closures_of(result, index, group, x)
     rows = balances.tested()
     closure, covariance = balances.closure[rows], balances.covariance[np.ix_(rows, rows)]
     return Snapshot(
@@ -520,104 +372,6 @@ def _why_unknown(model: Model, group: Group, column: int) -> str:
     return f"only {sum_in_words(terms)} is known"
 
 
-def sum_in_words(terms: dict[str, float]) -> str:
-    text = ""
-    for name, c in terms.items():
-        c = round(c, 9)
-        sign = (" - " if c < 0 else " + ") if text else ("-" if c < 0 else "")
-        text += f"{sign}{name}" if abs(c) == 1 else f"{sign}{abs(c):.4g} * {name}"
-    return text
-
-
-def balances_of(result: Result, index: int) -> tuple[BalanceLine, ...]:
-    """Balances of one snapshot before and after, without the tests of everything else that `look` makes."""
-    group = result.group(index)
-    return _balances(result, index, group, group.x[int(np.flatnonzero(group.rows == index)[0])]).lines
-
-
-@dataclass(frozen=True)
-class _Balances:
-    """Balances of one snapshot.
-
-    Attributes
-    ----------
-    lines : tuple of BalanceLine
-    closure, covariance : ndarray, shapes (m,) and (m, m)
-        Of the raw closures.
-    alone : ndarray of int
-        Balances that are formed from readings only.
-    part : ndarray, shape (m, number of columns read)
-        Their coefficients.
-    """
-
-    lines: tuple[BalanceLine, ...]
-    closure: Array
-    covariance: Array
-    alone: npt.NDArray[np.int64]
-    part: Array
-
-    def tested(self) -> npt.NDArray[np.int64]:
-        """Balances that can be tested alone: formed from readings only, and not implied by others."""
-        implied = dependent_rows(self.part[self.alone])
-        return np.delete(self.alone, [int(np.flatnonzero(row)[-1]) for row in implied])
-
-
-def _balances(result: Result, index: int, group: Group, x: Array) -> _Balances:
-    """Closure of every balance of the domains, before with the raw readings where they suffice, and after."""
-    model, e = result.model_of(index), group.equations
-    base = model.to_base(result.readings[index : index + 1])[0]
-    base[group.absent] = np.nan
-    raw = np.full(model.size, np.nan)
-    source = np.full(model.size, -1)
-    coefficient = np.ones(model.size)
-    for i, r in reversed(list(enumerate(model.readings))):
-        if len(r.reads) == 1 and r.kind != "cause" and np.isfinite(base[i]):
-            column = model.system.column(r.reads[0][0])
-            raw[column], source[column] = base[i] / r.reads[0][1], i
-            coefficient[column] = r.reads[0][1]
-    for c, v in model.fixed.items():
-        raw[c] = v
-    m = model.system.equations.shape[0]
-    formed = np.isfinite(raw)
-    x_raw = np.where(formed, raw, np.nan_to_num(x))
-    jacobian = e.jacobian(x_raw).toarray()[:m]
-    complete = ~np.any((jacobian != 0) & ~formed, axis=1)
-    before = e.closure(x_raw)[:m]
-    covariance = model.covariance_of_readings(np.where(np.isfinite(base), base, x[model.columns]))
-    read = np.flatnonzero(source >= 0)
-    scaled = jacobian[:, read] / coefficient[read]
-    of_closure = scaled @ covariance[np.ix_(source[read], source[read])] @ scaled.T
-    spread = np.sqrt(np.diag(of_closure))
-    inflow, outflow = (t[:m] for t in e.split_terms(x_raw))
-    x = np.nan_to_num(x)
-    after, scale = e.closure(x)[:m], e.largest_term(x)[:m]
-    out = []
-    for block in model.system.row_blocks:
-        for j, name in enumerate(block.names):
-            k = block.start + j
-            ok = bool(complete[k])
-            with np.errstate(divide="ignore", invalid="ignore"):
-                ratio = before[k] / spread[k] if ok and spread[k] > 0 else np.nan
-            out.append(
-                BalanceLine(
-                    name,
-                    block.kind,
-                    block.unit,
-                    block.nodes[j],
-                    block.writer,
-                    float(before[k]) if ok else np.nan,
-                    float(spread[k]) if ok else np.nan,
-                    float(ratio),
-                    float(after[k]),
-                    float(scale[k]),
-                    float(inflow[k]) if ok else np.nan,
-                    float(-outflow[k]) if ok else np.nan,
-                )
-            )
-    alone = np.flatnonzero(complete & (spread > 0))
-    return _Balances(tuple(out), before, of_closure, alone, jacobian[:, read])
-
-
 def _faults(
     candidates: Sequence[Candidate], tests: SignatureTests, shifts: Array, settings: Any
 ) -> tuple[FaultLine, ...]:
@@ -635,42 +389,3 @@ def _faults(
         )
         for i, c in enumerate(candidates)
     )
-
-
-def checks_in_words(model: Model, group: Group) -> tuple[str, ...]:
-    """Every independent check as a combination of the things that are read.
-
-    For a case with products the linearised check is shown by the balances it combines.
-    """
-    present = np.setdiff1d(group.present, group.absent)
-    columns = group.columns[present]
-    taken = np.isin(np.arange(model.size), [*columns, *model.fixed])
-    free = np.flatnonzero(~taken)
-    combined = checks(group.jacobian[:, columns], group.jacobian[:, free])
-    out = []
-    for row in combined:
-        if not group.equations.is_linear:
-            out.append(" with ".join(model.row_names[int(k)] for k in np.flatnonzero(row)))
-            continue
-        weights = row @ group.jacobian[:, columns]
-        terms = {model.tags[present[j]]: weights[j] for j in np.flatnonzero(np.abs(weights) > 1e-9)}
-        lead = abs(next(iter(terms.values())))
-        constant = float(
-            row @ group.equations.rhs - row @ group.jacobian[:, list(model.fixed)] @ list(model.fixed.values())
-        )
-        right = 0.0 if abs(constant) < 1e-12 else constant / lead
-        out.append(f"{sum_in_words({k: v / lead for k, v in terms.items()})} = {right:g}")
-    return tuple(out)
-
-
-def dependent_in_words(model: Model, group: Group) -> tuple[str, ...]:
-    """Balances that others imply: true, but no further check."""
-    live = [c for c in range(model.size) if c not in model.fixed]
-    out = []
-    for row in dependent_rows(group.jacobian[:, live]):
-        names = [model.row_names[int(k)] for k in np.flatnonzero(row)]
-        if len(names) == 1:
-            out.append(f"{names[0]} says nothing about what is read or unknown here")
-        else:
-            out.append(f"{names[-1]} follows from {', '.join(names[:-1])}")
-    return tuple(out)

@@ -27,7 +27,8 @@ from .words import (
 if TYPE_CHECKING:
     from ..figures import FigureValue
     from ..results import Result
-    from ..snapshot import Snapshot, VariableLine
+    from ..snapshot import Snapshot
+    from ..snapshot_lines import VariableLine
 
 __all__ = ["figures_granted", "render"]
 

@@ -12,7 +12,7 @@ from .sheet import Figure
 
 if TYPE_CHECKING:
     from ...results import Result
-    from ...snapshot import ReadingLine
+    from ...snapshot_lines import ReadingLine
 
 __all__ = ["adjustments"]
 
