@@ -25,6 +25,7 @@ from .samples import samples_in_windows
 from .signals import Signals
 from .snapshots import Alternative, Prepared, digest
 from .spec import CampaignSpec, WindowSpec
+from .stamps import place_samples
 
 __all__ = ["prepare"]
 
@@ -188,9 +189,15 @@ class _Preparation(Signals):
             for w, (a, b) in enumerate(found.bounds)
         )
         if self.lab is not None:
-            table, hashes, notice = samples_in_windows(table, found, log, self.lab, hashes)
-            if notice is not None:
-                self.add(notice)
+            declared = self.spec.lab.options.get("interval") if self.spec.lab is not None else None
+            borders = (
+                np.array([]) if log.time is None else np.append(seconds_of(log.time), np.inf)[found.bounds].ravel()
+            )
+            lab, assumed = place_samples(self.lab, borders, declared)
+            table, hashes, outside = samples_in_windows(table, found, log, lab, hashes)
+            for notice in (assumed, outside):
+                if notice is not None:
+                    self.add(notice)
         shown = {}
         for name, rows in states.items():
             shown[name] = np.array([rows[a:b].all() for a, b in found.bounds])

@@ -336,6 +336,12 @@ class _Reader(Texts):
             if r.sample and not lab_written:
                 hint = "add lab: with the name of the file"
                 self.refuse(("meters", tag, "reading", "sample"), "lab-missing", f"no lab: gives {tag}", hint, key=True)
+        if lab_written and not windows_written and spec.lab is not None and spec.lab.options.get("interval"):
+            words = "interval says which window a sample belongs to, and there are no windows"
+            hint = (
+                "write before: and after: instead, e.g. before: 1 h, after: 0 min for a sample collected over that hour"
+            )
+            self.refuse(("lab", "interval"), "interval-without-windows", words, hint, key=True)
         if lab_written and not spec.samples and spec.lab is not None:
             hint = "write reading: {sample: true} at the meters whose values it gives"
             self.refuse(("lab",), "lab-unused", "no meter takes its values from the laboratory's file", hint, key=True)

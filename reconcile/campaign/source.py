@@ -10,10 +10,11 @@ from typing import Any
 import numpy as np
 
 from ..case.spec import CaseSpec
-from ..errors import InputError, Location, Notice, Problem, Problems, did_you_mean
+from ..errors import InputError, Location, Problem, Problems, did_you_mean
 from ..readings.table import ReadingsTable
 from ..units import factor_offset
 from .spec import CampaignSpec
+from .stamps import at_starts
 
 __all__ = ["plan_of", "read_log", "read_samples"]
 
@@ -45,9 +46,10 @@ def read_log(spec: CaseSpec, readings: Any, readers: Mapping[str, Any]) -> Readi
     """
     plan, tags = plan_of(spec), tuple(spec.meters)
     needed = plan.columns(tags)
+    from_file = readings is None or isinstance(readings, (str, Path))
     if isinstance(readings, ReadingsTable):
         table = readings
-    elif readings is None or isinstance(readings, (str, Path)):
+    elif from_file:
         table = _from_file(spec, plan, readings, needed, readers)
     else:
         table = _from_memory(readings, needed)
@@ -59,7 +61,14 @@ def read_log(spec: CaseSpec, readings: Any, readers: Mapping[str, Any]) -> Readi
             units={headers.get(c, c): u for c, u in table.units.items()},
         )
     _check_columns(spec, plan, table, needed)
-    return table
+    if not from_file:
+        return table
+    held = spec.trajectory.held(spec.meters) if spec.trajectory is not None else ()
+    instants = {*held, *(t for t, r in plan.readings.items() if r.counter is not None or r.level is not None)}
+    named = spec.readings if isinstance(spec.readings, dict) else {}
+    window = plan.windows.length if plan.windows is not None else None
+    joined = plan.windows is not None or plan.lab is not None
+    return at_starts(table, named.get("interval"), instants, window, joined=joined)
 
 
 def _from_file(
@@ -87,20 +96,7 @@ def _from_file(
             *(c for c in needed if c not in kept and c not in (given.get("label_column"), given.get("time_column"))),
         ]
     expected = tuple(plan.of(t).column or t for t in spec.meters if not (plan.lab and plan.of(t).sample))
-    return _at_starts(read_readings(readings, readers=readers, expected=expected, **given), given.get("interval"))
-
-
-def _at_starts(table: ReadingsTable, interval: str | None) -> ReadingsTable:
-    """Move stamps that stand at the end, or in the middle, of the interval of a mean to its start."""
-    if interval not in ("end", "centre") or table.time is None or len(table) < 2:
-        return table
-    import pandas as pd
-
-    step = pd.Series(table.time).diff().median()
-    moved = table.time - (step if interval == "end" else step / 2)
-    where = "ends" if interval == "end" else "middles"
-    words = f"stamps are the {where} of intervals of {step.total_seconds() / 60:g} min: moved to their starts"
-    return replace(table, time=moved, notices=(*table.notices, Notice("stamps-moved", words)))
+    return read_readings(readings, readers=readers, expected=expected, **given)
 
 
 def _from_memory(readings: Any, needed: tuple[str, ...]) -> ReadingsTable:
