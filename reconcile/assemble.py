@@ -90,7 +90,7 @@ def assemble(path: str | Path, plugins: Plugins) -> Assembled:
         problems.raise_if_any()
     if spec.trajectory is not None:
         _inventories(spec, spec.trajectory, system, problems)
-    check_references(spec, system.units(), problems)
+    check_references(spec, system.units(), problems, lambda name: plugins.missing(name, network, chosen_options))
     problems.raise_if_any()
     stays = spec.trajectory.constant_errors if spec.trajectory else ()
     shared = [cause for s in (*spec.shared_errors.values(), *stays) for cause in _causes(s)]

@@ -113,6 +113,27 @@ class Plugins:
             )
         return self.domains[name].domain
 
+    def missing(self, name: str, network: Network, chosen: Sequence[tuple[str, Any]]) -> str | None:
+        """Ask the chosen domains what the case must state before a variable is there; see `Domain.missing`.
+
+        Raises
+        ------
+        PluginError
+            If a domain fails, or answers with something else than a sentence.
+        """
+        for domain, options in chosen:
+            info = self.domains[domain]
+            with named(info.plugin, f"domain {domain!r}, asked for {name!r},"):
+                words = info.domain.missing(name, network, options)
+            if words is not None and not isinstance(words, str):
+                kind = type(words).__name__
+                raise PluginError(
+                    info.plugin, f"domain {domain!r}: missing() must return a sentence or None, not {kind}"
+                )
+            if words:
+                return told(words)
+        return None
+
     def build(self, network: Network, system: System, chosen: Sequence[tuple[str, Any]]) -> None:
         """Let the chosen domains write their balances, then the plugins their further faults.
 

@@ -87,6 +87,25 @@ class Domain:
         """
         raise NotImplementedError
 
+    def missing(self, name: str, network: Network, options: Any) -> str | None:
+        """Say what the case must state before a variable is there; asked when a case reads one that is not.
+
+        Parameters
+        ----------
+        name : str
+            Name that no domain declared, e.g. ``offgas.oxygen.fraction``.
+        network : Network
+            Read-only.
+        options : pydantic model or None
+            The checked options of this domain.
+
+        Returns
+        -------
+        str or None
+            One sentence: what is not stated, and what to write. None where this domain knows nothing of that name.
+        """
+        return None
+
 
 @dataclass(frozen=True)
 class Section:

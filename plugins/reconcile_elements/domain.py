@@ -10,6 +10,7 @@ from reconcile import Domain, Network, System
 
 from .balances import write
 from .layout import make_plan
+from .missing import missing_variable
 from .options import ElementsNode, ElementsOptions, ElementsStream
 from .refusal import Refusal
 
@@ -56,3 +57,7 @@ class Elements(Domain):
             write(make_plan(network, options), system)
         except Refusal as error:
             raise ValueError(str(error)) from error  # what the host takes for a refusal of the case
+
+    def missing(self, name: str, network: Network, options: ElementsOptions) -> str | None:
+        """Ask for the basis of a gas, or for the conditions of its volume, that a variable waits for."""
+        return missing_variable(name, network, options)

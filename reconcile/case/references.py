@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from typing import Any
 
 from ..errors import Location, Problem, Problems, did_you_mean
@@ -13,7 +13,12 @@ from .spec import CaseSpec
 __all__ = ["check_references"]
 
 
-def check_references(spec: CaseSpec, variables: Mapping[str, str], problems: Problems) -> None:
+def check_references(
+    spec: CaseSpec,
+    variables: Mapping[str, str],
+    problems: Problems,
+    missing: Callable[[str], str | None] = lambda name: None,
+) -> None:
     """Check names and units of meters, known, bounds, design and figures.
 
     Parameters
@@ -23,8 +28,10 @@ def check_references(spec: CaseSpec, variables: Mapping[str, str], problems: Pro
         All variables of the system, faults left out.
     problems : Problems
         Takes every mistake at its place in the case.
+    missing : callable
+        ``missing(name) -> sentence or None``: what the domains say of a variable that is not there.
     """
-    checker = _Checker(spec, variables, problems)
+    checker = _Checker(spec, variables, problems, missing)
     for tag, meter in spec.meters.items():
         for name, _ in meter.reads:
             checker.variable(name, meter.unit, ("meters", tag, "reads"), ("meters", tag, "unit"), f"meter {tag!r}")
@@ -45,8 +52,10 @@ def check_references(spec: CaseSpec, variables: Mapping[str, str], problems: Pro
 
 
 class _Checker:
-    def __init__(self, spec: CaseSpec, variables: Mapping[str, str], problems: Problems) -> None:
-        self.spec, self.variables, self.problems = spec, variables, problems
+    def __init__(
+        self, spec: CaseSpec, variables: Mapping[str, str], problems: Problems, missing: Callable[[str], str | None]
+    ) -> None:
+        self.spec, self.variables, self.problems, self.missing = spec, variables, problems, missing
         self.quantities: dict[str, list[str]] | None = None
         self.unreadable: set[str] = set()
 
@@ -64,7 +73,7 @@ class _Checker:
         """Whether there is such a variable; otherwise a problem is noted."""
         if name in self.variables:
             return True
-        hint = self._glued(name) or self._nearest(name) or self._some()
+        hint = self.missing(name) or self._glued(name) or self._nearest(name) or self._some()
         self.problems.extend(
             [
                 Problem(
