@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 
 from .campaign import why_not
 from .numbers import plain, signed
-from .words import MARKS, explanation_sentences, verdict_line
+from .words import MARKS, explanations_in_words, remarks_on_explanations, verdict_line
 
 if TYPE_CHECKING:
     from ..results import Result
@@ -18,7 +18,7 @@ if TYPE_CHECKING:
 
 __all__ = ["render_html"]
 
-MOST_ROWS, MOST_STREAMS, WIDTH = 60, 40, 560
+MOST_ROWS, MOST_STREAMS, WIDTH = 60, 40, 680
 """Rows of a table, bars and streams of a figure that a notebook still shows; width of a figure in pixels."""
 
 
@@ -59,9 +59,10 @@ def render_html(result: Result) -> str:
         ]
         header = ("meter", "reads", "unit", "read", "adjusted", "±", "moved in ±", "checked", "z", "word")
         parts.append(_table("Readings", header, rows_))
-        told = explanation_sentences(s)
+        told = explanations_in_words(s)
         if told:
-            parts.append("<ol>" + "".join(f"<li>{escape(t)}</li>" for t in told) + "</ol>")
+            parts.append("<ol>" + "".join(f"<li>{escape(' '.join(lines))}</li>" for lines in told) + "</ol>")
+        parts += [f"<p>{escape(remark)}</p>" for remark in remarks_on_explanations(s)]
     if usable:
         parts += _figures(result)
     parts += [f"<p>{escape(c)}</p>" for c in result.cautions]

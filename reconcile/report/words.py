@@ -20,7 +20,6 @@ __all__ = [
     "MARKS",
     "Suspect",
     "alternative_name",
-    "explanation_sentences",
     "explanations_in_words",
     "fault_phrase",
     "label",
@@ -318,13 +317,6 @@ def remarks_on_explanations(snapshot: Snapshot, limit: int = 6) -> list[str]:
     if tests:
         out.append("To separate: " + "; ".join(tests) + ".")
     return out
-
-
-def explanation_sentences(snapshot: Snapshot, limit: int = 6) -> list[str]:
-    """All of it as sentences, one per explanation, then the remarks."""
-    return [" ".join(lines) for lines in explanations_in_words(snapshot, limit)] + remarks_on_explanations(
-        snapshot, limit
-    )
 
 
 def alternative_name(alternative: Alternative) -> str:

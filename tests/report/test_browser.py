@@ -2,20 +2,29 @@
 
 from __future__ import annotations
 
+import os
 import re
 import shutil
 from itertools import pairwise
 from pathlib import Path
 
 import pytest
-from plants import plant
+from plants import TANKS, plant, tanks
 
 import reconcile
 from reconcile.report.page import write_page
 
 ROOT = Path(__file__).resolve().parents[2]
 CHROMIUM = shutil.which("chromium") or shutil.which("chromium-browser")
-CASES = ("membrane_skid", "crystalliser", "isolated_kidney", "cooling_water")
+CASES = (
+    "membrane_skid",
+    "crystalliser",
+    "isolated_kidney",
+    "cooling_water",
+    "membrane_log",
+    "batch_tank",
+    "flotation_test",
+)
 
 pytestmark = [
     pytest.mark.browser,
@@ -45,6 +54,11 @@ def pages(tmp_path_factory):
     for name, rows, columns, snapshots in (("log", 1, 4, 200), ("campaign", 2, 6, 2000), ("plant", 8, 11, 1)):
         case = reconcile.load_case(plant(folder / name, rows, columns, snapshots=snapshots))
         made[name] = write_page(case.run(), folder / f"{name}.html", case=case)
+    (folder / "tanks.yaml").write_text(TANKS, "utf-8")
+    readings = tanks(96)
+    readings.loc[readings.index[30], "LH"] += 14
+    case = reconcile.load_case(folder / "tanks.yaml")
+    made["tied"] = write_page(case.run_trajectory(readings), folder / "tied.html", case=case)
     return made
 
 
@@ -72,7 +86,7 @@ def open_page(browser, pages):
         assert noise == []
 
 
-EVERY = (*CASES, "log", "campaign", "plant")
+EVERY = (*CASES, "log", "campaign", "plant", "tied")
 
 
 @pytest.mark.parametrize("name", EVERY)
@@ -88,7 +102,8 @@ def test_opens_with_every_figure_drawn(open_page, pages, name):
                     shapes: s.querySelectorAll("path,rect,line,circle,text").length, width: box.width, height: box.height};
         })"""
     )
-    assert len(drawn) >= 4
+    # Of the flotation test no balance can be formed, and no two readings can be compared.
+    assert len(drawn) >= (3 if name == "flotation_test" else 4)
     for d in drawn:
         assert d["title"]
         assert d["desc"]
@@ -96,6 +111,13 @@ def test_opens_with_every_figure_drawn(open_page, pages, name):
         assert d["width"] > 0
         assert d["height"] > 0
     titles = {d["title"] for d in drawn}
+    if name == "tied":
+        assert {
+            "Inventories at the start of each window",
+            "Readings over the windows",
+            "Do the readings agree?",
+        } <= titles
+        return
     assert {"How far each reading was moved", "The network", "What each reading's check is worth"} <= titles
     if name in ("log", "campaign", "isolated_kidney"):
         assert "Do the readings agree?" in titles
@@ -119,7 +141,7 @@ def test_nothing_runs_over_the_edge(open_page, name, width):
     assert beyond == []
 
 
-@pytest.mark.parametrize("name", CASES)
+@pytest.mark.parametrize("name", [*CASES, "tied"])
 def test_texts_of_figures_do_not_cover_each_other(open_page, name):
     page = open_page(name)
     clashes = page.evaluate(
@@ -140,7 +162,7 @@ def test_texts_of_figures_do_not_cover_each_other(open_page, name):
     assert clashes == []
 
 
-@pytest.mark.parametrize("name", ["membrane_skid", "plant"])
+@pytest.mark.parametrize("name", ["membrane_skid", "plant", "tied"])
 def test_texts_of_figures_stay_on_their_sheet(open_page, name):
     page = open_page(name)
     off = page.evaluate(
@@ -223,7 +245,7 @@ def test_a_snapshot_is_reached_from_the_table(open_page):
     assert page.text_content(".chooser output") == page.get_attribute(f"#{shown}", "data-label")
 
 
-@pytest.mark.parametrize("name", ["membrane_skid", "isolated_kidney"])
+@pytest.mark.parametrize("name", ["membrane_skid", "isolated_kidney", "membrane_log", "tied"])
 def test_everything_can_be_read_without_script(open_page, name):
     page = open_page(name, script=False)
     assert page.query_selector(".verdict p").is_visible()
@@ -272,7 +294,7 @@ AUDIT = """() => {
 
 
 @pytest.mark.parametrize("mode", ["light", "dark"])
-@pytest.mark.parametrize("name", ["membrane_skid", "isolated_kidney", "log"])
+@pytest.mark.parametrize("name", ["membrane_skid", "isolated_kidney", "log", "membrane_log", "batch_tank", "tied"])
 def test_audit_of_contrast_names_order_and_tables(open_page, name, mode):
     page = open_page(name, mode=mode)
     found = page.evaluate(AUDIT)
@@ -364,3 +386,36 @@ def test_a_figure_stands_alone_in_the_browser(browser, tmp_path):
     )
     assert fills >= 3
     page.close()
+
+
+# ------------------------------------------------------------------ the picture of the page
+
+PICTURE = ROOT / "datasets" / "membrane_skid" / "report.png"
+"""The picture in the README. To make it again, from the folder of the project:
+
+    REMAKE_PICTURE=1 python -m pytest -m browser tests/report/test_browser.py -k picture
+"""
+
+
+def test_the_picture_of_the_page_shows_what_the_page_is_today(browser, pages, tmp_path):
+    page = browser.new_page(viewport={"width": 1120, "height": 900}, device_scale_factor=1.25)
+    page.goto(pages["membrane_skid"].as_uri())
+    end = page.evaluate("document.querySelector('#network-figure').getBoundingClientRect().bottom + scrollY + 20")
+    target = PICTURE if os.environ.get("REMAKE_PICTURE") else tmp_path / "report.png"
+    clip = {"x": 0, "y": 0, "width": 1120, "height": round(end)}
+    target.write_bytes(page.screenshot(full_page=True, clip=clip))
+    page.close()
+    # Fonts and browsers differ a little from machine to machine: only the sizes are compared.
+    made, kept = size_of(target), size_of(PICTURE)
+    assert made[0] == kept[0] == 1400
+    assert made[1] == pytest.approx(kept[1], rel=0.1)
+    assert PICTURE.stat().st_size < 400_000
+    assert f"]({PICTURE.relative_to(ROOT).as_posix()})" in (ROOT / "README.md").read_text("utf-8")
+
+
+def size_of(path):
+    """Width and height of a PNG, from its header (ISO/IEC 15948, 11.2.2)."""
+    data = path.read_bytes()
+    assert data[:8] == b"\x89PNG\r\n\x1a\n"
+    assert data[12:16] == b"IHDR"
+    return int.from_bytes(data[16:20], "big"), int.from_bytes(data[20:24], "big")

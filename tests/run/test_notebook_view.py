@@ -56,6 +56,14 @@ def test_adjustments_and_network_are_shown_small(skid):
         assert f"<figcaption>{figure.title}</figcaption>" in html
 
 
+def test_explanations_are_numbered_and_remarks_stand_below(skid):
+    html = skid._repr_html_()
+    listed = re.search("<ol>(.*?)</ol>", html, re.DOTALL).group(1)
+    assert listed.startswith("<li>R reads high by 7.6 kg/h")
+    assert "Rejected" not in listed
+    assert "<p>Rejected: T alone" in html
+
+
 def test_nothing_is_fetched_and_nothing_reaches_out_of_the_fragment(skid):
     html = skid._repr_html_()
     view = Images(html)
