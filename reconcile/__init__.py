@@ -9,7 +9,7 @@ from .errors import InputError, MissingExtra, Notice, PluginError, ReconcileErro
 from .hookspecs import Domain, Section, hookimpl
 
 if TYPE_CHECKING:
-    from .export import load_corrected
+    from .corrected import load_corrected
     from .expression import Expression
     from .network import OUTSIDE, Network
     from .report.page import write_page
@@ -29,7 +29,7 @@ _LAZY = {
     "Result": "results",
     "Trajectory": "trajectory",
     "load_case": "run",
-    "load_corrected": "export",
+    "load_corrected": "corrected",
     "write_page": "report.page",
 }
 

@@ -13,7 +13,7 @@ from skid_logs import SKID, skid_log
 import reconcile.batch.stream
 from reconcile.adjust.batch import BLOCK
 from reconcile.cli import main
-from reconcile.export import load_corrected
+from reconcile.corrected import load_corrected
 
 
 @pytest.fixture
@@ -78,7 +78,7 @@ def test_every_row_of_the_summary_table_can_be_counted_again(run):
     assert beyond[where[0] : where[1] + 1].all()
     words = found.evidence["word"].value_counts().to_dict()
     assert words == found.summary["campaign"]["words"]
-    explained = found.evidence[found.evidence["explanation"].notna()]
+    explained = found.evidence[found.evidence["explanation"] != ""]
     assert len(explained) == found.summary["campaign"]["explained"]
     assert set(explained["explanation"]) & {"R"}
 

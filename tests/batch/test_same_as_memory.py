@@ -14,7 +14,8 @@ from skid_logs import SKID, TAGS, skid_log
 from reconcile import load_case
 from reconcile.adjust.batch import BLOCK
 from reconcile.batch import Unsuited, run_streamed
-from reconcile.export import load_corrected, write
+from reconcile.corrected import load_corrected
+from reconcile.export import write
 from reconcile.results import word_of_evidence
 
 DATASETS = Path(__file__).resolve().parents[2] / "datasets"

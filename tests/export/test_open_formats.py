@@ -11,7 +11,8 @@ from click.testing import CliRunner
 
 import reconcile
 from reconcile.cli import main
-from reconcile.export import load_corrected, write
+from reconcile.corrected import load_corrected
+from reconcile.export import write
 
 frictionless = pytest.importorskip(
     "frictionless", reason="the validator of the table-package standard is not installed"

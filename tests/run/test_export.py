@@ -10,7 +10,8 @@ import pandas as pd
 import pytest
 
 import reconcile
-from reconcile.export import load_corrected, write
+from reconcile.corrected import load_corrected
+from reconcile.export import write
 
 NAMES = {
     "adjusted.csv", "balances.csv", "covariance.npz", "datapackage.json", "evidence.csv", "figures.csv", "sigmas.csv",

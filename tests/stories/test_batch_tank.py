@@ -13,7 +13,8 @@ import pytest
 
 import reconcile
 from reconcile.campaign.variants import what_ifs
-from reconcile.export import load_corrected, write
+from reconcile.corrected import load_corrected
+from reconcile.export import write
 
 
 @pytest.fixture

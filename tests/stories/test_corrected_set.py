@@ -14,7 +14,8 @@ import pandas as pd
 import pytest
 
 import reconcile
-from reconcile.export import load_corrected, write
+from reconcile.corrected import load_corrected
+from reconcile.export import write
 
 TAGS = list("FRDPTB")
 NAMES = {"F": "feed.flow", "R": "recycle.flow", "D": "discharge.flow", "P": "permeate.flow", "T": "retentate.flow",

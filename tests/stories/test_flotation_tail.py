@@ -9,7 +9,8 @@ import pytest
 
 import reconcile
 from reconcile.campaign.variants import bound_checks, moves
-from reconcile.export import load_corrected, write
+from reconcile.corrected import load_corrected
+from reconcile.export import write
 
 FEED, CONCENTRATE = 0.80, 8.9
 
