@@ -176,3 +176,21 @@ meters:
     together = reconcile.load_case(write_case(HEAD + text.replace("SIGMA", "0.5 mL/min") + shared))
     assert together.run(read).objective[0] == pytest.approx(0.17, abs=5e-3)
     assert together.coverage.line("UF").smallest == pytest.approx(2.4, abs=0.05)
+
+
+def test_ultrafiltration_by_difference_and_weighed(write_case):
+    # Invented: 8.3 mL/min as the difference of two flows of 500 with 2.5 each is 8.3 +/- 3.5 (sqrt 2 times 2.5).
+    text = """
+domains: {fluid: {unit: mL/min}}
+streams: {in: outside -> bath, uf: outside -> bath, out: bath -> outside}
+meters:
+  IN:  {reads: in.flow, unit: mL/min, sigma: 2.5 mL/min}
+  UF:  {reads: uf.flow, unit: mL/min, sigma: 0.2 mL/min}
+  OUT: {reads: out.flow, unit: mL/min, sigma: 2.5 mL/min}
+"""
+    read = {"IN": 500.0, "UF": 8.3, "OUT": 508.3}
+    weighed = run(write_case, text, read).snapshot(0).variable("uf.flow")
+    assert (weighed.adjusted, weighed.sigma) == pytest.approx((8.3, 0.2), abs=5e-3)
+    by_difference = run(write_case, text, {**read, "UF": np.nan}).snapshot(0).variable("uf.flow")
+    assert (by_difference.adjusted, by_difference.sigma) == pytest.approx((8.3, 3.5), abs=0.05)
+    assert by_difference.klass == "calculated"
