@@ -253,6 +253,8 @@ def _log(case: Case, readings: str | Path | None, least: int) -> Log:
         raise Unsuited("")
     options = spec.readings if isinstance(spec.readings, dict) else {}
     given = {k: v for k, v in options.items() if k != "file"}
+    if given.get("interval") in ("end", "centre"):
+        raise Unsuited("its stamps are moved to the starts of their intervals")
     headers = tuple(plan.of(t).column or t for t in case.tags)
     log = open_log(path, given, headers, case._readers(), least)
     for layout in log.layouts:

@@ -7,6 +7,7 @@ import pandas as pd
 import pytest
 
 import reconcile
+from reconcile.batch import Unsuited, run_streamed
 
 CASE = """\
 reconcile: 1
@@ -112,6 +113,17 @@ def test_rows_that_are_snapshots_themselves_are_not_asked(tmp_path):
     text = text.replace(', reading: {level: {unit: "%%", holds: 2 kg}}', "")
     (tmp_path / "case.yaml").write_text(text % ("logs/*.csv", ""))
     assert reconcile.load_case(tmp_path).run().size == 68
+
+
+def test_a_log_whose_stamps_move_is_not_worked_in_pieces(tmp_path):
+    two_files(tmp_path)
+    text = CASE.replace(", reading: {counter: {pulse: 1 kg}}", "").replace("windows: {length: 1 h, steady: none}\n", "")
+    text = text.replace(', reading: {level: {unit: "%%", holds: 2 kg}}', "")
+    (tmp_path / "case.yaml").write_text(text % ("logs/a_fine.csv", ", interval: end"))
+    case = reconcile.load_case(tmp_path)
+    assert case.run().labels[0] == "2025-05-12 06:00:00"
+    with pytest.raises(Unsuited, match="moved to the starts"):
+        run_streamed(case, None, tmp_path / "out", least=0)
 
 
 def test_a_counter_has_no_middle_of_an_interval(tmp_path):
