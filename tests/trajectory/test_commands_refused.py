@@ -9,7 +9,7 @@ from reconcile.cli import main
 
 @pytest.mark.parametrize(
     ("option", "code"),
-    [(["--report"], "no-report"), (["--suspects", "exclude"], "no-decisions"), (["--pictures", "svg"], "no-report")],
+    [(["--suspects", "exclude"], "no-decisions"), (["--suspects", "compensate"], "no-decisions")],
 )
 def test_options_that_do_not_fit(tmp_path, option, code):
     (tmp_path / "case.yaml").write_text(TRAIN, "utf-8")

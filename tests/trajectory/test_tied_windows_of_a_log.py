@@ -292,3 +292,19 @@ def test_what_a_log_cannot_mean_is_refused_at_its_place(case, name):
     assert hits, str(caught.value)
     assert words in str(hits[0])
     assert hits[0].where.line is not None
+
+
+def test_false_alarms_of_a_log_are_as_rare_as_stated(case):
+    tied, rng, alarms = case(("pulse: 0.5 kg", "pulse: 0.001 kg")), np.random.default_rng(77), 0
+    for seed in range(200):
+        frame, flow, _ = log_of(6, 5000 + seed)
+        # What the sigma of a meter stands for is one error for each window; for a level, one more for each reading.
+        drift = np.append(np.repeat(rng.normal(size=(6, 3)), PER_WINDOW, axis=0), np.zeros((1, 3)), axis=0)
+        frame["F1"] = np.append(0.0, np.cumsum(flow[:-1, 0] + drift[:-1, 0])) / 60.0 / 0.001
+        frame["F2"] += 0.8 * drift[:, 1]
+        frame["F3"] += drift[:, 2]
+        frame["L1"] += 0.4 / 2.5 * rng.normal(size=len(frame))
+        frame["L2"] += 0.5 / 1.9 * rng.normal(size=len(frame))
+        alarms += tied.run_trajectory(frame.set_index("time")).test.status == "disagrees"
+    # 5 % of 200; the central 99.9 % of the binomial lies between 2 and 21.
+    assert 2 <= alarms <= 21
