@@ -12,7 +12,9 @@ from ..errors import InputError, PluginError, Problem, SolveError
 from .common import DONE, FAULTS_FOUND, ascii_only, case_argument, errors_to_exit_codes, plugin_option
 
 if TYPE_CHECKING:
+    from ..results import Result
     from ..run import Case
+    from ..trajectory import Trajectory
 
 __all__ = ["run"]
 
@@ -88,14 +90,6 @@ def run(
     reasons = dict(zip(exclude, because, strict=True))
     formats = ("csv", *(["parquet"] if parquet else []), *(["xlsx"] if xlsx else []))
     if loaded.parts.spec.trajectory is not None:
-        if report or pictures:
-            raise InputError(
-                Problem(
-                    "no-report",
-                    "windows that are tied by inventories have no page yet",
-                    "leave --report and --pictures out, or remove the inventories to see each window alone",
-                )
-            )
         if suspects != "flag":
             raise InputError(
                 Problem(
@@ -104,7 +98,7 @@ def run(
                     'leave a suspect out with --exclude TAG --because "..." instead',
                 )
             )
-        return _follow(loaded, readings, out, reasons, formats, strict=strict, as_json=as_json)
+        return _follow(loaded, readings, out, reasons, formats, report, pictures, strict=strict, as_json=as_json)
     page = report or pictures is not None
     if page and (chunk is not None or restart):
         raise InputError(
@@ -153,15 +147,7 @@ def run(
     if out is not None:
         files = write(result, out, formats=formats)
         click.echo(f"Wrote {len(files)} files to {out}.", err=as_json)
-    if report or pictures:
-        from ..report.page import write_figures, write_page
-
-        folder = out if out is not None else loaded.parts.spec.path.parent
-        if report:
-            click.echo(f"Wrote {write_page(result, folder / 'report.html', case=loaded)}.", err=as_json)
-        if pictures:
-            drawn = write_figures(result, folder / "pictures", pictures, case=loaded)
-            click.echo(f"Wrote {len(drawn)} pictures to {folder / 'pictures'}.", err=as_json)
+    _draw(result, loaded, out, report, pictures, as_json=as_json)
     return FAULTS_FOUND if strict and result.suspicious.any() else DONE
 
 
@@ -171,6 +157,8 @@ def _follow(
     out: Path | None,
     reasons: dict[str, str],
     formats: tuple[str, ...],
+    report: bool,
+    pictures: Literal["svg", "png"] | None,
     *,
     strict: bool,
     as_json: bool,
@@ -187,4 +175,27 @@ def _follow(
     if out is not None:
         files = write(found, out, formats=formats)
         click.echo(f"Wrote {len(files)} files to {out}.", err=as_json)
+    _draw(found, loaded, out, report, pictures, as_json=as_json)
     return FAULTS_FOUND if strict and found.test.status == "disagrees" else DONE
+
+
+def _draw(
+    found: Result | Trajectory,
+    loaded: Case,
+    out: Path | None,
+    report: bool,
+    pictures: Literal["svg", "png"] | None,
+    *,
+    as_json: bool,
+) -> None:
+    """Write the page and its figures, as far as they are asked for: into --out, else beside the case."""
+    if not report and not pictures:
+        return
+    from ..report.page import write_figures, write_page
+
+    folder = out if out is not None else loaded.parts.spec.path.parent
+    if report:
+        click.echo(f"Wrote {write_page(found, folder / 'report.html', case=loaded)}.", err=as_json)
+    if pictures:
+        drawn = write_figures(found, folder / "pictures", pictures, case=loaded)
+        click.echo(f"Wrote {len(drawn)} pictures to {folder / 'pictures'}.", err=as_json)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections import Counter
+from collections.abc import Mapping
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -101,6 +102,18 @@ def from_the_log(result: Result, snapshot: int | None = None) -> list[str]:
         else:
             out.append(table((part.header[0].upper(), *part.header[1:]), part.rows, left=part.left))
         out += [wrap(note) for note in part.notes]
+    return out
+
+
+def last_lines(excluded: Mapping[str, str], notices: tuple[Notice, ...], cautions: tuple[str, ...]) -> list[str]:
+    """What stands at the end of every text: what was left out, notices, cautions."""
+    out: list[str] = []
+    if excluded:
+        out += ["", "LEFT OUT", *(wrap(f"{tag}: {why}") for tag, why in excluded.items())]
+    if notices:
+        out += ["", "NOTICES", *(wrap(line) for line in grouped_notices(notices))]
+    for caution in cautions:
+        out += ["", wrap(f"Caution: {caution}", "")]
     return out
 
 

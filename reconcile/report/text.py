@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 from ..mixups import mixups_of
 from ..refit import figures_if
-from .campaign import from_the_log, grouped_notices, not_simply_read, verdict_line_of, why_not
+from .campaign import from_the_log, last_lines, not_simply_read, verdict_line_of, why_not
 from .history import history_section
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
@@ -252,13 +252,6 @@ def _figures(figures: Sequence[FigureValue]) -> str:
 
 
 def _closing(result: Result) -> list[str]:
-    out: list[str] = []
-    if result.excluded:
-        out += ["", "LEFT OUT", *(wrap(f"{tag}: {why}") for tag, why in result.excluded.items())]
-    if result.decisions:
-        out += ["", "DECIDED", *(wrap(f"{result.labels[i]}: {d.words}") for i, d in result.decisions.items())]
-    if result.notices:
-        out += ["", "NOTICES", *(wrap(line) for line in grouped_notices(result.notices))]
-    for caution in result.cautions:
-        out += ["", wrap(f"Caution: {caution}", "")]
-    return out
+    decided = [wrap(f"{result.labels[i]}: {d.words}") for i, d in result.decisions.items()]
+    head = ["", "DECIDED", *decided] if decided else []
+    return [*head, *last_lines(result.excluded, result.notices, result.cautions)]

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from .campaign import last_lines
 from .layout import table, to_ascii, wrap
 from .numbers import plain, signed
 from .words import (
@@ -132,12 +133,10 @@ def render_trajectory(found: Trajectory, *, ascii_only: bool = False) -> str:
         out += ["", wrap(beyond)]
     told, remarks = explanations_of_trajectory(found)
     if told:
-        out += ["", "  EXPLANATIONS", *(wrap(line, "    ") for lines in told for line in lines)]
+        out += ["", "EXPLANATIONS", *(wrap(line, "    ") for lines in told for line in lines)]
     out += [wrap(line) for line in remarks]
     out += [line for sentence in limits_of_trajectory(found) for line in ("", wrap(sentence))]
-    out += [wrap(f"{tag} was left out: {why}.") for tag, why in found.excluded.items()]
-    out += [wrap(str(n)) for n in found.notices]
-    out += [wrap(c) for c in found.cautions]
+    out += last_lines(found.excluded, tuple(found.notices), tuple(found.cautions))
     text = "\n".join(out) + "\n"
     return to_ascii(text) if ascii_only else text
 
