@@ -37,7 +37,9 @@ def test_a_fraction_of_a_gas_of_which_nothing_is_said(write_case):
     with pytest.raises(reconcile.InputError) as caught:
         reconcile.load_case(write_case(text))
     message = str(caught.value)
-    assert "there is no variable 'offgas.oxygen.fraction'; offgas has: oxygen, carbon_dioxide" in message
+    assert "there is no variable 'offgas.oxygen.fraction'" in message
+    # The question that decides is asked: wet or dry.
+    assert "Write gas: dry (water taken out before the analyser) or gas: wet" in message
 
 
 def test_a_gas_volume_of_which_nothing_is_said(write_case):
