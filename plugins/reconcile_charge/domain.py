@@ -43,7 +43,8 @@ class Charge(Domain):
     )
     caution: ClassVar[str] = (
         "A current that does not balance may be an earth fault or a leakage current. Work on electrical installations is "
-        "for qualified persons under local codes; never open the secondary circuit of a current transformer to check it."
+        "for qualified persons under local codes; never open the secondary circuit of a current transformer to check it. "
+        "An ion balance that closes does not make water fit to drink or to discharge: limits and licensed laboratories do."
     )
 
     def build(self, network: Network, system: System, options: ChargeOptions) -> None:
