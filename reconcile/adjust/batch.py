@@ -14,7 +14,7 @@ Blocks are computed one by one, so a snapshot's numbers depend only on which blo
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -31,6 +31,12 @@ Bools = npt.NDArray[np.bool_]
 
 BLOCK = 2048
 """Snapshots in a block: its work arrays stay in the cache of one core."""
+
+SPAN = 16 * BLOCK
+"""Snapshots whose patterns of absent readings are worked out together: many blocks share them."""
+
+TOGETHER = 4096
+"""Patterns whose uncertainties are worked out at once: what that takes does not grow with their number."""
 
 TIE = 1e-9
 """Relative difference between two test values below which they count as equal."""
@@ -86,26 +92,34 @@ def is_linear(problem: Problem) -> bool:
     return not problem.value_dependent and problem.equations(np.zeros(problem.columns.size)).is_linear
 
 
+COMPLETE, HARD = -1, -2
+"""Patterns that belong to no group: nothing is absent, or the exact projection decides."""
+
+
 @dataclass
 class _Patterns:
-    """What absent readings do, for P patterns of one block."""
+    """What absent readings do, for P patterns: whose group they belong to, at which place there, and what is left."""
 
     keys: list[int] | list[bytes]
     absent: Bools
     checks: Ints
     scale: Array
     sigmas: Array
-    groups: list[_Alike]
+    group_of: Ints
+    place: Ints
+    groups: list[_Alike] = field(default_factory=list)
+    of_tests: Array = field(default_factory=lambda: np.zeros((0, 0)))
+    untested: Bools = field(default_factory=lambda: np.zeros(0, dtype=bool))
+    partial: Bools = field(default_factory=lambda: np.zeros(0, dtype=bool))
+    unknown: list[tuple[int, Bools]] = field(default_factory=list)
 
 
 @dataclass(frozen=True)
 class _Alike:
     """Patterns with the same number of absent readings, and the factors that put values in their places."""
 
-    members: Ints
     index: Ints
     inverse: list[list[Array]]
-    hard: Bools
 
 
 @dataclass(frozen=True)
@@ -237,16 +251,25 @@ class Batch:
         z = np.full((self.tests, count), np.nan) if tests else None
         codes: dict[int | bytes, int] = {}
         found: list[tuple[Bools, Bools, Array]] = []
-        for start in range(0, count, BLOCK):
-            part = slice(start, min(start + BLOCK, count))
-            y = np.ascontiguousarray(readings[self.present, part])
-            patterns, which = self._block(y, values[:, part], objective[part], checks[part], largest[part], suspect[part],
-                                          None if z is None else z[:, part])  # fmt: skip
+        for span in range(0, count, SPAN):
+            until = min(span + SPAN, count)
+            patterns, which = self._patterns(np.isnan(readings[self.present, span:until]))
+            for start in range(span, until, BLOCK):
+                part = slice(start, min(start + BLOCK, until))
+                y = np.ascontiguousarray(readings[self.present, part])
+                own = which[part.start - span : part.stop - span]
+                self._block(y, patterns, own, values[:, part], objective[part], largest[part], suspect[part],
+                            None if z is None else z[:, part])  # fmt: skip
+            checks[span:until] = patterns.checks[which]
             before = len(codes)
-            number = np.array([codes.setdefault(key, len(codes)) for key in patterns.keys], dtype=np.int64)
-            new = np.flatnonzero(number >= before)
+            # Numbers in the order in which blocks show the patterns.
+            _, first = np.unique(which, return_index=True)
+            shown = np.argsort(first // BLOCK, kind="stable")
+            number = np.empty(len(patterns.keys), dtype=np.int64)
+            number[shown] = [codes.setdefault(patterns.keys[p], len(codes)) for p in shown.tolist()]
+            new = shown[number[shown] >= before]
             found.append((patterns.absent[new], patterns.scale[new] > 0, patterns.sigmas[new]))
-            pattern[part] = number[which]
+            pattern[span:until] = number[which]
         absent = np.ones((len(codes), self.readings), dtype=bool)
         checked = np.zeros((len(codes), self.readings), dtype=bool)
         sigmas = np.empty((len(codes), self.direct.size))
@@ -257,10 +280,17 @@ class Batch:
         return BatchResult(values, objective, checks, suspect, largest, z, pattern, absent, checked, sigmas)
 
     def _block(
-        self, y: Array, values: Array, objective: Array, checks: Ints, largest: Array, suspect: Ints, z: Array | None
-    ) -> tuple[_Patterns, Ints]:
+        self,
+        y: Array,
+        patterns: _Patterns,
+        which: Ints,
+        values: Array,
+        objective: Array,
+        largest: Array,
+        suspect: Ints,
+        z: Array | None,
+    ) -> None:
         gone = np.isnan(y)
-        patterns, which = self._patterns(gone)
         if gone.any():
             self._fill(y, gone, patterns, which)
         residual = self.form @ y - self.target
@@ -269,9 +299,7 @@ class Batch:
         x = y - self.to_move @ residual
         x -= self.to_move @ (self.form @ x - self.target)
         self._show(x, patterns, which, values)
-        checks[:] = patterns.checks[which]
         self._test(self.to_scaled[self.tested_rows] @ residual, patterns, which, largest, suspect, z)
-        return patterns, which
 
     def _show(self, x: Array, patterns: _Patterns, which: Ints, values: Array) -> None:
         if np.array_equal(self.direct, np.arange(len(x))):
@@ -280,9 +308,11 @@ class Batch:
             values[:] = self.constant[:, None]
             values[self.direct >= 0] = x[self.direct[self.direct >= 0]]
             values[self.calculated >= 0] = self.recover @ x + self.recovered
-        unknown = np.isnan(patterns.sigmas)
-        for j in np.flatnonzero(unknown.any(axis=0)):
-            values[j, np.ascontiguousarray(unknown[:, j])[which]] = np.nan
+        snapshots = np.flatnonzero(patterns.partial[which])
+        if snapshots.size:
+            own = which[snapshots]
+            for j, unknown in patterns.unknown:
+                values[j, snapshots[unknown[own]]] = np.nan
 
     def _test(
         self, scaled: Array, patterns: _Patterns, which: Ints, largest: Array, suspect: Ints, z: Array | None
@@ -290,16 +320,16 @@ class Batch:
         if not self.tested.size:
             largest[:], suspect[:] = np.nan, -1
             return
-        scale = patterns.scale[:, self.tested_rows]
-        scaled *= scale.T if len(scale) == 1 else scale.T[:, which]
+        scale = patterns.of_tests
+        scaled *= scale if scale.shape[1] == 1 else scale.take(which, axis=1)
         size = np.abs(scaled)
         most = np.maximum.reduce(size, axis=0)
         first = _first(size >= most * (1 - TIE))
-        none = ~np.any(scale > 0, axis=1)[which]
+        none = patterns.untested[which]
         largest[:] = np.where(none, np.nan, scaled[first, np.arange(first.size)])
         suspect[:] = np.where(none, -1, self.tested[first])
         if z is not None:
-            z[self.tested_of] = np.where((scale > 0).T[:, which], scaled, np.nan)
+            z[self.tested_of] = np.where((scale > 0)[:, which], scaled, np.nan)
 
     def _without(self, absent: Bools) -> Adjuster:
         gone = np.asarray(absent, dtype=bool)[self.present]
@@ -351,18 +381,29 @@ class Batch:
             np.full(count, self.adjuster.checks, dtype=np.int64),
             np.tile(self.base_scale, (count, 1)),
             np.tile(self.base_sigmas, (count, 1)),
-            [],
+            np.full(count, COMPLETE, dtype=np.int64),
+            np.zeros(count, dtype=np.int64),
         )
         number = absent.sum(axis=1)
         for k in np.unique(number[number > 0]).tolist():
             rows = np.flatnonzero(number == k)
             index = np.nonzero(absent[rows])[1].reshape(rows.size, k)
             inverse, hard = self._factor(index)
-            hard = hard | self._downdate(table, rows, index, inverse)
-            table.groups.append(_Alike(rows, index, inverse, hard))
+            for start in range(0, rows.size, TOGETHER):
+                some = slice(start, start + TOGETHER)
+                part = [[entry[some] for entry in row] for row in inverse]
+                hard[some] |= self._downdate(table, rows[some], index[some], part)
+            table.group_of[rows] = np.where(hard, HARD, len(table.groups))
+            table.place[rows] = np.arange(rows.size)
+            table.groups.append(_Alike(index, inverse))
             for p in rows[hard].tolist():
                 exact = self._exact(absent[p])
                 table.checks[p], table.scale[p], table.sigmas[p] = exact.checks, exact.scale, exact.sigmas
+        table.of_tests = np.ascontiguousarray(table.scale[:, self.tested_rows].T)
+        table.untested = ~np.asarray(np.any(table.of_tests > 0, axis=0))
+        lost = np.isnan(table.sigmas)
+        table.partial = np.asarray(lost.any(axis=1))
+        table.unknown = [(j, np.ascontiguousarray(lost[:, j])) for j in np.flatnonzero(lost.any(axis=0)).tolist()]
         return table
 
     def _factor(self, index: Ints) -> tuple[list[list[Array]], Bools]:
@@ -445,27 +486,19 @@ class Batch:
         mean = np.where(there, y, 0.0).sum(axis=1) / np.maximum(count, 1)
         place = np.where(count > 0, mean, self.typical)
         np.copyto(y, np.broadcast_to(place[:, None], y.shape), where=gone)
-        order = np.argsort(which, kind="stable")
-        ends = np.append(0, np.cumsum(np.bincount(which, minlength=len(patterns.absent))))
-        place_of = np.empty(len(patterns.absent), dtype=np.int64)
-        easy = []
-        for g in patterns.groups:
-            place_of[:] = -1
-            place_of[g.members[~g.hard]] = np.flatnonzero(~g.hard)
-            local = place_of[which]
-            snapshots = np.flatnonzero(local >= 0)
-            easy.append((snapshots, local[snapshots]))
+        group = patterns.group_of[which]
+        members = [np.flatnonzero(group == g) for g in range(len(patterns.groups))]
         hard = []
-        for g in patterns.groups:
-            for p in np.flatnonzero(g.hard).tolist():
-                k = int(g.members[p])
-                hard.append((g.index[p], order[ends[k] : ends[k + 1]], self._exact(patterns.absent[k]).bias))
+        exact = np.flatnonzero(group == HARD)
+        for p in np.unique(which[exact]).tolist():
+            own = exact[which[exact] == p]
+            hard.append((np.flatnonzero(patterns.absent[p]), own, self._exact(patterns.absent[p]).bias))
         # The second round removes what rounding left where a placeholder was far off.
         for _ in range(2):
             residual = self.form @ y - self.target
             scaled = self.to_scaled @ residual
-            for g, (snapshots, local) in zip(patterns.groups, easy, strict=True):
-                self._remove(y, scaled, snapshots, local, g)
+            for snapshots, alike in zip(members, patterns.groups, strict=True):
+                self._remove(y, scaled, snapshots, patterns.place[which[snapshots]], alike)
             for index, own, bias in hard:
                 y[index[:, None], own] -= bias @ (self.to_parity @ residual[:, own])
 
