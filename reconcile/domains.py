@@ -17,7 +17,7 @@ from typing import TYPE_CHECKING, Any, Literal
 import pluggy
 
 from . import hookspecs
-from .errors import InputError, Location, Notice, PluginError, Problem, did_you_mean
+from .errors import InputError, Location, MissingExtra, Notice, PluginError, Problem, did_you_mean
 from .hookspecs import PROJECT, Domain
 
 if TYPE_CHECKING:
@@ -183,7 +183,8 @@ class named:
 
     def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, _trace: object) -> Literal[False]:
         self._aside.__exit__(None, None, None)
-        if isinstance(error, (PluginError, InputError)) or not isinstance(error, (Exception, SystemExit)):
+        # A library that is not installed is for the user to install, not for the author to mend.
+        if isinstance(error, (PluginError, InputError, MissingExtra)) or not isinstance(error, (Exception, SystemExit)):
             return False
         if self.user_errors and type(error) is ValueError and _is_refusal(error):
             raise InputError(

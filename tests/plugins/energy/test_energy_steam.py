@@ -6,11 +6,13 @@ import iapws
 import numpy as np
 import pytest
 from bare_systems import adjust, point, relative_closure
+from click.testing import CliRunner
 from energy_helpers import build, network
 from reconcile_energy import enthalpy
 from test_energy_balances import check_jacobian
 
 from reconcile import MissingExtra
+from reconcile.cli import main
 
 # ------------------------------------------------------------------ the formulation
 
@@ -162,3 +164,15 @@ def test_without_the_library_the_extra_is_named(monkeypatch):
     with pytest.raises(MissingExtra, match=r"iapws.*\[steam\]"):
         build(net)
     enthalpy.tables.cache_clear()
+
+
+def test_a_missing_library_reaches_the_command_line_as_such(datasets, monkeypatch):
+    enthalpy.tables.cache_clear()
+    for module in [m for m in sys.modules if m == "iapws" or m.startswith("iapws.")]:
+        monkeypatch.delitem(sys.modules, module)
+    monkeypatch.setitem(sys.modules, "iapws", None)
+    ran = CliRunner().invoke(main, ["check", str(datasets / "heat_recovery")])
+    enthalpy.tables.cache_clear()
+    assert ran.exit_code == 2
+    assert "reconcile-flows[steam]" in ran.stderr
+    assert "author" not in ran.stderr
