@@ -52,7 +52,17 @@ def level_sentences(history: History) -> list[str]:
             f"The values themselves are uncertain (their error is {100 * f.noise:.0f} % of their mean square): so far "
             "are the shares off."
         )
-    return out + _untried(f)
+    return out + _untried(f) + _of_changing_size(history)
+
+
+def _of_changing_size(history: History) -> list[str]:
+    """Faults of domains that have no reason to keep a size or a share are not weighed here, and that is said."""
+    others = [c.name for c in history.result.model.candidates if c.column >= 0 and c.kind != "leak"]
+    if not others:
+        return []
+    named = others[0] if len(others) == 1 else f"{others[0]} and {len(others) - 1} more"
+    about = f"Possible faults whose size may differ from snapshot to snapshot ({named}) are not weighed here"
+    return [f"{about}: see the explanations of the single snapshots."]
 
 
 def _untried(f: FlowLevels) -> list[str]:
