@@ -11,6 +11,7 @@ from pydantic import BaseModel
 
 from reconcile import Domain, Expression, Network, System, units
 
+from .density import density_of
 from .options import FluidNode, FluidOptions, FluidStream
 from .pressure import write_pressures
 
@@ -122,20 +123,6 @@ def _weights(network: Network, options: FluidOptions) -> Array:
             f"{max(known):g} kg/m3); write conserve: mass and give every stream its density, or measure mass"
         )
     return np.ones(len(network.streams))
-
-
-def density_of(stream: str, text: str) -> float:
-    """Density in kg/m3 from text such as ``1.02 kg/L``."""
-    try:
-        value, unit = units.parse_quantity(text)
-        factor, _ = units.factor_offset(unit, "kg/m3")
-    except ValueError as error:
-        raise ValueError(
-            f"density {text!r} of stream {stream!r} is not understood ({error}); write e.g. 1.02 kg/L"
-        ) from None
-    if not value > 0:
-        raise ValueError(f"density {text!r} of stream {stream!r} must be above zero")
-    return value * factor
 
 
 def _at_nodes(network: Network, weight: Array) -> Array:

@@ -9,6 +9,7 @@ import numpy.typing as npt
 
 from reconcile import OUTSIDE, Expression, Network, System, units
 
+from .density import density_of
 from .options import FluidOptions
 
 Array = npt.NDArray[np.float64]
@@ -102,8 +103,6 @@ def _head(stream: str, rise: str | None, density: str | None, options: FluidOpti
         return 0.0
     if density is None:
         raise ValueError(f"stream {stream!r} rises by {rise}, so its density is needed for the static head")
-    from .domain import density_of
-
     try:
         value, stated = units.parse_quantity(rise)
         metres = value * units.difference_factor(stated, "m")
