@@ -3,8 +3,12 @@
 from __future__ import annotations
 
 import math
+from typing import TYPE_CHECKING
 
-__all__ = ["decimals", "plain", "signed", "with_sigma"]
+if TYPE_CHECKING:
+    from ..snapshot_lines import ReadingLine
+
+__all__ = ["decimals", "plain", "reading_numbers", "signed", "with_sigma"]
 
 
 def decimals(sigma: float) -> int:
@@ -43,3 +47,16 @@ def with_sigma(value: float, sigma: float, unit: str = "") -> str:
     """Show ``value +/- sigma unit``, the sign written as ±."""
     text = f"{plain(value, sigma)} ± {plain(sigma, sigma)}" if math.isfinite(sigma) else plain(value)
     return f"{text} {unit}".rstrip()
+
+
+def reading_numbers(r: ReadingLine) -> tuple[str, str, str, str, str, str]:
+    """Numbers of a reading as every table shows them: read, adjusted, sigma before and after, moved, moved in sigmas."""
+    sigma = min((x for x in (r.sigma_before, r.sigma) if math.isfinite(x) and x > 0), default=math.nan)
+    return (
+        plain(r.reading, sigma),
+        plain(r.adjusted, sigma),
+        plain(r.sigma_before, r.sigma_before),
+        plain(r.sigma, r.sigma),
+        signed(r.adjustment, sigma),
+        signed(r.in_sigmas, 0.1),
+    )

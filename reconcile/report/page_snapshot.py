@@ -10,7 +10,7 @@ from ..mixups import mixups_of
 from . import figures
 from .campaign import not_simply_read
 from .markup import Markup, element, join
-from .numbers import plain, signed
+from .numbers import plain, reading_numbers, signed
 from .symbols import symbol_of
 from .tables import html_table
 from .text import figures_granted
@@ -151,19 +151,13 @@ def _readings_part(result: Result, index: int, prefix: str) -> Markup:
     marked: list[int] = []
     not_read = not_simply_read(result, index)
     for r in s.readings:
-        sigma = min((x for x in (r.sigma_before, r.sigma) if math.isfinite(x) and x > 0), default=math.nan)
         if r.word in NAMED:
             marked.append(len(rows))
         rows.append(
             (
                 r.tag.removeprefix("known:") + (f" {symbol_of(r.word)}" if r.word in NAMED else ""),
                 r.unit,
-                plain(r.reading, sigma),
-                plain(r.adjusted, sigma),
-                plain(r.sigma_before, r.sigma_before),
-                plain(r.sigma, r.sigma),
-                signed(r.adjustment, sigma),
-                signed(r.in_sigmas, 0.1),
+                *reading_numbers(r),
                 f"{100 * r.share:.0f} %",
                 signed(r.z, 0.1),
                 f"{symbol_of(r.word)} {r.word}" + (f", {not_read[r.tag]}" if r.tag in not_read else ""),

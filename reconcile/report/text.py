@@ -11,7 +11,7 @@ from ..refit import figures_if
 from .campaign import from_the_log, last_lines, not_simply_read, verdict_line_of, why_not
 from .history import history_section
 from .layout import table, to_ascii, wrap
-from .numbers import plain, signed
+from .numbers import plain, reading_numbers, signed
 from .words import (
     MARKS,
     alternative_name,
@@ -202,17 +202,11 @@ def _word(word: str, mark: str) -> str:
 def _readings(s: Snapshot, marks: Mapping[str, str]) -> str:
     rows = []
     for r in s.readings:
-        sigma = min(x for x in (r.sigma_before, r.sigma, math.inf) if math.isfinite(x) or x == math.inf)
         rows.append(
             (
                 r.tag.removeprefix("known:"),
                 r.unit,
-                plain(r.reading, sigma),
-                plain(r.adjusted, sigma),
-                plain(r.sigma_before, r.sigma_before),
-                plain(r.sigma, r.sigma),
-                signed(r.adjustment, sigma),
-                signed(r.in_sigmas, 0.1),
+                *reading_numbers(r),
                 f"{r.share:.2f}",
                 signed(r.z, 0.1),
                 _word(r.word, marks.get(r.tag, "")),
