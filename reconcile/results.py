@@ -14,6 +14,7 @@ from .adjust.table import Group, Table
 from .diagnose.critical import chi2_limit, chi2_p
 from .errors import Notice
 from .model import Model
+from .named import Named
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -55,7 +56,7 @@ def word_of_evidence(checks: int, p: float) -> str:
 
 
 @dataclass(frozen=True)
-class Result:
+class Result(Named):
     """What a run found, for one snapshot or many.
 
     Attributes
@@ -124,21 +125,6 @@ class Result:
     def size(self) -> int:
         """Number of snapshots."""
         return self.table.size
-
-    @cached_property
-    def tags(self) -> tuple[str, ...]:
-        """Tags of the meters, in the order of the case."""
-        return tuple(self.model.readings[i].tag for i in self.model.meters)
-
-    @cached_property
-    def variables(self) -> tuple[str, ...]:
-        """Names of the variables, possible faults left out."""
-        return tuple(self.model.names[c] for c in self.model.shown)
-
-    @cached_property
-    def units(self) -> tuple[str, ...]:
-        """Unit of each variable."""
-        return tuple(self.model.units[c] for c in self.model.shown)
 
     def _spread(self, of_group: Any, width: int | None = None) -> Array:
         out = np.full((self.size, width) if width is not None else self.size, np.nan)

@@ -23,6 +23,7 @@ from .diagnose.sidak import sidak_limit
 from .diagnose.tests_of_readings import global_test
 from .errors import Notice
 from .model import Candidate, Model
+from .named import Named
 from .results import word_of_evidence
 
 if TYPE_CHECKING:
@@ -38,7 +39,7 @@ Bools = npt.NDArray[np.bool_]
 
 
 @dataclass(frozen=True)
-class Trajectory:
+class Trajectory(Named):
     """What a run over a sequence of windows found.
 
     Attributes
@@ -92,21 +93,6 @@ class Trajectory:
         """What the case says of the sequence."""
         assert self.spec.trajectory is not None
         return self.spec.trajectory
-
-    @cached_property
-    def tags(self) -> tuple[str, ...]:
-        """Tags of the meters, in the order of the case."""
-        return tuple(self.model.readings[i].tag for i in self.model.meters)
-
-    @cached_property
-    def variables(self) -> tuple[str, ...]:
-        """Names of the variables of a window, inventories among them."""
-        return tuple(self.model.names[c] for c in self.model.shown)
-
-    @cached_property
-    def units(self) -> tuple[str, ...]:
-        """Unit of each variable."""
-        return tuple(self.model.units[c] for c in self.model.shown)
 
     @cached_property
     def adjusted(self) -> Array:
